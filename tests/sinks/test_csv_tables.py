@@ -7,11 +7,11 @@ from __future__ import annotations
 import csv
 import math
 
-from hypothesis import given
-from hypothesis import strategies as st
 import numpy as np
 import pandas
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from teleop_eval.core.errors import OutputError
 from teleop_eval.core.metric import Metric, missing

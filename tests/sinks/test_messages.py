@@ -7,10 +7,10 @@ from __future__ import annotations
 import math
 import re
 
+import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-import pytest
-from rosbags.typesys import get_typestore, Stores
+from rosbags.typesys import Stores, get_typestore
 
 from teleop_eval.core.results import StatusLine
 from teleop_eval.sinks import messages
@@ -19,7 +19,7 @@ STORE = get_typestore(Stores.ROS2_JAZZY)
 LINES = [
     StatusLine('right: latency', 1, 'Latency 0.21 s is above 0.15 s.', {'median (s)': '0.21'}),
     StatusLine('right: inputs', 0, '', {}),
-    StatusLine('links: Größe', 3, 'keine Daten seit 2 s — 静か', {'a': '', 'bb (m/s)': 'x', '': 'y'}),
+    StatusLine('links: Größe', 3, 'keine Daten — 静か', {'a': '', 'bb (m/s)': 'x', '': 'y'}),
 ]
 
 

@@ -8,10 +8,10 @@ import json
 import math
 import random
 
-from hypothesis import given
-from hypothesis import strategies as st
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from teleop_eval import __version__
 from teleop_eval.core.errors import OutputError

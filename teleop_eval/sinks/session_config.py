@@ -1,0 +1,51 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The configuration that a session's folder keeps, complete in itself."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from typing import Any
+
+from teleop_eval.sources.parameter_file import to_yaml
+
+_FILE_KEY = '.robot.description_file'
+
+
+def session_config(flat: Mapping[str, Any], descriptions: Mapping[str, str],
+                   resolve: Callable[[str], str] | None, name: str) -> dict[str, str]:
+    """
+    Return the files that configure a session, text by file name.
+
+    Parameters
+    ----------
+    flat
+        Parameters by dotted name.
+    descriptions
+        Robot description by arm; each becomes a file of its own beside the configuration,
+        to which `arms.ARM.robot.description_file` then points.
+    resolve
+        Turns a configured topic into its full name, so that the folder does not depend on
+        the namespace and the remappings of its run.
+    name
+        Name of the parameter file itself.
+
+    """
+    kept = dict(flat)
+    files: dict[str, str] = {}
+    for arm, text in descriptions.items():
+        if kept.get(f'arms.{arm}{_FILE_KEY}'):
+            kept[f'arms.{arm}{_FILE_KEY}'] = f'description_{arm}.urdf'
+            files[f'description_{arm}.urdf'] = text
+    if resolve is not None:
+        for key, value in flat.items():
+            if _names_topic(key) and isinstance(value, str) and value:
+                kept[key] = resolve(value)
+    return {**files, name: to_yaml(kept)}
+
+
+def _names_topic(key: str) -> bool:
+    """Tell the parameters that hold a topic from those of a joint that is called so."""
+    parts = key.split('.')
+    return len(parts) == 4 and parts[0] == 'arms' and (
+        parts[3] == 'topic' or parts[3].endswith('_topic'))
