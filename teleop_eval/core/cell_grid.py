@@ -207,10 +207,12 @@ class VisitedCells:
 
 def _expected(visited_in: np.ndarray, blocks: int, drawn: int) -> float:
     """Return the expected number of classes in `drawn` of `blocks` blocks, without return."""
+    # Few different values occur: this is called for every point of a live curve.
+    visited_in, cells = np.unique(visited_in, return_counts=True)
     left = blocks - visited_in - drawn
     missed = np.zeros(visited_in.size)
     some = left >= 0
     missed[some] = np.exp(
         gammaln(blocks - visited_in[some] + 1) - gammaln(left[some] + 1)
         - gammaln(blocks + 1) + gammaln(blocks - drawn + 1))
-    return float(np.sum(1.0 - missed))
+    return float(np.dot(cells, 1.0 - missed))
