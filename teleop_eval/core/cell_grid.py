@@ -50,8 +50,11 @@ class CellGrid:
         self._half = math.ceil(BOUND / edge) + 2
         self._side = 2 * self._half
         self.size = self._side ** 3
+        # No centre falls on the sphere for the default edge: a sum of three odd squares is
+        # never 400, so rounding cannot decide.
         every = np.arange(self.size, dtype=np.int64)
-        self.ball = every[self.inside(every)]
+        self._inside = np.linalg.norm(self.centres(every), axis=-1) <= 1.0 + 1e-12
+        self.ball = every[self._inside]
 
     def cells_of(self, u: np.ndarray) -> np.ndarray:
         """
@@ -74,9 +77,7 @@ class CellGrid:
 
     def inside(self, codes: np.ndarray) -> np.ndarray:
         """Return whether the centres of the cubes lie in the unit ball, (k,) of bool."""
-        # No centre falls on the sphere for the default edge: a sum of three odd squares is
-        # never 400, so rounding cannot decide.
-        return np.asarray(np.linalg.norm(self.centres(codes), axis=-1) <= 1.0 + 1e-12)
+        return np.asarray(self._inside[codes])
 
     def closed(self, codes: np.ndarray, neighbours: int = 4) -> np.ndarray:
         """Return the codes, plus cubes with that many of 6 face neighbours among them."""
@@ -181,38 +182,49 @@ class VisitedCells:
         return np.where(first < 0, np.nan, first * self.period_s)
 
     def rarefied(self, duration_fraction: float) -> float:
+        """Return `rarefaction` at one fraction."""
+        return float(self.rarefaction(np.array([duration_fraction]))[0])
+
+    def rarefaction(self, duration_fractions: np.ndarray) -> np.ndarray:
         """
-        Return the expected number of cubes inside reach in a random part of the blocks.
+        Return the expected numbers (k,) of cubes inside reach in random parts of the blocks.
 
         With B blocks, of which cube i was visited in m_i, b = fraction * B drawn at random meet
         sum_i 1 - C(B - m_i, b) / C(B, b) cubes; linear between whole b. At fraction 1 this is
-        the number visited.
+        the number visited. It stands for a shorter run of the same kind: measured on reaches to
+        random targets, it meets the cubes of contiguous stretches within 1 %; where the work
+        drifts through space during the run, random blocks see more than a stretch would (a
+        quarter more at fraction 0.4 of one slow turn through all regions in 300 s).
 
         Raises
         ------
         ValueError
-            If the fraction is not in [0, 1].
+            If a fraction is not in [0, 1].
 
         """
-        if not 0.0 <= duration_fraction <= 1.0:
-            raise ValueError(f'a fraction between 0 and 1 is needed, got {duration_fraction!r}')
-        visited_in = self._blocks_in[self.cells_inside()].astype(float)
-        wanted = duration_fraction * self.blocks
-        low = math.floor(wanted)
-        below = _expected(visited_in, self.blocks, low)
-        if wanted == low:
-            return below
-        return below + (wanted - low) * (_expected(visited_in, self.blocks, low + 1) - below)
+        fractions = np.asarray(duration_fractions, dtype=float)
+        if not np.all((fractions >= 0.0) & (fractions <= 1.0)):
+            raise ValueError(f'fractions between 0 and 1 are needed, got {fractions.tolist()!r}')
+        # Few different values of m_i occur.
+        visited_in, cubes = np.unique(
+            self._blocks_in[self.cells_inside()], return_counts=True)
+        wanted = fractions * self.blocks
+        low = np.floor(wanted).astype(int)
+        drawn = np.arange(self.blocks + 2)
+        needed = np.isin(drawn, low) | np.isin(drawn, low + 1)
+        expected = np.zeros(drawn.size)
+        for b in drawn[needed]:
+            expected[b] = _expected(visited_in, cubes, self.blocks, drawn=min(b, self.blocks))
+        part = wanted - low
+        return np.asarray((1.0 - part) * expected[low] + part * expected[low + 1])
 
 
-def _expected(visited_in: np.ndarray, blocks: int, drawn: int) -> float:
-    """Return the expected number of classes in `drawn` of `blocks` blocks, without return."""
-    # Few different values occur: this is called for every point of a live curve.
-    visited_in, cells = np.unique(visited_in, return_counts=True)
+def _expected(visited_in: np.ndarray, cubes: np.ndarray, blocks: int, *, drawn: int) -> float:
+    """Return the expected number met in `drawn` of `blocks`, with `cubes` (k,) of each kind."""
     left = blocks - visited_in - drawn
     missed = np.zeros(visited_in.size)
     some = left >= 0
     missed[some] = np.exp(
         gammaln(blocks - visited_in[some] + 1) - gammaln(left[some] + 1)
         - gammaln(blocks + 1) + gammaln(blocks - drawn + 1))
-    return float(np.dot(cells, 1.0 - missed))
+    return float(np.dot(cubes, 1.0 - missed))

@@ -180,8 +180,8 @@ def _coverage(
         return missing(INSUFFICIENT, '1', _NO_SAMPLES, **details)
     fractions = np.arange(1, _CURVE_POINTS + 1) / _CURVE_POINTS
     details['rarefied'] = {
-        'duration_s': [float(f * visited.duration_s) for f in fractions],
-        'coverage': [visited.rarefied(float(f)) / cells.size for f in fractions],
+        'duration_s': (fractions * visited.duration_s).tolist(),
+        'coverage': (visited.rarefaction(fractions) / cells.size).tolist(),
     }
     note = ''
     if seen.size > inside.size or visited.samples_beyond:

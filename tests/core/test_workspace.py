@@ -211,7 +211,7 @@ def test_rarefaction_predicts_a_shorter_run():
 def test_misuse_of_visits_is_refused():
     with pytest.raises(ValueError, match='got 0.0'):
         VisitedCells(GRID, period_s=0.0)
-    with pytest.raises(ValueError, match='between 0 and 1 is needed, got 1.2'):
+    with pytest.raises(ValueError, match=r'between 0 and 1 are needed, got \[1.2\]'):
         visits([[0, 0, 0]]).rarefied(1.2)
 
 
