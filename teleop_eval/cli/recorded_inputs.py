@@ -1,0 +1,195 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""Match the configured topics with those of a recording, and decode their messages."""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from typing import Protocol
+
+from teleop_eval.core.errors import InputError, RecordingError, TeleopEvalError
+from teleop_eval.core.samples import Sample, TextSample
+from teleop_eval.sinks import messages
+from teleop_eval.sources.recording import Recording, TopicInfo
+
+Decoder = Callable[[bytes], Sample]
+
+# What the decoders call the kinds of message that serve each role of a topic.
+KIND_OF_ROLE = {
+    'hand': 'pose', 'operator_joints': 'joints', 'robot_joints': 'joints', 'command': 'command',
+    'engaged': 'bool', 'active_mapping': 'text', 'description': 'text'}
+# Kinds that messages of any other type may serve as, by the fields of their definition.
+_ANY_NAME = ('joints', 'command')
+_OR_FIELDS = ', or a type with name[] and position[] whose definition is recorded'
+
+
+class RouteLike(Protocol):
+    """What is read of an evaluator's route."""
+
+    @property
+    def arm(self) -> str:
+        """Name of the arm."""
+
+    @property
+    def role(self) -> str:
+        """What the topic is to the arm."""
+
+    @property
+    def enabled_field(self) -> str | None:
+        """Boolean array of the message that switches joints on."""
+
+
+class RecordedInputs:
+    """
+    The recording's topics that an evaluation reads, each with its decoder.
+
+    Parameters
+    ----------
+    recording
+        The open recording.
+    routes
+        By full topic name, what the topic is used for.
+    event_topic
+        Topic of session events, read where the recording has it.
+    supported
+        Message types by kind; see KIND_OF_ROLE.
+    make_decoder
+        `sources.decode.make_decoder`.
+
+    Attributes
+    ----------
+    problems
+        A sentence for each configured topic that the recording lacks.
+
+    Raises
+    ------
+    InputError
+        For a topic whose type cannot serve.
+    RecordingError
+        When the recording has none of the topics.
+
+    """
+
+    def __init__(self, recording: Recording, routes: Mapping[str, Sequence[RouteLike]], *,
+                 event_topic: str, supported: Mapping[str, Iterable[str]],
+                 make_decoder: Callable[..., Decoder]) -> None:
+        self.problems: list[str] = []
+        self._decoders: dict[str, Decoder] = {}
+        self._counts: dict[str, int] = {}
+        self._failures: dict[str, tuple[int, str]] = {}
+        for topic, uses in routes.items():
+            info = recording.topics.get(topic)
+            if info is None:
+                self.problems.append(_absence(topic, uses, recording))
+                continue
+            _check(info, uses, recording, supported)
+            try:
+                self._decoders[topic] = make_decoder(
+                    info.type_name, definition=info.definition,
+                    definition_format=info.definition_format or 'ros2msg',
+                    enabled_field=_enabled_field(topic, uses))
+            except InputError as error:
+                raise InputError(f'Topic {topic} of {recording.path}: {error}') from error
+        if not self._decoders:
+            raise RecordingError(_nothing(recording, routes))
+        events = recording.topics.get(event_topic)
+        if events is not None and events.type_name == messages.STRING:
+            self._decoders[event_topic] = make_decoder(messages.STRING)
+        # The order of the feed makes such events itself, also where none was recorded.
+        self._decoders.setdefault(event_topic, _event_text)
+
+    @property
+    def topics(self) -> tuple[str, ...]:
+        """Topics to read."""
+        return tuple(self._decoders)
+
+    def decode(self, topic: str, data: bytes) -> Sample | None:
+        """Return the sample of a message, None where the message is malformed (counted)."""
+        self._counts[topic] = self._counts.get(topic, 0) + 1
+        try:
+            return self._decoders[topic](data)
+        except TeleopEvalError as error:
+            count, first = self._failures.get(topic, (0, str(error)))
+            self._failures[topic] = (count + 1, first)
+            return None
+
+    def malformed(self) -> list[str]:
+        """Return a sentence for each topic with messages that could not be decoded."""
+        return [f'{count} of {self._counts[topic]} messages on {topic} cannot be decoded and are '
+                f'left out; the first because: {first.rstrip(".")}.'
+                for topic, (count, first) in self._failures.items()]
+
+
+def _event_text(data: bytes) -> Sample:
+    """Decode the events that the feed's order puts in: short std_msgs/msg/String."""
+    return TextSample(data[8:].rstrip(b'\x00').decode('utf-8', 'replace'))
+
+
+def _enabled_field(topic: str, uses: Sequence[RouteLike]) -> str | None:
+    fields = sorted({route.enabled_field for route in uses if route.enabled_field})
+    if len(fields) > 1:
+        raise InputError(
+            f'Topic {topic} is configured with the enabled_field values {" and ".join(fields)}; '
+            'give one.')
+    return fields[0] if fields else None
+
+
+def _check(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
+           supported: Mapping[str, Iterable[str]]) -> None:
+    """
+    Refuse a topic that cannot serve.
+
+    Raises
+    ------
+    InputError
+        Several types on the topic, an encoding other than CDR, a type its use cannot read.
+
+    """
+    for note in recording.notes:
+        if note.startswith(f'Topic {info.name} of ') and ' occurs as ' in note:
+            raise InputError(f'{note.split(";")[0]}; one topic must have one type.')
+    if info.encoding != 'cdr':
+        raise InputError(
+            f'Topic {info.name} of {recording.path} has the encoding {info.encoding!r}; only '
+            'cdr, which ROS 2 writes, can be read.')
+    for route in uses:
+        kind = KIND_OF_ROLE[route.role]
+        expected = sorted(supported[kind])
+        by_fields = kind in _ANY_NAME and info.type_name not in _all_types(supported)
+        if info.type_name not in expected and not (by_fields and info.definition):
+            raise InputError(
+                f'Topic {info.name} is configured as {_use(route)}, but has the type '
+                f'{info.type_name or "of no name"}, which cannot serve as that; expected is '
+                f'{", ".join(expected)}{_OR_FIELDS if kind in _ANY_NAME else ""}.')
+
+
+def _all_types(supported: Mapping[str, Iterable[str]]) -> set[str]:
+    """Return the types whose meaning is known; any other may serve by its fields."""
+    return {type_name for types in supported.values() for type_name in types}
+
+
+def _absence(topic: str, uses: Sequence[RouteLike], recording: Recording) -> str:
+    near = nearest(topic, recording.topics)
+    hint = f'the nearest there are {", ".join(near)}' if near else 'none there is like it'
+    return (f'Topic {topic} ({" and ".join(_use(route) for route in uses)}) is not in the '
+            f'recording {recording.path.name}; {hint}.')
+
+
+def _nothing(recording: Recording, routes: Mapping[str, Sequence[RouteLike]]) -> str:
+    held = ', '.join(sorted(recording.topics)[:12]) or 'no topic at all'
+    return (f'The recording {recording.path} has none of the configured topics '
+            f'({", ".join(sorted(routes))}); it has {held}. Check the names and --namespace.')
+
+
+def _use(route: RouteLike) -> str:
+    return f'{route.role.replace("_", " ")} of arm {route.arm}'
+
+
+def nearest(topic: str, names: Iterable[str]) -> list[str]:
+    """Return up to three names like a topic: those that end the same, then similar ones."""
+    names = sorted(names)
+    last = topic.rpartition('/')[2]
+    found = [name for name in names if name.rpartition('/')[2] == last]
+    found += difflib.get_close_matches(topic, names, n=3, cutoff=0.5)
+    return list(dict.fromkeys(found))[:3]
