@@ -1,0 +1,210 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""
+The one evaluator behind the live node and the recordings.
+
+Its state is a function of the sequence of (receive_ns, topic, sample) alone: no clock, no
+timer, no thread. Live and post-run numbers are the same because they come from here.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.reachable_cells import ReachableCells, ReachableSet
+from teleop_eval.core.results import StatusLine, WindowResult
+from teleop_eval.core.samples import Sample, TextSample
+from teleop_eval.core.settings import Settings, ThresholdSettings
+from teleop_eval.core.status import ArmStatus
+from teleop_eval.core.summary import arm_summary
+
+EVENT_TOPIC = '/teleop_eval/session_event'
+"""Topic of the evaluator's own events: 'reset', 'segment'."""
+
+REACHABLE_SEED = 20260101
+
+
+@dataclass(frozen=True)
+class Route:
+    """What a topic means: the arm, the role there, the field that enables joints or ''."""
+
+    arm: str
+    role: str
+    enabled_field: str = ''
+
+
+def absolute(topic: str) -> str:
+    """Return a topic name from the root: recordings know no namespace."""
+    return topic if topic.startswith('/') else f'/{topic}'
+
+
+class SessionEvaluator:
+    """
+    Streaming evaluation of one session with one or several arms.
+
+    Parameters
+    ----------
+    settings
+        What to evaluate.
+    descriptions
+        URDF text by arm, for arms whose description is a file.
+    resolve
+        Turns a configured topic name into the full name used in `add`.
+    simulated_time
+        Whether receive times come from a simulated clock.
+
+    """
+
+    def __init__(self, settings: Settings, *, descriptions: Mapping[str, str] | None = None,
+                 resolve: Callable[[str], str] = absolute, simulated_time: bool = False) -> None:
+        self.settings = settings
+        self._descriptions = dict(descriptions or {})
+        self._resolve = resolve
+        self._simulated_time = simulated_time
+        self._receive_ns = 0
+        self._notes: dict[str, int] = {}
+        self._thresholds = settings.thresholds
+        self._reachable: dict[str, ReachableCells] = {}
+        self._make_arms()
+
+    def _make_arms(self) -> None:
+        self.arms = {
+            name: ArmEvaluator(name, self.settings, urdf=self._descriptions.get(name))
+            for name in self.settings.arms}
+        self._status = {name: ArmStatus(arm) for name, arm in self.arms.items()}
+        routes: dict[str, list[Route]] = {}
+        for name, arm in self.settings.arms.items():
+            for role, topic in (
+                    ('hand', arm.operator.hand_topic),
+                    ('operator_joints', arm.operator.joints_topic),
+                    ('robot_joints', arm.robot.joints_topic),
+                    ('command', arm.command.topic),
+                    ('engaged', arm.engaged.topic),
+                    ('active_mapping', arm.active_mapping.topic),
+                    ('description', arm.robot.description_topic)):
+                if topic:
+                    enabled = arm.command.enabled_field or '' if role == 'command' else ''
+                    routes.setdefault(self._resolve(topic), []).append(
+                        Route(name, role, enabled))
+        self.routes = {topic: tuple(found) for topic, found in routes.items()}
+        self._targets = {
+            topic: tuple((self.arms[route.arm], self._status[route.arm], route.role)
+                         for route in found) for topic, found in self.routes.items()}
+
+    def add(self, receive_ns: int, topic: str, sample: Sample) -> None:
+        """
+        Take one sample.
+
+        Parameters
+        ----------
+        receive_ns
+            Receive or log time, strictly increasing from call to call.
+        topic
+            Full name.
+        sample
+            What the source made of the message.
+
+        """
+        self._receive_ns = receive_ns
+        for arm in self.arms.values():
+            if receive_ns > arm.next_check_ns:
+                arm.advance(receive_ns)
+        if topic == EVENT_TOPIC:
+            self._event(sample)
+            return
+        for arm, status, role in self._targets.get(topic, ()):
+            status.saw(role, receive_ns)
+            arm.add(role, receive_ns, sample)
+
+    def _event(self, sample: Sample) -> None:
+        text = sample.text if isinstance(sample, TextSample) else ''
+        if text == 'segment':
+            for arm in self.arms.values():
+                arm.new_segment('the receive clock stepped back')
+        elif text == 'reset':
+            self._reset()
+
+    def _reset(self) -> None:
+        """Begin the evaluation anew; the descriptions already seen stay."""
+        for name, arm in self.arms.items():
+            if arm.described is not None:
+                self._descriptions[name] = arm.described
+        held = {name: arm.states for name, arm in self.arms.items()}
+        self._make_arms()
+        for name, arm in self.arms.items():
+            for role, state in arm.states.items():
+                latest = held[name][role].latest
+                if latest is not None:
+                    state.add(self._receive_ns, latest, None)
+        note = 'the evaluation was reset'
+        self._notes[note] = self._notes.get(note, 0) + 1
+
+    def poll(self) -> list[WindowResult]:
+        """Return the windows closed since the last call, in order of closing."""
+        found = [result for arm in self.arms.values() for result in arm.results]
+        for arm in self.arms.values():
+            arm.results.clear()
+        return sorted(found, key=lambda result: (result.receive_ns, result.arm, result.end_ns))
+
+    def background(self, postures: int = 20_000) -> bool:
+        """Sample a slice of the reachable workspace; return whether there is more to do."""
+        for name, arm in self.arms.items():
+            sampling = self._sampling(name, arm)
+            if sampling is not None and not sampling.ended:
+                sampling.step(postures)
+                return True
+        return False
+
+    def _sampling(self, name: str, arm: ArmEvaluator) -> ReachableCells | None:
+        if arm.robot is None:
+            return None
+        if name not in self._reachable:
+            self._reachable[name] = ReachableCells(
+                arm.robot.chain, arm.robot.shoulder, arm.robot.reach.length_m,
+                seed=REACHABLE_SEED)
+        return self._reachable[name]
+
+    def use_thresholds(self, thresholds: ThresholdSettings) -> None:
+        """Judge by other thresholds from now on; no metric depends on them."""
+        self._thresholds = thresholds
+        self.settings = dataclasses.replace(self.settings, thresholds=thresholds)
+
+    def diagnostics(self, now_ns: int) -> list[StatusLine]:
+        """Return the status lines of all arms at a receive time."""
+        return [line for status in self._status.values()
+                for line in status.lines(now_ns, self._thresholds)]
+
+    @property
+    def problems(self) -> list[str]:
+        """Return the sentences about the inputs that a user must see."""
+        return [text for arm in self.arms.values() for text in arm.all_problems()]
+
+    @property
+    def notes(self) -> list[str]:
+        """Return further sentences, such as why receive time is used."""
+        found = dict(self._notes)
+        for arm in self.arms.values():
+            found.update(arm.notes)
+        return [text if times == 1 else f'{text} ({times} times)'
+                for text, times in found.items()]
+
+    def summary(self) -> dict[str, Any]:
+        """Return the evaluation as it stands, in plain types."""
+        arms: dict[str, Any] = {}
+        for name, arm in self.arms.items():
+            sampling = self._sampling(name, arm)
+            reachable: ReachableSet | None = None if sampling is None else sampling.result()
+            arms[name] = arm_summary(arm, reachable, simulated_time=self._simulated_time)
+        return {'arms': arms, 'notes': self.notes, 'problems': self.problems}
+
+    def finish(self) -> dict[str, Any]:
+        """Close the last windows, complete the reachable workspace, return the summary."""
+        for arm in self.arms.values():
+            arm.finish(self._receive_ns)
+        while self.background(100_000):
+            pass
+        return self.summary()

@@ -1,0 +1,63 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""Picking the wanted joints out of messages, by name and in any order."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from teleop_eval.core.samples import JointSample, TrajectorySample
+from teleop_eval.core.settings import UnitSettings
+
+
+class JointMatcher:
+    """
+    Columns of the wanted joints in a message's joints; extra joints are ignored.
+
+    Attributes
+    ----------
+    names
+        Wanted joints (n,), in the order of the values given back.
+
+    """
+
+    def __init__(self, names: tuple[str, ...], units: Mapping[str, UnitSettings]) -> None:
+        self.names = names
+        self.scale = np.array([units[name].scale if name in units else 1.0 for name in names])
+        self._scaled = bool(np.any(self.scale != 1.0))
+        self._known: tuple[str, ...] | None = None
+        self._columns = np.zeros(0, dtype=np.int64)
+        self.missing: tuple[str, ...] = ()
+        self.foreign = False
+
+    def find(self, names: tuple[str, ...]) -> np.ndarray | None:
+        """
+        Return the columns (n,) of the wanted joints, None if some are missing.
+
+        `missing` then names them; `foreign` tells that none of the wanted ones is there, as
+        in the messages of a gripper on the same topic.
+        """
+        if names is not self._known and names != self._known:
+            place = {name: column for column, name in enumerate(names)}
+            self._columns = np.array(
+                [place.get(name, -1) for name in self.names], dtype=np.int64)
+            self.missing = tuple(name for name in self.names if name not in place)
+            self.foreign = len(self.missing) == len(self.names)
+        self._known = names
+        return None if self.missing else self._columns
+
+    def values(self, sample: JointSample) -> tuple[np.ndarray, np.ndarray | None] | None:
+        """Return (positions (n,) in rad or m, enabled (n,) or None), None if joints miss."""
+        columns = self.find(sample.names)
+        if columns is None:
+            return None
+        values = sample.positions[columns]
+        enabled = None if sample.enabled is None else sample.enabled[columns]
+        return (values * self.scale if self._scaled else values), enabled
+
+    def points(self, sample: TrajectorySample) -> np.ndarray | None:
+        """Return a trajectory's positions (k, n) in rad or m, None if joints miss."""
+        columns = self.find(sample.names)
+        return None if columns is None else sample.positions[:, columns] * self.scale

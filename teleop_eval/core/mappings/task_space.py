@@ -1,0 +1,67 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""Task-space mapping: the tool follows the hand, scaled about a centre."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from teleop_eval.core import rotations
+from teleop_eval.core.errors import ConfigError
+from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
+from teleop_eval.core.mappings.base import Ideal, OperatorCells
+from teleop_eval.core.settings import MappingSettings
+
+
+class TaskSpaceMapping:
+    """
+    p_i = c_r + S R (p_o - c_o) and R_i = R R_o Q.
+
+    S is `scale`, times L_r / L_o if normalized; the centres are the shoulders unless given;
+    Q is the fixed rotation from hand to tool, given or estimated by the arm evaluator.
+    """
+
+    needs = 'hand'
+
+    def __init__(self, label: str, settings: MappingSettings, operator: OperatorGeometry,
+                 robot: RobotGeometry) -> None:
+        self._robot = robot
+        self._axes = operator.axes
+        center = settings.operator_center_m
+        if center is None and operator.shoulder_m is None:
+            raise ConfigError(
+                f'mapping {label!r} needs a centre; give operator.shoulder_m or '
+                f'mappings.{label}.operator_center_m.')
+        self._operator_center = operator.shoulder_m if center is None else np.array(center)
+        self._robot_center = (None if settings.robot_center_m is None
+                              else np.array(settings.robot_center_m))
+        self._scale = settings.scale
+        if settings.scaling == 'normalized':
+            if operator.length_m is None:
+                raise ConfigError(
+                    f'mapping {label!r} scales by the arm lengths, but the operator has none; '
+                    'give operator.arm_length_m or stature_m, or scaling: metric.')
+            self._scale *= robot.reach.length_m / operator.length_m
+        given = settings.hand_to_tool_xyzw
+        self.hand_to_tool = None if given is None else rotations.normalize(np.array(given))
+        self.estimates_tool_rotation = given is None
+
+    def take_tool_rotation(self, hand_to_tool: np.ndarray) -> None:
+        """Use an estimated rotation (4,) x, y, z, w unless one is configured."""
+        if self.hand_to_tool is None:
+            self.hand_to_tool = hand_to_tool
+
+    def turned(self, hand_xyzw: np.ndarray) -> np.ndarray:
+        """Return R R_o (m, 4), the hand's orientation in robot axes."""
+        return rotations.multiply(self._axes, hand_xyzw)
+
+    def ideal(self, cells: OperatorCells) -> Ideal:
+        """Return tool positions (m, 3), and orientations once hand-to-tool is known."""
+        assert cells.hand_m is not None  # the arm evaluator asks only if it is there
+        center = (self._robot.shoulder.positions(cells.robot_joints)
+                  if self._robot_center is None else self._robot_center)
+        offset = rotations.rotate(self._axes, cells.hand_m - self._operator_center)
+        orientations = None
+        if cells.hand_xyzw is not None and self.hand_to_tool is not None:
+            orientations = rotations.multiply(self.turned(cells.hand_xyzw), self.hand_to_tool)
+        return Ideal(center + self._scale * offset, orientations, None)

@@ -1,0 +1,199 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""One arm's run as plain types: the part of summary.json that the core knows."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.measure import ArmMeasurement
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
+from teleop_eval.core.reachable_cells import ReachableSet
+from teleop_eval.core.tracking import ARM_LENGTHS
+
+CONDITION = 'teleoperated'
+
+
+def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
+                simulated_time: bool) -> dict[str, Any]:
+    """Return the summary of one arm as it stands."""
+    mappings: dict[str, Any] = {}
+    measured = arm.measurement
+    if measured is not None:
+        for index in sorted(measured.accumulators, key=lambda i: arm.boundaries.labels[i]):
+            metrics = mapping_metrics(arm, measured, index, reachable)
+            mappings[arm.boundaries.labels[index]] = {
+                'condition': CONDITION,
+                'metrics': {name: metrics[name].to_dict() for name in metrics},
+            }
+    base = arm.time_base
+    return {
+        'time_base': {
+            'base': None if base is None else base.base,
+            'reason': '' if base is None else base.reason,
+            'offsets_s': {} if base is None else {
+                role: None if offset is None else offset / 1e9
+                for role, offset in base.offsets_ns.items()},
+        },
+        'grid': {'rate_hz': None if arm.period_ns is None else 1e9 / arm.period_ns},
+        'segments': arm.segments,
+        'geometry': _geometry(arm),
+        'inputs': _inputs(arm, simulated_time=simulated_time),
+        'mappings': mappings,
+    }
+
+
+def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
+                    reachable: ReachableSet | None) -> dict[str, Metric]:
+    """Return every metric of one arm under one mapping, by name."""
+    accumulator = measured.accumulators[index]
+    label = arm.boundaries.labels[index]
+    model = arm.models.get(label)
+    no_ideal = _why_no_ideal(arm, label)
+    caveat = _clock_caveat(arm)
+    found: dict[str, Metric] = {}
+    pairs = measured.pairs(index)
+    for name, delay in accumulator.delays.items():
+        if pairs[name] is None:
+            found[name] = missing(NOT_CONFIGURED, 's', _why_no_pair(arm, name, no_ideal))
+        else:
+            found[name] = delay.metric(caveat=caveat, reason='no latency window has closed')
+    why_delay = 'no delay was observed to compensate'
+    reach = 1.0 if arm.robot is None else arm.robot.reach.length_m
+    for prefix, one, reason, hint in (
+            ('tracking_error', accumulator.raw, 'no engaged and settled sample', ''),
+            ('tracking_error_compensated', accumulator.compensated, why_delay, caveat)):
+        found |= one.metrics(prefix, '_norm', ARM_LENGTHS, reason=reason, caveat=hint)
+        found |= one.metrics(prefix, '_m', 'm', factor=reach, reason=reason, caveat=hint)
+    absorbed = model is not None and model.estimates_tool_rotation
+    no_turn = ('orientation of hand and tool is not both known' if not absorbed or
+               measured.tool_rotation is not None else
+               'the hand-to-tool rotation needs 10 s of engaged motion with an observed delay')
+    found |= accumulator.turn_raw.metrics(
+        'orientation_error', absorbed=absorbed, reason=no_turn)
+    found |= accumulator.turn_compensated.metrics(
+        'orientation_error_compensated', absorbed=absorbed, reason=no_turn, caveat=caveat)
+    if no_ideal:
+        found = {name: missing(NOT_CONFIGURED, metric.unit, no_ideal)
+                 if name.startswith(('tracking_error', 'orientation_error')) else metric
+                 for name, metric in found.items()}
+    elif model is not None and 'normalized' in arm.arm.mappings[label].scaling:
+        uncertainty = arm.operator.scale_uncertainty
+        if uncertainty is not None and model.needs == 'hand':
+            for name, metric in found.items():
+                if name.startswith('tracking_error') and metric.value is not None:
+                    metric.details['scale_uncertainty'] = uncertainty
+    found |= _joint_metrics(arm, accumulator, caveat)
+    found |= accumulator.workspace_metrics(
+        arm.operator, reachable, has_operator=not arm.operator.missing and 'hand' in arm.intakes,
+        has_ideal=no_ideal)
+    return found | _engagement(arm, accumulator)
+
+
+def _joint_metrics(arm: ArmEvaluator, accumulator: Any, caveat: str) -> dict[str, Metric]:
+    raw = accumulator.joints_raw.metrics(
+        'joint_error', reason='no sample with a valid command')
+    compensated = accumulator.joints_compensated.metrics(
+        'joint_error_compensated', reason='no response delay was observed', caveat=caveat)
+    found: dict[str, Metric] = raw | compensated
+    command = arm.intakes.get('command')
+    if command is None or command.posed:
+        why = ('command.topic is not configured' if command is None
+               else 'the command is a tool pose, not joints')
+        return {name: missing(NOT_CONFIGURED, metric.unit, why)
+                for name, metric in found.items()}
+    return found
+
+
+def _engagement(arm: ArmEvaluator, accumulator: Any) -> dict[str, Metric]:
+    seconds, times = accumulator.engaged_s, accumulator.engagements
+    found = {'engaged_time_s': Metric(seconds, 's', samples=accumulator.engaged_cells)}
+    if 'engaged' not in arm.states:
+        why = 'engaged.topic is not configured'
+        return {**found, 'engagements': missing(NOT_CONFIGURED, '1', why),
+                'engagement_rate_per_min': missing(NOT_CONFIGURED, '1/min', why)}
+    rate = (Metric(60.0 * times / seconds, '1/min', n=times) if seconds > 0.0 else
+            missing(INSUFFICIENT, '1/min', 'never engaged under this mapping'))
+    return {**found, 'engagements': Metric(float(times), '1', n=times),
+            'engagement_rate_per_min': rate}
+
+
+def _why_no_ideal(arm: ArmEvaluator, label: str) -> str:
+    """Return why there is no ideal command under a mapping, '' if there is one."""
+    if label not in arm.arm.mappings:
+        listed = ', '.join(arm.arm.mappings) or 'none'
+        return f'mapping {label!r} is not configured (configured: {listed})'
+    if arm.robot is None:
+        return 'this arm has no usable robot description'
+    model = arm.models.get(label)
+    if model is None:
+        return f'mapping {label!r} cannot be modelled; see problems'
+    if model.needs not in arm.intakes:
+        topic = 'operator.hand_topic' if model.needs == 'hand' else 'operator.joints_topic'
+        return f'mapping {label!r} needs {topic}'
+    return ''
+
+
+def _why_no_pair(arm: ArmEvaluator, name: str, no_ideal: str) -> str:
+    if name != 'latency_s' and arm.arm.command.topic is None:
+        return 'command.topic is not configured'
+    if name != 'latency_response_s' and no_ideal:
+        return no_ideal
+    return 'one of the two inputs never came'
+
+
+def _clock_caveat(arm: ArmEvaluator) -> str:
+    words = []
+    if arm.time_base is not None and not arm.time_base.by_stamp:
+        words.append('receive-based: includes the transport of both messages to this computer')
+    for role, age in arm.ages.items():
+        if arm.time_base is not None and arm.time_base.by_stamp and (warning := age.warning()):
+            words.append(f'{role}: {warning}')
+    return '; '.join(words)
+
+
+def _geometry(arm: ArmEvaluator) -> dict[str, Any]:
+    robot, operator = arm.robot, arm.operator
+    notes = [operator.note] if operator.note else []
+    if robot is not None:
+        notes += [robot.shoulder.note, robot.reach.note]
+    zero = None if robot is None else [0.0] * len(robot.chain.joint_names)
+    return {
+        'operator_arm_length_m': operator.length_m,
+        'operator_scale_uncertainty': operator.scale_uncertainty,
+        'operator_shoulder_m': None if operator.shoulder_m is None
+        else operator.shoulder_m.tolist(),
+        'robot_reach_m': None if robot is None else robot.reach.length_m,
+        'robot_reach_posture': None if robot is None else dict(
+            zip(robot.chain.joint_names, robot.reach.posture.tolist(), strict=True)),
+        'robot_shoulder_m': None if robot is None or zero is None
+        else robot.shoulder.positions([zero])[0].tolist(),
+        'hand_to_tool_xyzw': None if arm.measurement is None
+        or arm.measurement.tool_rotation is None else arm.measurement.tool_rotation.tolist(),
+        'notes': notes,
+    }
+
+
+def _inputs(arm: ArmEvaluator, *, simulated_time: bool) -> dict[str, Any]:
+    found: dict[str, Any] = {}
+    for role, intake in arm.intakes.items():
+        counts = intake.stream.counts
+        found[role] = {
+            'topic': intake.stream.topic,
+            'messages': counts.messages,
+            'gaps': counts.gaps,
+            'gap_time_s': counts.gap_ns / 1e9,
+            'late': counts.late,
+            'out_of_order': counts.out_of_order,
+            'non_finite': counts.non_finite,
+            'metrics': {name: metric.to_dict() for name, metric in
+                        arm.ages[role].metrics(simulated_time=simulated_time).items()},
+        }
+    for role, state in arm.states.items():
+        found[role] = {'topic': state.topic, 'messages': state.counts.messages,
+                       'late': state.counts.late}
+    return found
+
+
+__all__ = ['CONDITION', 'arm_summary', 'mapping_metrics']

@@ -1,0 +1,137 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""One window of one arm: its streams brought onto the grid and into arm lengths."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from teleop_eval.core import rotations
+from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
+from teleop_eval.core.history import Track
+from teleop_eval.core.mappings import MappingModel, OperatorCells
+from teleop_eval.core.resample import cell_average, cell_average_held, cell_slerp
+from teleop_eval.core.streams import Items, SampledStream
+
+
+@dataclass(frozen=True)
+class Span:
+    """Cells [first, first + count) of a grid of `period_ns` from `origin_ns`."""
+
+    origin_ns: int
+    period_ns: int
+    first: int
+    count: int
+
+    @property
+    def start_ns(self) -> int:
+        """Return the time at which the first cell begins."""
+        return self.origin_ns + self.first * self.period_ns
+
+    @property
+    def end_ns(self) -> int:
+        """Return the time at which the last cell ends."""
+        return self.origin_ns + (self.first + self.count) * self.period_ns
+
+    @property
+    def cell_starts_ns(self) -> np.ndarray:
+        """Return the start (count,) of each cell."""
+        return self.start_ns + np.arange(self.count, dtype=np.int64) * self.period_ns
+
+    def cell_of(self, times_ns: np.ndarray) -> np.ndarray:
+        """Return the index (n,) of the cell within the span that holds each time."""
+        return (times_ns - self.start_ns) // self.period_ns
+
+
+def on_grid(items: Items, span: Span, *, max_gap_ns: int, hold: bool = False) -> Track:
+    """Return a stream's values averaged over the cells of the span."""
+    times = items.times_ns - span.origin_ns
+    if hold:
+        return Track.of(cell_average_held(times, items.values, span.first, span.count,
+                                          period_ns=span.period_ns))
+    return Track.of(cell_average(times, items.values, span.first, span.count,
+                                 period_ns=span.period_ns, max_gap_ns=max_gap_ns))
+
+
+def turned_on_grid(items: Items, span: Span, *, max_gap_ns: int) -> Track | None:
+    """Return a stream's orientations at the cell centres, None if it has none."""
+    if items.orientations is None:
+        return None
+    return Track.of(cell_slerp(items.times_ns - span.origin_ns, items.orientations, span.first,
+                               span.count, period_ns=span.period_ns, max_gap_ns=max_gap_ns))
+
+
+def operator_tracks(hand: SampledStream | None, joints: SampledStream | None, span: Span,
+                    geometry: OperatorGeometry) -> dict[str, Track]:
+    """Return the operator's tracks: hand, hand_turn, operator_joints, u_o as far as known."""
+    tracks: dict[str, Track] = {}
+    if hand is not None and hand.present:
+        items = hand.items(span.end_ns)
+        position = on_grid(items, span, max_gap_ns=hand.max_gap_ns)
+        tracks['hand'] = position
+        turn = turned_on_grid(items, span, max_gap_ns=hand.max_gap_ns)
+        if turn is not None:
+            tracks['hand_turn'] = turn
+        normalised = geometry.normalise(position.values)
+        if normalised is not None:
+            tracks['u_o'] = Track.computed(normalised, position.valid)
+    if joints is not None and joints.present:
+        items = joints.items(span.end_ns)
+        tracks['operator_joints'] = on_grid(items, span, max_gap_ns=joints.max_gap_ns)
+    return tracks
+
+
+def tool_tracks(prefix: str, joints: Track, columns: np.ndarray,
+                robot: RobotGeometry) -> dict[str, Track]:
+    """
+    Return u_{prefix} and turn_{prefix} of a joint track.
+
+    `columns` picks the chain's joints out of the track's.
+    """
+    filled = np.where(joints.valid[:, None], joints.values, 0.0)[:, columns]
+    pose = robot.chain.forward(filled)
+    return {
+        f'u_{prefix}': Track.computed(robot.normalise(pose.positions, filled), joints.valid),
+        f'turn_{prefix}': Track.computed(rotations.from_matrix(pose.rotations), joints.valid),
+    }
+
+
+def pose_command_tracks(items: Items, span: Span, *, max_gap_ns: int, hold: bool,
+                        robot: RobotGeometry, robot_joints: np.ndarray) -> dict[str, Track]:
+    """Return u_c and turn_c of a command that is a tool pose in the robot's base link."""
+    position = on_grid(items, span, max_gap_ns=max_gap_ns, hold=hold)
+    tracks = {'u_c': Track.computed(robot.normalise(position.values, robot_joints),
+                                    position.valid)}
+    turn = None if hold else turned_on_grid(items, span, max_gap_ns=max_gap_ns)
+    if turn is not None:
+        tracks['turn_c'] = turn
+    return tracks
+
+
+def ideal_tracks(model: MappingModel, operator: dict[str, Track],
+                 operator_joint_names: tuple[str, ...], robot_joints: np.ndarray,
+                 robot: RobotGeometry) -> dict[str, Track]:
+    """Return u_i, turn_i and q_i of one mapping model, {} if its operator input is absent."""
+    source = operator.get(model.needs)
+    if source is None:
+        return {}
+    turn = operator.get('hand_turn')
+    ideal = model.ideal(OperatorCells(
+        hand_m=operator['hand'].values if 'hand' in operator else None,
+        hand_xyzw=None if turn is None
+        else np.where(turn.valid[:, None], turn.values, [0.0, 0.0, 0.0, 1.0]),
+        joints=operator['operator_joints'].values if 'operator_joints' in operator else None,
+        joint_names=operator_joint_names,
+        robot_joints=robot_joints,
+    ))
+    tracks = {'u_i': Track.computed(robot.normalise(ideal.positions_m, robot_joints),
+                                    source.valid)}
+    if ideal.orientations is not None:
+        valid = source.valid if model.needs != 'hand' or turn is None else (
+            source.valid & turn.valid)
+        tracks['turn_i'] = Track.computed(ideal.orientations, valid)
+    if ideal.joints is not None:
+        tracks['q_i'] = Track.computed(ideal.joints, source.valid)
+    return tracks
