@@ -9,8 +9,9 @@ from collections.abc import Callable, Iterable, Mapping, Sequence
 from typing import Protocol
 
 from teleop_eval.core.errors import InputError, RecordingError, TeleopEvalError
-from teleop_eval.core.samples import Sample, TextSample
+from teleop_eval.core.samples import Sample
 from teleop_eval.sinks import messages
+from teleop_eval.sources.decode import full_type_name
 from teleop_eval.sources.recording import Recording, TopicInfo
 
 Decoder = Callable[[bytes], Sample]
@@ -59,6 +60,8 @@ class RecordedInputs:
 
     Attributes
     ----------
+    topics
+        Topics to read.
     problems
         A sentence for each configured topic that the recording lacks.
 
@@ -84,25 +87,22 @@ class RecordedInputs:
                 self.problems.append(_absence(topic, uses, recording))
                 continue
             _check(info, uses, recording, supported)
+            enabled_field = _enabled_field(topic, uses)
             try:
                 self._decoders[topic] = make_decoder(
                     info.type_name, definition=info.definition,
                     definition_format=info.definition_format or 'ros2msg',
-                    enabled_field=_enabled_field(topic, uses))
+                    enabled_field=enabled_field)
             except InputError as error:
                 raise InputError(f'Topic {topic} of {recording.path}: {error}') from error
         if not self._decoders:
             raise RecordingError(_nothing(recording, routes))
         events = recording.topics.get(event_topic)
+        self.topics = tuple(self._decoders)
         if events is not None and events.type_name == messages.STRING:
-            self._decoders[event_topic] = make_decoder(messages.STRING)
+            self.topics += (event_topic,)
         # The order of the feed makes such events itself, also where none was recorded.
-        self._decoders.setdefault(event_topic, _event_text)
-
-    @property
-    def topics(self) -> tuple[str, ...]:
-        """Topics to read."""
-        return tuple(self._decoders)
+        self._decoders[event_topic] = make_decoder(messages.STRING)
 
     def decode(self, topic: str, data: bytes) -> Sample | None:
         """Return the sample of a message, None where the message is malformed (counted)."""
@@ -121,18 +121,13 @@ class RecordedInputs:
                 for topic, (count, first) in self._failures.items()]
 
 
-def _event_text(data: bytes) -> Sample:
-    """Decode the events that the feed's order puts in: short std_msgs/msg/String."""
-    return TextSample(data[8:].rstrip(b'\x00').decode('utf-8', 'replace'))
-
-
-def _enabled_field(topic: str, uses: Sequence[RouteLike]) -> str | None:
+def _enabled_field(topic: str, uses: Sequence[RouteLike]) -> str:
     fields = sorted({route.enabled_field for route in uses if route.enabled_field})
     if len(fields) > 1:
         raise InputError(
             f'Topic {topic} is configured with the enabled_field values {" and ".join(fields)}; '
             'give one.')
-    return fields[0] if fields else None
+    return fields[0] if fields else ''
 
 
 def _check(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
@@ -153,14 +148,18 @@ def _check(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
         raise InputError(
             f'Topic {info.name} of {recording.path} has the encoding {info.encoding!r}; only '
             'cdr, which ROS 2 writes, can be read.')
+    try:
+        type_name = full_type_name(info.type_name)
+    except InputError as error:
+        raise InputError(f'Topic {info.name} of {recording.path}: {error}') from error
     for route in uses:
         kind = KIND_OF_ROLE[route.role]
         expected = sorted(supported[kind])
-        by_fields = kind in _ANY_NAME and info.type_name not in _all_types(supported)
-        if info.type_name not in expected and not (by_fields and info.definition):
+        by_fields = kind in _ANY_NAME and type_name not in _all_types(supported)
+        if type_name not in expected and not (by_fields and info.definition):
             raise InputError(
                 f'Topic {info.name} is configured as {_use(route)}, but has the type '
-                f'{info.type_name or "of no name"}, which cannot serve as that; expected is '
+                f'{type_name}, which cannot serve as that; expected is '
                 f'{", ".join(expected)}{_OR_FIELDS if kind in _ANY_NAME else ""}.')
 
 

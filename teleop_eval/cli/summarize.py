@@ -7,9 +7,8 @@ from __future__ import annotations
 import argparse
 import re
 import sys
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from pathlib import Path
-from typing import Any
 
 from teleop_eval.cli.main import STATUS_FAILURE, STATUS_OK, one_line
 from teleop_eval.cli.offline_run import OfflineRun, Outcome
@@ -159,18 +158,13 @@ def _namespace(text: str) -> str:
 
 
 def _print(outcome: Outcome) -> None:
-    _print_table(outcome.summary)
-    for note in outcome.summary['notes']:
-        print(f'Note: {one_line(note)}')
-    print(f'Results: {outcome.folder}')
-    sys.stdout.flush()
-    for problem in outcome.problems:
-        print(f'teleop_eval summarize: {one_line(problem)}', file=sys.stderr)
-
-
-def _print_table(summary: Mapping[str, Any]) -> None:
     from rich.console import Console
 
     from teleop_eval.sinks.tables import summary_table
 
-    Console().print(summary_table(summary))
+    # Problems go to standard error, so that they are seen when the table goes into a file.
+    Console().print(summary_table({**outcome.summary, 'problems': []}))
+    print(f'\nResults: {one_line(str(outcome.folder))}')
+    sys.stdout.flush()
+    for problem in outcome.problems:
+        print(f'teleop_eval summarize: {one_line(problem)}', file=sys.stderr)

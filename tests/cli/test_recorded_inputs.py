@@ -13,10 +13,10 @@ from teleop_eval.core.errors import InputError, RecordingError
 from teleop_eval.core.samples import BoolSample, TextSample
 from teleop_eval.sinks import messages
 from teleop_eval.sinks.bag_writer import BagWriter
+from teleop_eval.sources.decode import SUPPORTED, make_decoder
 from teleop_eval.sources.recording import open_recording
 
 EVENTS = '/teleop_eval/session_event'
-SUPPORTED = {'bool': ('std_msgs/msg/Bool',), 'joints': ('sensor_msgs/msg/JointState',)}
 
 
 @dataclass(frozen=True)
@@ -26,15 +26,6 @@ class Route:
     arm: str
     role: str
     enabled_field: str | None = None
-
-
-def decoder(type_name, **_):
-    """Return a decoder of one byte, which refuses anything longer."""
-    def decode(data):
-        if len(data) != 5:
-            raise InputError(f'{type_name} with {len(data)} bytes is cut.')
-        return BoolSample(bool(data[4]))
-    return decode
 
 
 @pytest.fixture
@@ -50,14 +41,14 @@ def recording(tmp_path):
 
 
 def inputs(recording, routes):
-    """Return the inputs with the decoder above."""
+    """Return the inputs of a recording."""
     return RecordedInputs(recording, routes, event_topic=EVENTS, supported=SUPPORTED,
-                          make_decoder=decoder)
+                          make_decoder=make_decoder)
 
 
 def test_topic_that_fits_is_decoded_and_events_are_known(recording):
     made = inputs(recording, {'/cell/engaged': (Route('right', 'engaged'),)})
-    assert set(made.topics) == {'/cell/engaged', EVENTS}
+    assert made.topics == ('/cell/engaged',)
     assert made.problems == [] and made.malformed() == []
     assert made.decode('/cell/engaged', b'\x00\x01\x00\x00\x01') == BoolSample(True)
     assert made.decode(EVENTS, messages.string('segment')) == TextSample('segment')
@@ -87,7 +78,8 @@ def test_wrong_type_names_topic_type_and_what_is_expected(recording):
 
 
 def test_two_enabled_fields_on_one_topic_are_refused(recording):
-    with pytest.raises(InputError, match='/cell/joint_states.*enabled_field values a and b; give one'):
+    with pytest.raises(InputError,
+                       match='/cell/joint_states.*enabled_field values a and b; give one'):
         inputs(recording, {'/cell/joint_states': (Route('right', 'robot_joints', 'a'),
                                                   Route('left', 'robot_joints', 'b'))})
 
@@ -95,11 +87,29 @@ def test_two_enabled_fields_on_one_topic_are_refused(recording):
 def test_malformed_messages_are_counted_with_the_first_reason(recording):
     made = inputs(recording, {'/cell/engaged': (Route('right', 'engaged'),)})
     assert made.decode('/cell/engaged', b'123') is None
-    assert made.decode('/cell/engaged', b'1234567') is None
+    assert made.decode('/cell/engaged', b'') is None
     assert made.decode('/cell/engaged', b'\x00\x01\x00\x00\x00') == BoolSample(False)
-    assert made.malformed() == [
-        '2 of 3 messages on /cell/engaged cannot be decoded and are left out; the first because: '
-        'std_msgs/msg/Bool with 3 bytes is cut.']
+    [sentence] = made.malformed()
+    assert sentence.startswith('2 of 3 messages on /cell/engaged cannot be decoded and are left '
+                               'out; the first because: ')
+    assert '3 bytes' in sentence and sentence.endswith('.') and '..' not in sentence
+
+
+def test_recorded_type_without_a_usable_name_is_named(tmp_path):
+    with BagWriter(tmp_path / 'bag') as writer:
+        writer.add_topic('/engaged', 'nonsense')
+    with open_recording(tmp_path / 'bag') as opened, pytest.raises(
+            InputError, match="Topic /engaged of .*bag: 'nonsense' is no message type"):
+        inputs(opened, {'/engaged': (Route('right', 'engaged'),)})
+
+
+def test_events_are_read_where_they_were_recorded(tmp_path):
+    with BagWriter(tmp_path / 'bag') as writer:
+        writer.add_topic('/engaged', 'std_msgs/msg/Bool')
+        writer.add_topic(EVENTS, 'std_msgs/msg/String')
+    with open_recording(tmp_path / 'bag') as opened:
+        made = inputs(opened, {'/engaged': (Route('right', 'engaged'),)})
+    assert made.topics == ('/engaged', EVENTS)
 
 
 def test_topic_with_two_types_is_refused(tmp_path):
