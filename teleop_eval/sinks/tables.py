@@ -1,0 +1,284 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""
+The summary as a table for a terminal: mappings side by side, readable at 80 columns.
+
+Names and reasons come from messages and recordings, so nothing in them is taken for markup
+or terminal control.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+import unicodedata
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from rich.box import SIMPLE_HEAD
+from rich.console import Console, Group, RenderableType
+from rich.table import Table
+from rich.text import Text
+
+# Mappings side by side that 80 characters hold; further ones follow in a table below.
+ABREAST, ABREAST_WITH_TRUTH = 3, 2
+NAME_WIDTH, UNIT_WIDTH, VALUE_WIDTH, TRUTH_WIDTH = 27, 7, 14, 6
+LONGEST_LABEL, LONGEST_SENTENCE = 60, 400
+NO_ENTRY = '-'
+# Rows in the order in which a practitioner asks; a name of none of these families comes last,
+# within a family those of ORDER first.
+FAMILIES = (
+    ('latency_',),
+    ('tracking_error_', 'orientation_error_', 'joint_error_'),
+    ('workspace_', 'reach_', 'hull_', 'joint_range_', 'limit_', 'manipulability_'),
+    ('engage',),
+)
+ORDER = ('latency_s', 'tracking_error_rms_norm', 'tracking_error_p95_norm',
+         'tracking_error_max_norm', 'tracking_error_rms_m', 'tracking_error_p95_m',
+         'tracking_error_max_m', 'tracking_error_compensated_rms_norm',
+         'tracking_error_compensated_p95_norm', 'tracking_error_compensated_max_norm',
+         'joint_error_rms', 'joint_error_p95', 'reach_p50_norm', 'reach_p95_norm',
+         'reach_max_norm', 'manipulability_p5', 'engaged_time_s', 'engagements')
+STATUS_WORDS = {
+    'unobservable': 'unobservable',
+    'insufficient': 'insufficient',
+    'not_configured': 'not configured',
+}
+
+
+def summary_table(summary: Mapping[str, Any], *,
+                  truth: Mapping[str, Any] | None = None) -> RenderableType:
+    """
+    Return a summary as tables and sentences to print.
+
+    Parameters
+    ----------
+    summary
+        The content of summary.json; what is missing in it is left out.
+    truth
+        The content of the demonstration's truth.json. Then each mapping has a second column
+        with the true value of the metrics that have one.
+
+    Returns
+    -------
+    RenderableType
+        For `rich.console.Console.print`. Joint by joint metrics (names with a point) are left
+        to metrics.csv.
+
+    """
+    parts: list[RenderableType] = [_heading(_mapping(summary.get('session')))]
+    for arm, of_arm in _mapping(summary.get('arms')).items():
+        parts += _arm(str(arm), _mapping(of_arm), _mapping(_mapping(truth).get('mappings')))
+    if len(parts) == 1:
+        parts.append(Text('No arm was evaluated.'))
+    if truth:
+        parts.append(_truth_sentence(truth))
+    for title, style, key in (('Problems', 'bold red', 'problems'), ('Notes', 'bold', 'notes')):
+        sentences = [clean(str(item), LONGEST_SENTENCE) for item in summary.get(key) or ()]
+        if sentences:
+            parts.append(Text(f'\n{title}', style=style))
+            parts += [_listed('-', sentence) for sentence in sentences]
+    return Group(*parts)
+
+
+def print_summary(summary: Mapping[str, Any], *, truth: Mapping[str, Any] | None = None,
+                  console: Console | None = None) -> None:
+    """Print a summary; into a pipe or file as plain text of 80 columns."""
+    console = console or Console(highlight=False)
+    if not console.is_terminal:
+        console = Console(file=console.file, width=80, highlight=False, color_system=None)
+    console.print(summary_table(summary, truth=truth))
+
+
+def clean(text: str, longest: int = LONGEST_LABEL) -> str:
+    """
+    Return text that cannot move the cursor, change colours or reorder its surroundings.
+
+    Control, format and unassigned characters become a replacement sign, white space one
+    space, and a text longer than `longest` is cut.
+    """
+    shown = ''.join(
+        ' ' if sign.isspace() else '\ufffd' if unicodedata.category(sign)[0] == 'C' else sign
+        for sign in text[:4 * longest])
+    shown = ' '.join(shown.split())
+    return shown if len(shown) <= longest and len(text) <= 4 * longest else (
+        shown[:longest - 3] + '...')
+
+
+def number(value: float) -> str:
+    """Return up to four significant digits, without an exponent where that stays readable."""
+    if abs(value) < 1e6 and value == int(value):
+        return str(int(value))
+    size = math.floor(math.log10(abs(value)))
+    if not -3 <= size < 6:
+        return f'{value:.1e}'
+    return f'{value:.{min(max(3 - size, 0), 4)}f}'
+
+
+class _Remarks:
+    """Numbers the sentences below a table; the same sentence keeps its number."""
+
+    def __init__(self) -> None:
+        self._numbers: dict[str, int] = {}
+
+    def mark(self, sentence: str) -> str:
+        return f'({self._numbers.setdefault(sentence, len(self._numbers) + 1)})'
+
+    def lines(self) -> list[RenderableType]:
+        return [_listed(f'({place})', sentence) for sentence, place in self._numbers.items()]
+
+
+def _heading(session: Mapping[str, Any]) -> Text:
+    text = Text()
+    text.append(clean(str(session.get('name') or 'session without a name')), style='bold')
+    duration = session.get('duration_s')
+    facts = [clean(str(session[key])) for key in ('condition', 'operator', 'source')
+             if session.get(key)]
+    if _finite(duration):
+        facts.append(f'{float(duration):.1f} s')
+    if facts:
+        text.append('  ' + ', '.join(facts))
+    return text
+
+
+def _arm(arm: str, of_arm: Mapping[str, Any],
+         true_mappings: Mapping[str, Any]) -> list[RenderableType]:
+    heading = Text(f'\nArm {clean(arm)}', style='bold')
+    base = _mapping(of_arm.get('time_base'))
+    if base.get('base'):
+        reason = clean(str(base.get('reason') or ''), LONGEST_SENTENCE)
+        heading.append(f'  time base: {clean(str(base["base"]))}'
+                       + (f' ({reason})' if reason else ''), style='not bold')
+    mappings = _mapping(of_arm.get('mappings'))
+    if not mappings:
+        return [heading, Text('No mapping was active while the arm was evaluated.')]
+    parts: list[RenderableType] = [heading]
+    remarks = _Remarks()
+    labels = list(mappings)
+    abreast = ABREAST_WITH_TRUTH if true_mappings else ABREAST
+    for first in range(0, len(labels), abreast):
+        shown = {label: _mapping(mappings[label]) for label in labels[first:first + abreast]}
+        parts.append(_table(shown, true_mappings, remarks))
+    return parts + remarks.lines()
+
+
+def _table(shown: Mapping[str, Mapping[str, Any]], true_mappings: Mapping[str, Any],
+           remarks: _Remarks) -> Table:
+    table = Table(box=SIMPLE_HEAD, show_edge=False, pad_edge=False, padding=0)
+    table.add_column('metric', width=NAME_WIDTH, overflow='fold')
+    table.add_column('unit', width=UNIT_WIDTH, overflow='fold')
+    for label, of_mapping in shown.items():
+        condition = of_mapping.get('condition')
+        title = Text(clean(label), overflow='fold')
+        if condition not in (None, 'teleoperated'):
+            title.append(f'\n{clean(str(condition))}')
+        table.add_column(title, justify='right', overflow='fold', width=VALUE_WIDTH)
+        if true_mappings:
+            table.add_column('truth', justify='right', style='cyan', width=TRUTH_WIDTH)
+    metrics = {label: _mapping(of_mapping.get('metrics')) for label, of_mapping in shown.items()}
+    group = None
+    for name in _names(metrics.values()):
+        if group is not None and _group(name) != group:
+            table.add_row()
+        group = _group(name)
+        units = [str(_mapping(of[name]).get('unit', '')) for of in metrics.values() if name in of]
+        row: list[RenderableType] = [Text(_broken(clean(name))), Text(clean(units[0], 24))]
+        for label, of in metrics.items():
+            row.append(_cell(of.get(name), remarks))
+            if true_mappings:
+                row.append(_true_cell(_mapping(true_mappings.get(label)), name))
+        table.add_row(*row)
+    return table
+
+
+def _cell(metric: Any, remarks: _Remarks) -> Text:
+    metric = _mapping(metric)
+    if not metric:
+        return Text(NO_ENTRY)
+    value, reason = metric.get('value'), str(metric.get('reason') or '')
+    if metric.get('status') == 'ok' and _finite(value):
+        text = Text(number(float(value)))
+        interval = metric.get('ci95')
+        if _is_pair(interval):
+            low, high = (number(float(end)) for end in interval)
+            text.append(f'\n{low}..{high}', style='dim')
+        return text
+    status = str(metric.get('status') or 'unobservable')
+    words = STATUS_WORDS.get(status, clean(status) if status != 'ok' else 'no value')
+    if not reason:
+        return Text(words, style='yellow')
+    sentence = f'{words}: {clean(reason, LONGEST_SENTENCE)}'
+    return Text(f'{words} {remarks.mark(sentence)}', style='yellow')
+
+
+def _true_cell(of_mapping: Mapping[str, Any], name: str) -> Text:
+    value = _mapping(of_mapping.get('metrics')).get(name)
+    return Text(number(float(value))) if _finite(value) else Text('')
+
+
+def _truth_sentence(truth: Mapping[str, Any]) -> Text:
+    text = Text('\nTruth', style='bold')
+    named = (('processing', 'processing_delay_s'), ('transport', 'transport_delay_s'),
+             ('servo lag 2 zeta/omega_n', 'servo_lag_s'))
+    shown = [f'{label} {number(float(truth[key]))} s' for label, key in named
+             if _finite(truth.get(key))]
+    if shown and _finite(truth.get('sum_s')):
+        text.append(f'  {" + ".join(shown)} = {number(float(truth["sum_s"]))} s.',
+                    style='not bold')
+    text.append(' The truth column holds what the same estimator finds on the same motion '
+                'without noise: a servo lags differently in different bands.',
+                style='not bold')
+    return text
+
+
+def _names(metrics: Any) -> list[str]:
+    """Return the metric names of all mappings, in reading order."""
+    names = {str(name) for of_mapping in metrics for name in of_mapping}
+    return sorted((name for name in names if '.' not in name), key=_place)
+
+
+def _place(name: str) -> tuple[int, int, int, str]:
+    """Return the place of a metric: its group, its family, its rank there, its name."""
+    families = FAMILIES[_group(name)] if _group(name) < len(FAMILIES) else ()
+    family = next((place for place, start in enumerate(families) if name.startswith(start)), 0)
+    return _group(name), family, ORDER.index(name) if name in ORDER else len(ORDER), name
+
+
+def _group(name: str) -> int:
+    return next((place for place, starts in enumerate(FAMILIES) if name.startswith(starts)),
+                len(FAMILIES))
+
+
+def _broken(name: str) -> str:
+    """Break a long name after an underscore, never inside a word that fits."""
+    if len(name) <= NAME_WIDTH:
+        return name
+    lines = ['']
+    for part in re.findall(r'[^_]*_|[^_]+', name):
+        if len(lines[-1]) + len(part) > NAME_WIDTH and lines[-1]:
+            lines.append('  ')
+        lines[-1] += part
+    return '\n'.join(lines)
+
+
+def _listed(mark: str, sentence: str) -> Table:
+    """Return a sentence with a hanging indent behind its mark."""
+    line = Table.grid(padding=(0, 1))
+    line.add_column(no_wrap=True)
+    line.add_column(overflow='fold')
+    line.add_row(Text(mark), Text(sentence))
+    return line
+
+
+def _mapping(value: Any) -> Mapping[str, Any]:
+    return value if isinstance(value, Mapping) else {}
+
+
+def _finite(value: Any) -> bool:
+    return (isinstance(value, int | float) and not isinstance(value, bool)
+            and math.isfinite(value))
+
+
+def _is_pair(value: Any) -> bool:
+    return (isinstance(value, Sequence) and not isinstance(value, str) and len(value) == 2
+            and all(_finite(end) for end in value))
