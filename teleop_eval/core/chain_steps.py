@@ -20,6 +20,10 @@ from teleop_eval.core.description import (
 from teleop_eval.core.errors import DescriptionError
 from teleop_eval.core.rotations import Array
 
+# Arms with hands and torso have under 30. Without a bound a hostile file could ask for a chain
+# of a hundred thousand joints, and for the memory to sample it.
+MAX_STEPS = 100
+
 
 @dataclass(frozen=True, eq=False)
 class Step:
@@ -127,6 +131,11 @@ def merged_steps(
             raise DescriptionError(
                 f'{description.source}: joint {joint.name!r} between the links is '
                 f'{joint.kind}, which one number cannot move: choose a base link behind it'
+            )
+        if len(steps) > MAX_STEPS:
+            raise DescriptionError(
+                f'{description.source}: more than {MAX_STEPS} moving joints lie between the '
+                'links: choose a base and a tip link of one arm'
             )
         if backward:
             rotation = rotation @ origin_r.T

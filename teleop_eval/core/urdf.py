@@ -32,8 +32,10 @@ from teleop_eval.core.description import (
 from teleop_eval.core.errors import DescriptionError
 from teleop_eval.core.rotations import Array
 
-# Full humanoids with two hands stay under 1 MB and 10 levels.
-MAX_CHARACTERS = 16 * 2**20
+# Full humanoids with two hands stay under 1 MB, 10 000 elements and 10 levels; at these bounds
+# a hostile text costs a few seconds at most.
+MAX_CHARACTERS = 4 * 2**20
+MAX_ELEMENTS = 100_000
 MAX_DEPTH = 64
 # Nothing in a robot is a million metres away or turns a million times: larger numbers are
 # damage, and would overflow later where nobody can tell why.
@@ -82,7 +84,9 @@ def parse_urdf(text: str, *, source: str = 'robot_description') -> RobotDescript
     for element in root.iterfind(f'{prefix}joint'):
         joint = _JointReader(element, prefix, source).read()
         if joint.name in joints:
-            raise DescriptionError(f'{source}: two joints are named {joint.name!r}: rename one')
+            raise DescriptionError(
+                f'{source}: two joints are named {_shown(joint.name)}: rename one'
+            )
         joints[joint.name] = joint
     _check_tree(links, joints, source)
     _check_mimics(joints, source)
@@ -91,12 +95,16 @@ def parse_urdf(text: str, *, source: str = 'robot_description') -> RobotDescript
 
 
 class _BoundedBuilder(TreeBuilder):
-    """Builds the element tree, gives up when it nests too deep."""
+    """Builds the element tree, gives up when it nests too deep or grows too large."""
 
     depth = 0
+    count = 0
 
     def start(self, tag, attrs, /):  # type: ignore[no-untyped-def]
         self.depth += 1
+        self.count += 1
+        if self.count > MAX_ELEMENTS:
+            raise DescriptionError(f'the robot has more than {MAX_ELEMENTS} elements')
         if self.depth > MAX_DEPTH:
             raise DescriptionError(f'elements are nested deeper than {MAX_DEPTH} levels')
         return super().start(tag, attrs)
@@ -138,7 +146,7 @@ def _read_links(root: Element, prefix: str, source: str) -> set[str]:
         if not name:
             raise DescriptionError(f'{source}: a link has no name: give it one')
         if name in links:
-            raise DescriptionError(f'{source}: two links are named {name!r}: rename one')
+            raise DescriptionError(f'{source}: two links are named {_shown(name)}: rename one')
         links.add(name)
     if not links:
         raise DescriptionError(f'{source}: the robot has no links: give a complete URDF')
@@ -155,12 +163,14 @@ class _JointReader:
         if not name:
             raise DescriptionError(f'{source}: a joint has no name: give it one')
         self._name = name
-        self._where = f'{source}: joint {name!r}'
+        self._where = f'{source}: joint {_shown(name)}'
 
     def read(self) -> Joint:
         kind = self._element.get('type')
         if kind not in KINDS:
-            raise self._fault(f'has the unknown type {kind!r}: use one of {", ".join(KINDS)}')
+            raise self._fault(
+                f'has the unknown type {_shown(kind)}: use one of {", ".join(KINDS)}'
+            )
         origin = self._child('origin')
         lower, upper, velocity = self._limits(kind)
         return Joint(
@@ -258,20 +268,20 @@ def _check_tree(links: set[str], joints: Mapping[str, Joint], source: str) -> No
         for role, link in (('parent', joint.parent), ('child', joint.child)):
             if link not in links:
                 raise DescriptionError(
-                    f'{source}: joint {joint.name!r} has the {role} link {link!r}, '
+                    f'{source}: joint {_shown(joint.name)} has the {role} link {_shown(link)}, '
                     'which does not exist'
                 )
         if joint.child in above:
             raise DescriptionError(
-                f'{source}: link {joint.child!r} has two parents, joints '
-                f'{above[joint.child].name!r} and {joint.name!r}: a URDF is a tree'
+                f'{source}: link {_shown(joint.child)} has two parents, joints '
+                f'{_shown(above[joint.child].name)} and {_shown(joint.name)}: a URDF is a tree'
             )
         above[joint.child] = joint
     steps = {child: joint.parent for child, joint in above.items()}
     looped = _first_on_cycle(steps)
     if looped is not None:
         raise DescriptionError(
-            f'{source}: the joints form a cycle through link {looped!r}: a URDF is a tree'
+            f'{source}: the joints form a cycle through link {_shown(looped)}: a URDF is a tree'
         )
 
 
@@ -279,14 +289,14 @@ def _check_mimics(joints: Mapping[str, Joint], source: str) -> None:
     for joint in joints.values():
         if joint.mimic is not None and joint.mimic.joint not in joints:
             raise DescriptionError(
-                f'{source}: joint {joint.name!r} mimics {joint.mimic.joint!r}, '
+                f'{source}: joint {_shown(joint.name)} mimics {_shown(joint.mimic.joint)}, '
                 'which does not exist'
             )
     steps = {joint.name: joint.mimic.joint for joint in joints.values() if joint.mimic}
     looped = _first_on_cycle(steps)
     if looped is not None:
         raise DescriptionError(
-            f'{source}: joint {looped!r} mimics itself through a loop: let one joint be free'
+            f'{source}: joint {_shown(looped)} mimics itself through a loop: let one joint be free'
         )
 
 
@@ -310,6 +320,11 @@ def _walk(start: str, step: Mapping[str, str]) -> Iterator[str]:
     while node is not None:
         yield node
         node = step.get(node)
+
+
+def _shown(text: str | None) -> str:
+    """Quote a name of the file, cut where it would make the sentence unreadable."""
+    return repr(text if text is None or len(text) <= 80 else text[:77] + '...')
 
 
 def _rpy_matrix(rpy: Array) -> Array:

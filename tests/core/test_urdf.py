@@ -217,6 +217,11 @@ def test_enormous_nesting_is_refused() -> None:
         urdf.parse_urdf(text)
 
 
+def test_an_enormous_number_of_elements_is_refused() -> None:
+    with pytest.raises(DescriptionError, match='more than 100000 elements'):
+        urdf.parse_urdf(f'<robot>{"<a/>" * 200_000}</robot>')
+
+
 def test_nesting_of_a_usual_file_is_accepted() -> None:
     inside = '<visual>' * 40 + '</visual>' * 40
     text = robot(joint('j', 'a', 'b'), f'<link name="e">{inside}</link>')
@@ -230,8 +235,15 @@ def test_an_enormous_text_is_refused(monkeypatch: pytest.MonkeyPatch) -> None:
         urdf.parse_urdf(text)
 
 
+def test_a_name_without_end_does_not_fill_the_message() -> None:
+    text = robot(joint('j' * 5000, 'a', 'x' * 5000, kind='fixed', inside=''))
+    with pytest.raises(DescriptionError, match=r'xxx\.\.\.') as caught:
+        urdf.parse_urdf(text)
+    assert len(str(caught.value)) < 300
+
+
 def test_a_chain_longer_than_any_recursion_is_read() -> None:
-    count = 20_000
+    count = 15_000
     links = ''.join(f'<link name="l{i}"/>' for i in range(count + 1))
     fixed = [
         joint(f'j{i}', f'l{i}', f'l{i + 1}', kind='fixed', inside='') for i in range(count)
