@@ -74,7 +74,8 @@ def multiply(a: npt.ArrayLike, b: npt.ArrayLike) -> Array:
 
 def conjugate(q: npt.ArrayLike) -> Array:
     """Return the inverse rotation of unit quaternions (..., 4)."""
-    return np.asarray(q, dtype=float) * np.array([-1.0, -1.0, -1.0, 1.0])
+    flipped: Array = np.asarray(q, dtype=float) * np.array([-1.0, -1.0, -1.0, 1.0])
+    return flipped
 
 
 def to_matrix(q: npt.ArrayLike) -> Array:
