@@ -43,6 +43,13 @@ def test_any_sample_and_level_agree_with_numpy(values, p):
     assert filled(np.array(values)).percentile(p) == pytest.approx(expected, rel=1e-3)
 
 
+@settings(max_examples=40, deadline=None)
+@given(st.floats(1e-5, 900.0))
+def test_a_value_alone_in_its_bin_is_known_to_half_a_bin(value):
+    histogram = filled(np.array([1e-6, value, 999.0]))
+    assert histogram.percentile(50.0) == pytest.approx(value, rel=5.01e-4)
+
+
 def test_moments_and_extremes_are_exact():
     values = np.random.default_rng(5).lognormal(0.0, 2.0, 3000)
     histogram = filled(values)

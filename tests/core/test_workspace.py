@@ -264,6 +264,15 @@ def test_planar_area_has_its_closed_form():
     assert cells.size * 0.02**2 == pytest.approx(expected, rel=0.02)
 
 
+def test_cells_are_counted_from_the_shoulder():
+    here = reachable_cells(spherical(0.7, 0.3), Point(), 1.0, seed=6)
+    moved = spherical(0.7, 0.3)
+    moved.foot = (0.5, -0.25, 2.0)
+    there = reachable_cells(moved, Point(moved.foot), 1.0, seed=6)
+    # Rounding may move single positions over a boundary.
+    assert np.setxor1d(here.cells, there.cells).size <= 0.002 * here.cells.size
+
+
 def test_result_depends_on_the_seed_alone():
     arm = spherical(0.6, 0.4)
     whole = reachable_cells(arm, Point(), 1.0, seed=3)
