@@ -5,7 +5,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cache
 
 
 @dataclass(frozen=True)
@@ -16,7 +16,7 @@ class MessageDefinition:
     type_hash: str
 
 
-@lru_cache(maxsize=None)
+@cache
 def standard_definition(type_name: str) -> MessageDefinition | None:
     """Look up a type such as `std_msgs/msg/String`; None where it is not a standard one."""
     store = _typestore()
@@ -26,7 +26,7 @@ def standard_definition(type_name: str) -> MessageDefinition | None:
     return MessageDefinition(text, store.hash_rihs01(type_name))
 
 
-@lru_cache(maxsize=1)
+@cache
 def _typestore():  # noqa: ANN202 (a rosbags class that cannot be named without rosbags)
     try:
         from rosbags.typesys import Stores, get_typestore

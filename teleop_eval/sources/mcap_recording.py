@@ -1,0 +1,150 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""Messages of an MCAP file in log-time order, with the memory of a few chunks."""
+
+from __future__ import annotations
+
+from bisect import bisect_left
+from collections.abc import Collection, Iterator, Mapping
+from dataclasses import replace
+from operator import itemgetter
+from pathlib import Path
+from typing import BinaryIO
+
+from teleop_eval.sources import mcap_chunk as mc
+from teleop_eval.sources.mcap_layout import Block, Layout, damage_note, read_layout
+from teleop_eval.sources.qos_profiles import read_qos
+from teleop_eval.sources.stored_file import Message, TopicInfo, add_note, definition_format
+
+_LOG_NS = itemgetter(0)
+
+
+class McapFile:
+    """
+    One MCAP file, complete or cut.
+
+    Raises
+    ------
+    RecordingError
+        If nothing in it can be read.
+
+    """
+
+    def __init__(self, path: Path) -> None:
+        self.path = path
+        layout = read_layout(path)
+        self.notes = list(layout.notes)
+        self.start_ns, self.end_ns = layout.start_ns, layout.end_ns
+        self.message_count = sum(layout.counts.values())
+        self._blocks = layout.blocks
+        self._topic_of: dict[int, str] = {}
+        self.topics: dict[str, TopicInfo] = {}
+        for channel_id in sorted(layout.channels):
+            self._add_channel(layout, channel_id)
+
+    def batches(self, topics: Collection[str]) -> Iterator[list[Message]]:
+        """Yield the messages of these topics in log-time order, some at a time."""
+        wanted = {key: name for key, name in self._topic_of.items() if name in topics}
+        blocks = [
+            block
+            for block in self._blocks
+            if not block.channels or not wanted.keys().isdisjoint(block.channels)
+        ]
+        blocks.sort(key=lambda block: (block.start_ns, block.offset))
+        with self.path.open('rb') as stream:
+            yield from self._merge(stream, blocks, wanted)
+
+    def _merge(
+        self, stream: BinaryIO, blocks: list[Block], wanted: Mapping[int, str]
+    ) -> Iterator[list[Message]]:
+        """
+        Merge blocks that overlap in time, equal times in the order of the file.
+
+        A block is loaded when the messages before its start are through; `open_blocks` maps
+        its place in the file to its messages and to how many of them are through.
+        """
+        open_blocks: dict[int, tuple[list[Message], int]] = {}
+        for number, block in enumerate(blocks):
+            messages = self._load(stream, block, wanted)
+            if messages:
+                open_blocks[block.offset] = messages, 0
+            following = blocks[number + 1].start_ns if number + 1 < len(blocks) else None
+            batch = _take_before(open_blocks, following)
+            if batch:
+                yield batch
+
+    def _load(self, stream: BinaryIO, block: Block, wanted: Mapping[int, str]) -> list[Message]:
+        stream.seek(block.offset)
+        data = stream.read(block.size)
+        try:
+            if block.is_chunk:
+                if len(data) < block.size or data[:1] != b'\x06':
+                    raise mc.DamagedError('is not where the summary says')
+                data = mc.chunk_records(data[mc.PREFIX.size :], partial=block.partial)
+            walked = mc.walk_messages(data, wanted)
+        except mc.DamagedError as error:
+            add_note(self.notes, damage_note(self.path, block.offset, str(error)))
+            return []
+        if walked.unread and not block.partial:
+            add_note(
+                self.notes,
+                f'A chunk of {self.path.name} at byte {block.offset} ends inside a record; its '
+                'complete messages are used.',
+            )
+        if not walked.in_order:
+            walked.messages.sort(key=_LOG_NS)
+        return walked.messages
+
+    def _add_channel(self, layout: Layout, channel_id: int) -> None:
+        channel = layout.channels[channel_id]
+        schema = layout.schemas.get(channel.schema_id)
+        type_name = schema.name if schema else ''
+        kind = definition_format(schema.encoding) if schema else ''
+        count = layout.counts.get(channel_id, 0)
+        known = self.topics.get(channel.topic)
+        if known is None:
+            self.topics[channel.topic] = TopicInfo(
+                channel.topic,
+                type_name,
+                schema.data.decode('utf-8', 'replace') if schema and kind else '',
+                kind,
+                read_qos(channel.metadata.get('offered_qos_profiles')),
+                count,
+                channel.message_encoding,
+                channel.metadata.get('topic_type_hash', ''),
+            )
+        elif (known.type_name, known.encoding) == (type_name, channel.message_encoding):
+            self.topics[channel.topic] = _with_more(known, count)
+        else:
+            self.notes.append(
+                f'Topic {channel.topic} of {self.path.name} occurs as {known.type_name} and as '
+                f'{type_name} ({channel.message_encoding}); the latter is left out.'
+            )
+            return
+        self._topic_of[channel_id] = channel.topic
+
+
+def _with_more(topic: TopicInfo, count: int) -> TopicInfo:
+    return replace(topic, message_count=(topic.message_count or 0) + count)
+
+
+def _take_before(
+    open_blocks: dict[int, tuple[list[Message], int]], cutoff: int | None
+) -> list[Message]:
+    """Take the messages before `cutoff` (all of them if None) out of the open blocks."""
+    parts: list[list[Message]] = []
+    for offset in sorted(open_blocks):
+        messages, start = open_blocks[offset]
+        stop = len(messages)
+        if cutoff is not None and messages[-1].log_ns >= cutoff:
+            stop = bisect_left(messages, cutoff, start, key=_LOG_NS)
+        if stop > start:
+            parts.append(messages if stop - start == len(messages) else messages[start:stop])
+        if stop == len(messages):
+            del open_blocks[offset]
+        else:
+            open_blocks[offset] = messages, stop
+    if len(parts) < 2:
+        return parts[0] if parts else []
+    # Stable: equal log times keep the order of the file.
+    return sorted((message for part in parts for message in part), key=_LOG_NS)
