@@ -180,6 +180,7 @@ def rcl():
     yield worker
     worker.process.stdin.close()
     worker.process.wait(timeout=30)
+    worker.process.stdout.close()
 
 
 def same(left: object, right: object) -> bool:
