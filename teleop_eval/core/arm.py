@@ -415,7 +415,9 @@ class ArmEvaluator:
         """Close what is there, the last window as far as it goes."""
         while self.time_base is not None and self.period_ns is not None:
             lasts = [stream.last_ns for stream in self._closing() if stream.last_ns is not None]
-            cells = (max(lasts, default=0) - self._closed_until_ns) // self.period_ns
+            # The last cell may end beyond the last sample: the grid masks it, but the joint
+            # error, which is not gridded, still sees that sample.
+            cells = (max(lasts, default=0) - self._closed_until_ns) // self.period_ns + 1
             if cells <= 0:
                 return
             self._close(min(int(cells), self._window_cells), receive_ns)

@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+import re
 from collections import Counter, deque
 from dataclasses import dataclass
 
@@ -69,6 +70,7 @@ class DelayStatistics:
         self._free_from_ns: int | None = None
         self.windows = 0
         self._reasons: Counter[str] = Counter()
+        self._sentence: dict[str, str] = {}
         self._space = ''
 
     def add(self, estimate: DelayEstimate, start_ns: int, end_ns: int, space: str) -> None:
@@ -81,7 +83,10 @@ class DelayStatistics:
             self._estimates.append(estimate)
             self._free_from_ns = end_ns
         else:
-            self._reasons[estimate.reason] += 1
+            # Sentences differ in their numbers; the same words are the same reason.
+            words = re.sub(r'[0-9.]+', '#', estimate.reason)
+            self._reasons[words] += 1
+            self._sentence[words] = estimate.reason
 
     def restart(self) -> None:
         """Forget the time axis, as at the start of a segment."""
@@ -97,9 +102,10 @@ class DelayStatistics:
         if not self._estimates:
             if not self._reasons:
                 return missing(INSUFFICIENT, 's', reason, **details)
-            common, times = self._reasons.most_common(1)[0]
-            return missing(UNOBSERVABLE, 's', f'{common} (in {times} of {self.windows} windows)',
-                           **details)
+            words, times = self._reasons.most_common(1)[0]
+            return missing(
+                UNOBSERVABLE, 's', f'{self._sentence[words]} (in {times} of {self.windows} '
+                'windows that gave no value)', **details)
         delays = np.array([estimate.delay_s for estimate in self._estimates])
         errors = np.array([estimate.standard_error_s for estimate in self._estimates])
         peaks = np.array([estimate.correlation for estimate in self._estimates])

@@ -247,11 +247,12 @@ class ArmMeasurement:
         for name, pair in self.pairs(label).items():
             if pair is None:
                 continue
-            if stop < self._latency_cells:
-                estimate = _too_short(stop * self._period_s, self._arm.settings.latency.window_s)
-            else:
-                estimate = self._estimate(pair, label, stop)
             self.spaces[name] = pair.space
+            if stop < self._latency_cells:
+                self.now[name].add(_too_short(
+                    stop * self._period_s, self._arm.settings.latency.window_s), span.end_ns)
+                continue
+            estimate = self._estimate(pair, label, stop)
             self.now[name].add(estimate, span.end_ns)
             self._accumulator(label).delays[name].add(
                 estimate, start_ns, span.end_ns, pair.space)

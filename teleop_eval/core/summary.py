@@ -6,7 +6,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.arm import UNKNOWN_UNIT, ArmEvaluator
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
@@ -58,7 +58,7 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
         if pairs[name] is None:
             found[name] = missing(NOT_CONFIGURED, 's', _why_no_pair(arm, name, no_ideal))
         else:
-            found[name] = delay.metric(caveat=caveat, reason='no latency window has closed')
+            found[name] = delay.metric(caveat=caveat, reason='the run is shorter than a latency window')
     why_delay = 'no delay was observed to compensate'
     reach = 1.0 if arm.robot is None else arm.robot.reach.length_m
     for prefix, one, reason, hint in (
@@ -103,6 +103,11 @@ def _joint_metrics(arm: ArmEvaluator, accumulator: Any, caveat: str) -> dict[str
                else 'the command is a tool pose, not joints')
         return {name: missing(NOT_CONFIGURED, metric.unit, why)
                 for name, metric in found.items()}
+    if len(arm.joint_names) > 1 and UNKNOWN_UNIT in arm.joint_units:
+        why = ('without a robot description nobody knows which joints turn and which slide; '
+               'see the value of each joint')
+        found = {name: metric if '.' in name else missing(NOT_CONFIGURED, metric.unit, why)
+                 for name, metric in found.items()}
     return found
 
 

@@ -22,8 +22,8 @@ class TransportAge:
     """
     Receive time minus header stamp of one input.
 
-    Ages may be negative, when the clocks are not synchronised; each sign has its histogram.
-    The smallest age of each window follows the clocks, since delays only add; its slope
+    Ages are counted from the first one, so that a clock that is off by a minute costs no
+    resolution, with one histogram for either side. The smallest age of each window follows the clocks, since delays only add; its slope
     over time is the drift.
     """
 
@@ -31,6 +31,7 @@ class TransportAge:
         self._positive = StreamingHistogram(floor=1e-6)
         self._negative = StreamingHistogram(floor=1e-6)
         self._minimum = math.inf
+        self._first: float | None = None
         self._pending: list[float] = []
         self._zero_stamps = 0
         # Count and sums of t, y, tt, ty, yy of the windows' minima: a line in constant memory.
@@ -52,20 +53,25 @@ class TransportAge:
             return
         ages = np.array(self._pending)
         self._pending.clear()
-        self._positive.add(ages[ages >= 0.0])
-        self._negative.add(-ages[ages < 0.0])
+        if self._first is None:
+            self._first = float(ages[0])
+        beyond = ages - self._first
+        self._positive.add(beyond[beyond >= 0.0])
+        self._negative.add(-beyond[beyond < 0.0])
         least = float(ages.min())
         self._minimum = min(self._minimum, least)
         t = (receive_ns - (self._origin_ns or 0)) / 1e9
         self._sums += [1.0, t, least, t * t, t * least, least * least]
 
     def _percentile(self, p: float) -> float:
-        """Return a percentile over both signs."""
+        """Return a percentile over both sides of the first age."""
+        first = self._first or 0.0
         below, above = self._negative.count, self._positive.count
         rank = p / 100.0 * (below + above)
         if rank < below:
-            return -self._negative.percentile(100.0 * (below - rank) / below)
-        return self._positive.percentile(100.0 * (rank - below) / above) if above else 0.0
+            return first - self._negative.percentile(100.0 * (below - rank) / below)
+        return first + (self._positive.percentile(100.0 * (rank - below) / above)
+                        if above else 0.0)
 
     def drift_s(self) -> float | None:
         """Return the change of the smallest age over the run, None if there is no drift."""
