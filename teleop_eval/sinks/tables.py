@@ -25,20 +25,16 @@ ABREAST, ABREAST_WITH_TRUTH = 3, 2
 NAME_WIDTH, UNIT_WIDTH, VALUE_WIDTH, TRUTH_WIDTH = 27, 7, 14, 6
 LONGEST_LABEL, LONGEST_SENTENCE = 60, 400
 NO_ENTRY = '-'
-# Rows in the order in which a practitioner asks; a name of none of these families comes last,
-# within a family those of ORDER first.
+# Rows in the order in which a practitioner asks; a name of none of these families comes last.
 FAMILIES = (
-    ('latency_',),
+    ('latency_s', 'latency_command_', 'latency_'),
     ('tracking_error_', 'orientation_error_', 'joint_error_'),
     ('workspace_', 'reach_', 'hull_', 'joint_range_', 'limit_', 'manipulability_'),
-    ('engage',),
+    ('engaged_time_', 'engagements', 'engagement_'),
 )
-ORDER = ('latency_s', 'tracking_error_rms_norm', 'tracking_error_p95_norm',
-         'tracking_error_max_norm', 'tracking_error_rms_m', 'tracking_error_p95_m',
-         'tracking_error_max_m', 'tracking_error_compensated_rms_norm',
-         'tracking_error_compensated_p95_norm', 'tracking_error_compensated_max_norm',
-         'joint_error_rms', 'joint_error_p95', 'reach_p50_norm', 'reach_p95_norm',
-         'reach_max_norm', 'manipulability_p5', 'engaged_time_s', 'engagements')
+# Within a family: plain before compensated, robot before operator, then by the first of these
+# words in the name, arm lengths before metres.
+WORDS = ('rms', 'p50', 'p95', 'max', 'p5', 'min', 'static', 'varying')
 STATUS_WORDS = {
     'unobservable': 'unobservable',
     'insufficient': 'insufficient',
@@ -237,11 +233,14 @@ def _names(metrics: Any) -> list[str]:
     return sorted((name for name in names if '.' not in name), key=_place)
 
 
-def _place(name: str) -> tuple[int, int, int, str]:
-    """Return the place of a metric: its group, its family, its rank there, its name."""
+def _place(name: str) -> tuple[object, ...]:
+    """Return the sorting key of a metric: group, family, variant, statistic, name."""
     families = FAMILIES[_group(name)] if _group(name) < len(FAMILIES) else ()
     family = next((place for place, start in enumerate(families) if name.startswith(start)), 0)
-    return _group(name), family, ORDER.index(name) if name in ORDER else len(ORDER), name
+    words = name.split('_')
+    variant = ('operator' in words, 'compensated' in words, words[-1] == 'm')
+    statistic = next((place for place, word in enumerate(WORDS) if word in words), len(WORDS))
+    return _group(name), family, variant, statistic, name
 
 
 def _group(name: str) -> int:

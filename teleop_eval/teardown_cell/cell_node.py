@@ -33,6 +33,7 @@ KEEP_INSIDE = (
 )
 # Longest sleep between looks at the stop flag and the inputs, s.
 SLICE_S = 0.002
+BEFORE_START_S = -1.0
 
 
 class CellNode:
@@ -56,14 +57,15 @@ class CellNode:
 
     def __init__(self, name: str, domain: int, *, parent: int = 0) -> None:
         """Confine this process and open the node."""
+        self._environment = dict(os.environ)
         guard.isolate(os.environ, domain)
         self.domain = domain
         self.full_name = f'{NAMESPACE}/{name}'
-        self._stop = False
+        self.signals = 0
         self._parent = parent
         self._next_watch = 0.0
-        for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
-            signal.signal(number, self._on_signal)
+        self._handlers = {number: signal.signal(number, self._on_signal)
+                          for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)}
         self._context = rclpy.Context()
         rclpy.init(args=['--ros-args', *KEEP_INSIDE], context=self._context,
                    domain_id=domain, signal_handler_options=SignalHandlerOptions.NO)
@@ -76,19 +78,21 @@ class CellNode:
         return self
 
     def __exit__(self, *_: object) -> None:
-        """Close node and context."""
+        """Close node and context, give back signals and environment."""
         self.node.destroy_node()
         self._context.try_shutdown()
+        for number, handler in self._handlers.items():
+            signal.signal(number, handler)
+        os.environ.clear()
+        os.environ.update(self._environment)
 
     def _on_signal(self, *_: object) -> None:
-        self._stop = True
+        self.signals += 1
 
     @property
     def stopped(self) -> bool:
         """Return whether a signal came or the parent process is gone."""
-        if self._parent and os.getppid() != self._parent:
-            self._stop = True
-        return self._stop
+        return self.signals > 0 or bool(self._parent and os.getppid() != self._parent)
 
     def nodes(self) -> list[tuple[str, str]]:
         """Return (name, namespace) of the visible nodes."""
@@ -113,16 +117,23 @@ class CellNode:
         """Return a subscription to drain with `take`."""
         return self.node.create_subscription(kind, topic, _never, qos)
 
-    def wait_for_start(self, idle: Callable[[], None]) -> int | None:
-        """Return the stamp at which the motion starts, None on a stop; `idle` is called."""
-        subscription = self.subscribe(Int64, START_TOPIC, LATCHED)
-        while not self.stopped:
-            for message in take(subscription):
-                return int(message.data)
-            self.watch()
-            idle()
-            time.sleep(SLICE_S)
-        return None
+
+class StartSignal:
+    """The latched stamp at which the motion begins."""
+
+    def __init__(self, cell: CellNode) -> None:
+        """Subscribe."""
+        self._subscription = cell.subscribe(Int64, START_TOPIC, LATCHED)
+        self._start_ns: int | None = None
+
+    def time_at(self, stamp_ns: int) -> float:
+        """Return s from the start; before the start is known, a time before it."""
+        if self._start_ns is None:
+            for message in take(self._subscription):
+                self._start_ns = int(message.data)
+        if self._start_ns is None:
+            return BEFORE_START_S
+        return (stamp_ns - self._start_ns) * 1e-9
 
 
 def take(subscription: Any) -> Iterator[Any]:

@@ -16,10 +16,12 @@ from std_msgs.msg import Bool, String
 from teleop_eval.resources import config_file
 from teleop_eval.teardown_cell.arm import arm_chain
 from teleop_eval.teardown_cell.cell_node import (
+    BEFORE_START_S,
     LATCHED,
     SAMPLED,
     SLICE_S,
     CellNode,
+    StartSignal,
     nanoseconds,
     run_node,
     stamp,
@@ -72,8 +74,9 @@ class Mapping:
         self._pairs = SamplePairs()
         self._waiting: deque[tuple[int, np.ndarray]] = deque()
         self._state: tuple[bool, str] | None = None
-        self._last_t = -np.inf
-        self.publish_state(-1.0)
+        self._last_ns = 0
+        self._start = StartSignal(cell)
+        self.publish_state(BEFORE_START_S)
 
     def publish_state(self, t: float) -> None:
         """Publish clutch and mapping when they change."""
@@ -83,16 +86,16 @@ class Mapping:
             self._engaged.publish(Bool(data=state[0]))
             self._state = state
 
-    def work(self, start_ns: int) -> None:
+    def work(self) -> None:
         """Turn the samples that wait into commands and send those that are due."""
         for kind, subscription in self._inputs:
             for message in take(subscription):
                 stamp_ns = nanoseconds(message.header.stamp)
                 pair = self._pairs.add(stamp_ns, kind, message)
                 if pair is not None:
-                    self._map(stamp_ns, (stamp_ns - start_ns) * 1e-9, pair)
+                    self._map(stamp_ns, pair)
         now = time.time_ns()
-        self.publish_state((now - start_ns) * 1e-9)
+        self.publish_state(self._start.time_at(now))
         while self._waiting and self._waiting[0][0] <= now:
             stamp_ns, positions = self._waiting.popleft()
             message = JointState(name=list(self._chain.joint_names),
@@ -100,13 +103,13 @@ class Mapping:
             message.header.stamp = stamp(stamp_ns)
             self._command.publish(message)
 
-    def _map(self, stamp_ns: int, t: float, pair: dict) -> None:
-        if t <= self._last_t:
+    def _map(self, stamp_ns: int, pair: dict) -> None:
+        if stamp_ns <= self._last_ns:
             return
-        self._last_t = t
+        self._last_ns = stamp_ns
         pose = pair['hand'].pose
         positions = self._commander.command(
-            t, joints=pair['joints'].position,
+            self._start.time_at(stamp_ns), joints=pair['joints'].position,
             hand=(pose.position.x, pose.position.y, pose.position.z),
             orientation=(pose.orientation.x, pose.orientation.y, pose.orientation.z,
                          pose.orientation.w))
@@ -119,9 +122,8 @@ def body(cell: CellNode, plan: Plan) -> None:
     """Look around, then map until stopped."""
     cell.look_around()
     mapping = Mapping(cell, plan)
-    start = cell.wait_for_start(lambda: None)
-    while start is not None and not cell.stopped:
-        mapping.work(start)
+    while not cell.stopped:
+        mapping.work()
         cell.watch()
         time.sleep(SLICE_S)
 

@@ -13,6 +13,7 @@ from sensor_msgs.msg import JointState
 from teleop_eval.teardown_cell.cell_node import (
     SAMPLED,
     CellNode,
+    StartSignal,
     run_node,
     sleep_until,
     stamp,
@@ -51,28 +52,24 @@ def joints_message(stamp_ns: int, state: OperatorState) -> JointState:
 
 
 def body(cell: CellNode, plan: Plan) -> None:
-    """Publish samples taken at, and stamped with, the exact deadlines."""
+    """Publish samples taken at, and stamped with, the exact deadlines; first at rest."""
     hand = cell.node.create_publisher(PoseStamped, HAND_TOPIC, SAMPLED)
     joints = cell.node.create_publisher(JointState, OPERATOR_JOINTS_TOPIC, SAMPLED)
     motion = OperatorMotion(plan.seed, plan.seconds)
-    start = cell.wait_for_start(lambda: None)
-    if start is None:
-        return
+    start = StartSignal(cell)
     period = round(1e9 / plan.timing.operator_rate_hz)
-    index = 0
+    due = time.time_ns()
     while not cell.stopped:
-        due = start + index * period
         now = time.time_ns()
         if now < due:
             sleep_until(due)
             continue
         if now - due > CATCH_UP_NS:
-            index = (now - start) // period
-            continue
-        state = motion.at([(due - start) * 1e-9])
+            due += (now - due) // period * period
+        state = motion.at([max(start.time_at(due), 0.0)])
         hand.publish(hand_message(due, state))
         joints.publish(joints_message(due, state))
-        index += 1
+        due += period
         cell.watch()
 
 
