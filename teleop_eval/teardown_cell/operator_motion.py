@@ -135,7 +135,10 @@ class OperatorMotion:
     def _draw_tones(self, random: np.random.Generator) -> None:
         """Draw unit-variance noise per axis: tones in a band, amplitude falling as 1/f."""
         low, high = MOTOR_BAND_HZ
-        self._tone_hz = random.uniform(low, high, (MOTOR_TONES, 6))
+        # One tone in each of equal parts of the band, apart from its neighbours: two tones of
+        # nearly one frequency would beat for minutes.
+        places = np.arange(MOTOR_TONES)[:, None] + random.uniform(0.1, 0.9, (MOTOR_TONES, 6))
+        self._tone_hz = low + (high - low) * places / MOTOR_TONES
         self._tone_phase = random.uniform(0.0, 2.0 * np.pi, (MOTOR_TONES, 6))
         amplitude = 1.0 / self._tone_hz
         self._tone = amplitude / np.sqrt(np.sum(amplitude**2, axis=0) / 2.0)
