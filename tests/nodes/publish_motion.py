@@ -25,7 +25,7 @@ from teleop_eval.core.urdf import parse_urdf
 
 RATE_HZ = 100.0
 COMMAND_DELAY_S, ROBOT_DELAY_S = 0.01, 0.08
-CENTRE = np.array([0.1, -0.4, 0.9, 0.0, 0.3, 0.0])
+CENTRE = np.array([0.1, 0.4, -0.9, 0.0, 0.3, 0.0])
 
 
 def motion(t: float) -> np.ndarray:
@@ -60,19 +60,15 @@ def main() -> None:
     while hand.get_subscription_count() == 0 or robot.get_subscription_count() == 0:
         time.sleep(0.05)
     start = time.time()
-    switched = opened = False
+    # What is published once, and when: the clutch opens, the mapping changes, it closes.
+    plan = [(seconds / 2 - 0.5, lambda: engaged.publish(Bool(data=False))),
+            (seconds / 2, lambda: mapping.publish(String(data='reach'))),
+            (seconds / 2 + 0.5, lambda: engaged.publish(Bool(data=True)))]
     for k in range(int(seconds * RATE_HZ)):
         t = k / RATE_HZ
         time.sleep(max(0.0, start + t - time.time()))
-        if t > seconds / 2 - 0.5 and not opened:
-            engaged.publish(Bool(data=False))
-            opened = True
-        if t > seconds / 2 and not switched:
-            mapping.publish(String(data='reach'))
-            switched = True
-        if t > seconds / 2 + 0.5 and opened and switched:
-            engaged.publish(Bool(data=True))
-            opened = False
+        while plan and t > plan[0][0]:
+            plan.pop(0)[1]()
         stamp = node.get_clock().now().to_msg()
         for publisher, prefix, delay in ((operator, 'o_', 0.0), (command, '', COMMAND_DELAY_S),
                                          (robot, '', COMMAND_DELAY_S + ROBOT_DELAY_S)):
