@@ -79,6 +79,8 @@ def main(argv: Sequence[str] | None = None) -> int:
     if not MIN_SECONDS <= plan.seconds <= MAX_SECONDS:
         raise UsageError(f'--seconds is {plan.seconds:g}, but must be {MIN_SECONDS:g} to '
                          f'{MAX_SECONDS:g}: each half needs time to be measured in.')
+    if plan.seed < 0:
+        raise UsageError(f'--seed is {plan.seed}, but must not be negative.')
     with CellNode('demo', options.domain) as cell:
         session = _free_session(options.out)
         _look(cell)
