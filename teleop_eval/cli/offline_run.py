@@ -6,14 +6,16 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
+from functools import partial
 from itertools import islice
+from operator import itemgetter
 from pathlib import Path
 from typing import Any
 
 from teleop_eval.cli.interruption import Interruption
 from teleop_eval.cli.progress import Progress
 from teleop_eval.cli.recorded_inputs import RecordedInputs
-from teleop_eval.core.errors import OutputError, TeleopEvalError
+from teleop_eval.core.errors import InputError, OutputError, TeleopEvalError
 from teleop_eval.core.evaluator import EVENT_TOPIC, SessionEvaluator
 from teleop_eval.core.settings import Settings
 from teleop_eval.sinks import messages
@@ -25,6 +27,7 @@ from teleop_eval.sources.recording import Recording, open_recording
 # Messages that are sorted together; it keeps the cost of a batch small against that of its
 # messages. Equal times are never parted, so the number does not reach the results.
 _BATCH = 256
+_TOPIC = itemgetter(1)
 _DIAGNOSTICS_NS = 1_000_000_000
 
 
@@ -74,6 +77,7 @@ class OfflineRun:
         self._first_ns: int | None = None
         self._last_ns: int | None = None
         self._next_diagnostics_ns = 0
+        self._failure: OutputError | None = None
 
     def run(self) -> Outcome:
         """
@@ -94,17 +98,15 @@ class OfflineRun:
             folder = SessionFolder(
                 self._out, self._settings, self._flat, source=self._source,
                 descriptions=self._descriptions, resolve=self._resolve)
-            problems, failure = list(inputs.problems), None
+            problems = list(inputs.problems)
             with Interruption() as interruption:
                 try:
                     self._feed(recording, inputs, evaluator, folder, interruption)
-                except OutputError as error:
-                    failure = error
                 except TeleopEvalError as error:
                     problems.append(f'Reading stopped: {error}')
                 if interruption.wanted:
                     problems.append(self._interrupted(recording))
-                return self._finish(evaluator, folder, problems=problems, failure=failure,
+                return self._finish(evaluator, folder, problems=problems,
                                     notes=[*recording.notes, *inputs.malformed()])
 
     def _feed(self, recording: Recording, inputs: RecordedInputs, evaluator: SessionEvaluator,
@@ -112,21 +114,24 @@ class OfflineRun:
         order = FeedOrder(EVENT_TOPIC, messages.string('segment'))
         total = sum(recording.topics[name].message_count or 0
                     for name in inputs.topics if name in recording.topics)
-        done = 0
+        done, decoders = 0, inputs.decoders
         with Progress(f'Reading {self._path.name}', total, enabled=self._progress) as progress:
             for batch in _batches(recording, inputs):
                 # Messages of the last time wait for others of that time in the next batch.
                 cut_ns = batch[-1].receive_ns - 1 if batch else None
                 for receive_ns, topic, _, data in order.order(batch, cut_ns=cut_ns):
-                    sample = inputs.decode(topic, data)
-                    if sample is not None:
-                        evaluator.add(receive_ns, topic, sample)
+                    try:
+                        sample = decoders[topic](data)
+                    except InputError as error:
+                        inputs.refuse(topic, error)
+                        continue
+                    evaluator.add(receive_ns, topic, sample)
                     if receive_ns >= self._next_diagnostics_ns:
                         self._second(receive_ns, evaluator, folder)
                     self._last_ns = receive_ns
+                inputs.read.update(map(_TOPIC, batch))
                 done += len(batch)
-                for window in evaluator.poll():
-                    folder.window(window)
+                self._windows(evaluator, folder)
                 progress.update(done)
                 if interruption.wanted:
                     return
@@ -137,14 +142,24 @@ class OfflineRun:
         if self._first_ns is None:
             self._first_ns = receive_ns
         else:
-            for window in evaluator.poll():
-                folder.window(window)
-            folder.diagnostics(receive_ns, evaluator.diagnostics(receive_ns))
+            self._windows(evaluator, folder)
+            lines = evaluator.diagnostics(receive_ns)
+            self._write(lambda: folder.diagnostics(receive_ns, lines))
         self._next_diagnostics_ns = receive_ns + _DIAGNOSTICS_NS
 
+    def _windows(self, evaluator: SessionEvaluator, folder: SessionFolder) -> None:
+        for window in evaluator.poll():
+            self._write(partial(folder.window, window))
+
+    def _write(self, action: Callable[[], object]) -> None:
+        """Go on when a write fails: the summary, which comes last, may still be written."""
+        try:
+            action()
+        except OutputError as error:
+            self._failure = self._failure or error
+
     def _finish(self, evaluator: SessionEvaluator, folder: SessionFolder, *,
-                problems: list[str], failure: OutputError | None,
-                notes: list[str]) -> Outcome:
+                problems: list[str], notes: list[str]) -> Outcome:
         """
         Write what there is, whatever went wrong before.
 
@@ -155,20 +170,15 @@ class OfflineRun:
 
         """
         summary = evaluator.finish()
-        failures = [] if failure is None else [failure]
-        try:
-            for window in evaluator.poll():
-                folder.window(window)
-        except OutputError as error:
-            failures.append(error)
+        self._windows(evaluator, folder)
         try:
             whole = folder.finish(
                 summary, start_ns=self._first_ns, end_ns=self._last_ns,
                 notes=[*notes, *evaluator.notes], problems=[*problems, *evaluator.problems])
         except OutputError as error:
-            failures.append(error)
-        if failures:
-            raise OutputError(' '.join(dict.fromkeys(map(str, failures))))
+            raise self._failure or error from error
+        if self._failure is not None:
+            raise self._failure
         return Outcome(folder.path, whole, whole['problems'])
 
     def _interrupted(self, recording: Recording) -> str:

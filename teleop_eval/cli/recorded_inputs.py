@@ -5,6 +5,7 @@
 from __future__ import annotations
 
 import difflib
+from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from typing import Protocol
 
@@ -62,6 +63,10 @@ class RecordedInputs:
     ----------
     topics
         Topics to read.
+    decoders
+        By topic: bytes to a sample, or InputError.
+    read
+        Number of messages read so far, by topic; the reader counts.
     problems
         A sentence for each configured topic that the recording lacks.
 
@@ -78,8 +83,8 @@ class RecordedInputs:
                  event_topic: str, supported: Mapping[str, Iterable[str]],
                  make_decoder: Callable[..., Decoder]) -> None:
         self.problems: list[str] = []
-        self._decoders: dict[str, Decoder] = {}
-        self._counts: dict[str, int] = {}
+        self.decoders: dict[str, Decoder] = {}
+        self.read: Counter[str] = Counter()
         self._failures: dict[str, tuple[int, str]] = {}
         for topic, uses in routes.items():
             info = recording.topics.get(topic)
@@ -89,34 +94,29 @@ class RecordedInputs:
             _check(info, uses, recording, supported)
             enabled_field = _enabled_field(topic, uses)
             try:
-                self._decoders[topic] = make_decoder(
+                self.decoders[topic] = make_decoder(
                     info.type_name, definition=info.definition,
                     definition_format=info.definition_format or 'ros2msg',
                     enabled_field=enabled_field)
             except InputError as error:
                 raise InputError(f'Topic {topic} of {recording.path}: {error}') from error
-        if not self._decoders:
+        if not self.decoders:
             raise RecordingError(_nothing(recording, routes))
         events = recording.topics.get(event_topic)
-        self.topics = tuple(self._decoders)
+        self.topics = tuple(self.decoders)
         if events is not None and events.type_name == messages.STRING:
             self.topics += (event_topic,)
         # The order of the feed makes such events itself, also where none was recorded.
-        self._decoders[event_topic] = make_decoder(messages.STRING)
+        self.decoders[event_topic] = make_decoder(messages.STRING)
 
-    def decode(self, topic: str, data: bytes) -> Sample | None:
-        """Return the sample of a message, None where the message is malformed (counted)."""
-        self._counts[topic] = self._counts.get(topic, 0) + 1
-        try:
-            return self._decoders[topic](data)
-        except TeleopEvalError as error:
-            count, first = self._failures.get(topic, (0, str(error)))
-            self._failures[topic] = (count + 1, first)
-            return None
+    def refuse(self, topic: str, error: TeleopEvalError) -> None:
+        """Count a message that its decoder refused."""
+        count, first = self._failures.get(topic, (0, str(error)))
+        self._failures[topic] = (count + 1, first)
 
     def malformed(self) -> list[str]:
         """Return a sentence for each topic with messages that could not be decoded."""
-        return [f'{count} of {self._counts[topic]} messages on {topic} cannot be decoded and are '
+        return [f'{count} of {self.read[topic]} messages on {topic} cannot be decoded and are '
                 f'left out; the first because: {first.rstrip(".")}.'
                 for topic, (count, first) in self._failures.items()]
 

@@ -158,12 +158,10 @@ def _namespace(text: str) -> str:
 
 
 def _print(outcome: Outcome) -> None:
-    from rich.console import Console
-
-    from teleop_eval.sinks.tables import summary_table
+    from teleop_eval.sinks.tables import print_summary
 
     # Problems go to standard error, so that they are seen when the table goes into a file.
-    Console().print(summary_table({**outcome.summary, 'problems': []}))
+    print_summary({**outcome.summary, 'problems': []})
     print(f'\nResults: {one_line(str(outcome.folder))}')
     sys.stdout.flush()
     for problem in outcome.problems:

@@ -10,7 +10,9 @@ killed leaves what it had measured. The end adds summary.json and metrics.csv.
 from __future__ import annotations
 
 import math
+import shutil
 from collections.abc import Callable, Mapping, Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -82,15 +84,20 @@ class SessionFolder:
         self._origins: dict[str, int] = {}
         self._clock: tuple[int, int] | None = None
         self._finished = False
-        make_empty(self.path)
-        for name, text in session_config(flat, descriptions or {}, resolve, CONFIG_FILE).items():
-            write_atomically(self.path / name, text)
         self._windows = WindowTable(self.path / WINDOWS_FILE)
         self._bags: dict[str, BagWriter] = {}
         self._topics: dict[str, dict[str, str]] = {SUMMARY_BAG: {}, INPUTS_BAG: {}}
-        for name in (SUMMARY_BAG, INPUTS_BAG) if record_inputs else (SUMMARY_BAG,):
-            self._bags[name] = BagWriter(self.path / name, custom_data={
-                'teleop_eval.source': messages.clean_text(source)})
+        config = session_config(flat, descriptions or {}, resolve, CONFIG_FILE)
+        make_empty(self.path)
+        try:
+            for name, text in config.items():
+                write_atomically(self.path / name, text)
+            for name in (SUMMARY_BAG, INPUTS_BAG) if record_inputs else (SUMMARY_BAG,):
+                self._bags[name] = BagWriter(self.path / name, custom_data={
+                    'teleop_eval.source': messages.clean_text(source)})
+        except OutputError:
+            self._abandon(config)
+            raise
 
     def announce_input(self, topic: str, type_name: str, *,
                        qos: Sequence[Mapping[str, object]] = (), definition: str = '') -> None:
@@ -220,6 +227,16 @@ class SessionFolder:
         if failures:
             raise OutputError('; '.join(failures) + '.')
         return whole
+
+    def _abandon(self, config: Mapping[str, str]) -> None:
+        """Take back what a failed start has made, so that a second try finds it empty."""
+        with suppress(OutputError, OSError):
+            for bag in self._bags.values():
+                bag.close()
+        for name in config:
+            (self.path / name).unlink(missing_ok=True)
+        for name in (SUMMARY_BAG, INPUTS_BAG):
+            shutil.rmtree(self.path / name, ignore_errors=True)
 
     def _document(self, summary: Mapping[str, Any], start_ns: int | None, end_ns: int | None, *,
                   notes: Sequence[str], problems: Sequence[str]) -> dict[str, Any]:

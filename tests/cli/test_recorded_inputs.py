@@ -50,8 +50,9 @@ def test_topic_that_fits_is_decoded_and_events_are_known(recording):
     made = inputs(recording, {'/cell/engaged': (Route('right', 'engaged'),)})
     assert made.topics == ('/cell/engaged',)
     assert made.problems == [] and made.malformed() == []
-    assert made.decode('/cell/engaged', b'\x00\x01\x00\x00\x01') == BoolSample(True)
-    assert made.decode(EVENTS, messages.string('segment')) == TextSample('segment')
+    decode = made.decoders['/cell/engaged']
+    assert decode(b'\x00\x01\x00\x00\x01') == BoolSample(True)
+    assert made.decoders[EVENTS](messages.string('segment')) == TextSample('segment')
 
 
 def test_absent_topic_names_its_use_and_the_nearest(recording):
@@ -86,9 +87,11 @@ def test_two_enabled_fields_on_one_topic_are_refused(recording):
 
 def test_malformed_messages_are_counted_with_the_first_reason(recording):
     made = inputs(recording, {'/cell/engaged': (Route('right', 'engaged'),)})
-    assert made.decode('/cell/engaged', b'123') is None
-    assert made.decode('/cell/engaged', b'') is None
-    assert made.decode('/cell/engaged', b'\x00\x01\x00\x00\x00') == BoolSample(False)
+    for data in (b'123', b''):
+        with pytest.raises(InputError) as refused:
+            made.decoders['/cell/engaged'](data)
+        made.refuse('/cell/engaged', refused.value)
+    made.read.update(['/cell/engaged'] * 3)
     [sentence] = made.malformed()
     assert sentence.startswith('2 of 3 messages on /cell/engaged cannot be decoded and are left '
                                'out; the first because: ')

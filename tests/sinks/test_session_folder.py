@@ -219,6 +219,21 @@ def test_folder_that_holds_something_is_refused(tmp_path):
         make(str(tmp_path) + '/a\x00b')
 
 
+def test_start_that_fails_leaves_the_folder_empty(tmp_path, monkeypatch):
+    real = session_folder.BagWriter
+
+    def full(folder, **kwargs):
+        if folder.name == 'inputs':
+            raise OutputError(f'{folder} is full.')
+        return real(folder, **kwargs)
+
+    monkeypatch.setattr(session_folder, 'BagWriter', full)
+    with pytest.raises(OutputError, match='inputs is full'):
+        make(tmp_path / 's', record_inputs=True, descriptions={'right': '<robot/>'})
+    assert list((tmp_path / 's').iterdir()) == []
+    make(tmp_path / 's').finish(summary())
+
+
 def test_one_failure_at_the_end_spoils_nothing_else(tmp_path):
     folder = make(tmp_path / 's', record_inputs=True)
     folder.input('/engaged', 'std_msgs/msg/Bool', START, b'\x00\x01\x00\x00\x01')
