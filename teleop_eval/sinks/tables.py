@@ -13,7 +13,7 @@ import math
 import re
 import unicodedata
 from collections.abc import Mapping, Sequence
-from typing import Any
+from typing import Any, TypeGuard
 
 from rich.box import SIMPLE_HEAD
 from rich.console import Console, Group, RenderableType
@@ -131,7 +131,7 @@ def _heading(session: Mapping[str, Any]) -> Text:
     facts = [clean(str(session[key])) for key in ('condition', 'operator', 'source')
              if session.get(key)]
     if _finite(duration):
-        facts.append(f'{float(duration):.1f} s')
+        facts.append(f'{duration:.1f} s')
     if facts:
         text.append('  ' + ', '.join(facts))
     return text
@@ -193,7 +193,7 @@ def _cell(metric: Any, remarks: _Remarks) -> Text:
         return Text(NO_ENTRY)
     value, reason = metric.get('value'), str(metric.get('reason') or '')
     if metric.get('status') == 'ok' and _finite(value):
-        text = Text(number(float(value)))
+        text = Text(number(value))
         interval = metric.get('ci95')
         if _is_pair(interval):
             low, high = (number(float(end)) for end in interval)
@@ -209,7 +209,7 @@ def _cell(metric: Any, remarks: _Remarks) -> Text:
 
 def _true_cell(of_mapping: Mapping[str, Any], name: str) -> Text:
     value = _mapping(of_mapping.get('metrics')).get(name)
-    return Text(number(float(value))) if _finite(value) else Text('')
+    return Text(number(value)) if _finite(value) else Text('')
 
 
 def _truth_sentence(truth: Mapping[str, Any]) -> Text:
@@ -273,7 +273,7 @@ def _mapping(value: Any) -> Mapping[str, Any]:
     return value if isinstance(value, Mapping) else {}
 
 
-def _finite(value: Any) -> bool:
+def _finite(value: Any) -> TypeGuard[float]:
     return (isinstance(value, int | float) and not isinstance(value, bool)
             and math.isfinite(value))
 

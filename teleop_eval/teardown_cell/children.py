@@ -14,7 +14,8 @@ from pathlib import Path
 
 from teleop_eval.core.errors import TeleopEvalError
 
-TERMINATE_S = 5.0
+# The evaluator closes its files when it is told to end; the others end at once.
+TERMINATE_S = 20.0
 
 
 class ChildEndedError(TeleopEvalError):

@@ -45,6 +45,8 @@ def isolate(environment: MutableMapping[str, str], domain: int) -> None:
     for name in WIDENING:
         environment.pop(name, None)
     environment['ROS_AUTOMATIC_DISCOVERY_RANGE'] = 'LOCALHOST'
+    if environment.get('ROS_DISTRO') in ('foxy', 'galactic', 'humble'):
+        environment['ROS_LOCALHOST_ONLY'] = '1'  # they do not know the discovery range yet
     environment['ROS_DOMAIN_ID'] = str(domain)
 
 
@@ -101,7 +103,8 @@ def refuse_second_cell(nodes: Iterable[tuple[str, str]], own: str, domain: int) 
     """
     names = [full_name(*node) for node in nodes]
     others = sorted(name for name in names if name.startswith(NAMESPACE + '/'))
-    others.remove(own)
+    if own in others:
+        others.remove(own)  # once: a second demo has the same name
     if others:
         raise CellRefusedError(
             f'Another teardown cell runs in domain {domain} ({", ".join(others[:5])}); choose '

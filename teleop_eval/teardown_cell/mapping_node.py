@@ -73,18 +73,20 @@ class Mapping:
                         ('joints', cell.subscribe(JointState, OPERATOR_JOINTS_TOPIC, SAMPLED)))
         self._pairs = SamplePairs()
         self._waiting: deque[tuple[int, np.ndarray]] = deque()
-        self._state: tuple[bool, str] | None = None
+        self._engaged_now: bool | None = None
+        self._active_now: str | None = None
         self._last_ns = 0
         self._start = StartSignal(cell)
         self.publish_state(BEFORE_START_S)
 
     def publish_state(self, t: float) -> None:
         """Publish clutch and mapping when they change."""
-        state = (self._plan.engaged(t), self._plan.mapping(t))
-        if state != self._state:
-            self._active.publish(String(data=state[1]))
-            self._engaged.publish(Bool(data=state[0]))
-            self._state = state
+        engaged, active = self._plan.engaged(t), self._plan.mapping(t)
+        if active != self._active_now:
+            self._active.publish(String(data=active))
+        if engaged != self._engaged_now:
+            self._engaged.publish(Bool(data=engaged))
+        self._engaged_now, self._active_now = engaged, active
 
     def work(self) -> None:
         """Turn the samples that wait into commands and send those that are due."""

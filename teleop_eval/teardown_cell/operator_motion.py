@@ -118,7 +118,9 @@ class OperatorMotion:
         return OperatorState(hand, orientation, joints)
 
     def _plan_reaches(self, random: np.random.Generator, duration_s: float) -> None:
-        order, begin, length = [0], [], []
+        order = [0]
+        begin: list[float] = []
+        length: list[float] = []
         clock = 0.0
         while clock < duration_s or not begin:
             goal = int(random.integers(len(HANDLES_M) - 1))

@@ -84,19 +84,25 @@ def main(argv: Sequence[str] | None = None) -> int:
     with CellNode('demo', options.domain) as cell:
         session = _free_session(options.out)
         _look(cell)
-        with tempfile.TemporaryDirectory(prefix='teardown_cell_') as logs:
-            with Children(Path(logs), os.environ) as children:
-                _start_children(children, cell, plan, session)
-                begun = _wait_until_ready(children, cell)
-                finished = begun and _run(children, cell, plan)
-                if begun:
-                    _say('The evaluator finishes its files ...')
-                    children.finish(EVALUATOR, patience_s=EVALUATOR_END_S,
-                                    hurry=lambda: cell.signals > 1)
-    if not begun:
+        finished = None if cell.stopped else _session(cell, plan, session)
+    if finished is None:
         _say('Interrupted before the start: nothing was measured.')
         return 1
     return _report(session, plan, finished)
+
+
+def _session(cell: CellNode, plan: Plan, session: Path) -> bool | None:
+    """Run all processes; return whether the end was reached, None without a start."""
+    with tempfile.TemporaryDirectory(prefix='teardown_cell_') as logs:
+        with Children(Path(logs), os.environ) as children:
+            _start_children(children, cell, plan, session)
+            if not _wait_until_ready(children, cell):
+                return None
+            finished = _run(children, cell, plan)
+            _say('The evaluator finishes its files ...')
+            children.finish(EVALUATOR, patience_s=EVALUATOR_END_S,
+                            hurry=lambda: cell.signals > 1)
+            return finished
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -146,7 +152,7 @@ def _look(cell: CellNode) -> None:
         guard.refuse_second_cell(cell.nodes(), cell.full_name, cell.domain)
 
     guard.look_around(check, lambda: cell.stopped)
-    _say(f'Domain {cell.domain} is free. To listen, in another terminal:\n'
+    _say(f'Domain {cell.domain} is free. To listen, in another terminal with ROS 2:\n'
          f'  ROS_DOMAIN_ID={cell.domain} ROS_AUTOMATIC_DISCOVERY_RANGE=LOCALHOST '
          f'ros2 topic echo {DIAGNOSTICS_TOPIC}')
 

@@ -61,6 +61,12 @@ def test_discovery_is_limited_to_this_machine():
         'RMW_IMPLEMENTATION': 'rmw_fastrtps_cpp', 'PATH': '/bin'}
 
 
+def test_old_distributions_are_confined_in_their_own_way():
+    environment = {'ROS_DISTRO': 'humble'}
+    guard.isolate(environment, 42)
+    assert environment['ROS_LOCALHOST_ONLY'] == '1'
+
+
 @pytest.mark.parametrize('domain', [0, -1, 102, 232])
 def test_a_domain_that_is_not_its_own_is_a_usage_error(domain):
     with pytest.raises(UsageError, match='1 to 101'):
