@@ -194,8 +194,9 @@ class TopicInput:
                     return False
                 data, info = taken
                 number = info.get('publication_sequence_number')
-                if seen is not None:
-                    key = (info['source_timestamp'], number)
+                sent_ns = info['source_timestamp']
+                if seen is not None and sent_ns:
+                    key = (sent_ns, number)
                     if key in seen:
                         continue
                     seen.add(key)
