@@ -81,7 +81,7 @@ class FeedOrder:
                 arrived = arrived[:held] + [
                     item for item in arrived[held:] if item.receive_ns <= cut_ns]
         arrived.sort()
-        return self._give_out(arrived)
+        return self._give_out_steady(arrived)
 
     def feed_time_ns(self, clock_ns: int) -> int:
         """Return a reading of the receive clock as time of the sequence, never going back."""
@@ -115,6 +115,24 @@ class FeedOrder:
             keyed.append((parts.get(topic, 0), item))
         keyed.sort()
         return [item for _, item in keyed]
+
+    def _give_out_steady(self, items: list[Received]) -> list[Received]:
+        """Give out sorted messages among which the clock does not step: nearly always."""
+        if not items:
+            return []
+        latest = items[-1].receive_ns
+        self._clock_ns = latest if self._clock_ns is None else max(latest, self._clock_ns)
+        offset, last = self.offset_ns, self._last_ns
+        out: list[Received] = []
+        for item in items:
+            time_ns = item.receive_ns + offset
+            if last is not None and time_ns <= last:
+                time_ns = last + 1
+            last = time_ns
+            out.append(item if time_ns == item.receive_ns
+                       else Received(time_ns, item.topic, item.number, item.data))
+        self._last_ns = last
+        return out
 
     def _give_out(self, items: list[Received]) -> list[Received]:
         out: list[Received] = []
