@@ -33,6 +33,14 @@ class Series:
 
 
 @dataclass(frozen=True)
+class Transform:
+    """Spectra of a series' values, energy and mask, (frequencies, d + 2), padded to `size`."""
+
+    spectra: np.ndarray
+    size: int
+
+
+@dataclass(frozen=True)
 class LagCorrelation:
     """
     Normalised correlation by lag.
@@ -54,8 +62,16 @@ class Peak:
     height: float
 
 
+def transform(series: Series, reach: int) -> Transform:
+    """Transform a series once for correlations up to `reach` lags on either side."""
+    size = next_fast_len(len(series.valid) + reach + 1, True)
+    energy = np.einsum('nd,nd->n', series.values, series.values)[:, None]
+    stacked = np.concatenate([series.values, energy, series.valid[:, None]], axis=1)
+    return Transform(rfft(stacked, size, axis=0), size)
+
+
 def correlate_lags(
-    reference: Series, response: Series, first_lag: int, last_lag: int, *, min_pairs: int
+    reference: Transform, response: Transform, first_lag: int, last_lag: int, *, min_pairs: int
 ) -> LagCorrelation:
     """
     Correlate at every lag, each with all its pairs, means removed, dimensions summed.
@@ -63,25 +79,22 @@ def correlate_lags(
     Parameters
     ----------
     reference, response
-        Series of equal shape.
+        Transforms of two series of one shape, both with a reach that covers the lags.
     first_lag, last_lag
         Range of lags in samples, both included.
     min_pairs
         Lags with fewer pairs are NaN.
 
     """
-    size = next_fast_len(len(reference.valid) + max(abs(first_lag), abs(last_lag)) + 1, True)
-    width = reference.values.shape[1]
-    first, second = _spectra(reference, size), _spectra(response, size)
-    conjugate = first.conj()
-    products = np.concatenate([
-        np.sum(conjugate[:, :width] * second[:, :width], axis=1, keepdims=True),
-        conjugate[:, -2:-1] * second[:, -1:],
-        conjugate[:, -1:] * second[:, -2:-1],
-        conjugate[:, -1:] * second[:, -1:],
-        conjugate[:, :width] * second[:, -1:],
-        conjugate[:, -1:] * second[:, :width],
-    ], axis=1)
+    size, width = reference.size, reference.spectra.shape[1] - 2
+    conjugate, second = reference.spectra.conj(), response.spectra
+    products = np.empty((len(second), 4 + 2 * width), dtype=complex)
+    np.einsum('fd,fd->f', conjugate[:, :width], second[:, :width], out=products[:, 0])
+    products[:, 1] = conjugate[:, -2] * second[:, -1]
+    products[:, 2] = conjugate[:, -1] * second[:, -2]
+    products[:, 3] = conjugate[:, -1] * second[:, -1]
+    products[:, 4:4 + width] = conjugate[:, :width] * second[:, -1:]
+    products[:, 4 + width:] = conjugate[:, -1:] * second[:, :width]
     lags = np.arange(first_lag, last_lag + 1)
     sums = irfft(products, size, axis=0)[lags]
     pairs = np.rint(sums[:, 3])
@@ -96,13 +109,6 @@ def correlate_lags(
     value = np.full(len(lags), np.nan)
     value[known] = cross[known] / np.sqrt(energy_1[known] * energy_2[known])
     return LagCorrelation(lags, value, pairs.astype(int))
-
-
-def _spectra(series: Series, size: int) -> np.ndarray:
-    """Transform the values, their energy and the mask: (frequencies, d + 2)."""
-    energy = np.sum(series.values**2, axis=1, keepdims=True)
-    stacked = np.concatenate([series.values, energy, series.valid[:, None]], axis=1)
-    return rfft(stacked, size, axis=0)
 
 
 def common_pairs(
@@ -150,8 +156,9 @@ def refine_peak(
     target = target - target.mean(axis=0)
     lags = np.arange(lag - reach, lag + reach + 1)
     shifted = reference.values[index[None, :] - lags[:, None]]
-    cross = np.einsum('knd,nd->k', shifted, target, optimize=True)
-    energy = np.einsum('knd,knd->k', shifted, shifted)
+    flat = shifted.reshape(len(lags), -1)
+    cross = flat @ target.ravel()
+    energy = np.einsum('km,km->k', flat, flat)
     energy = energy - np.sum(shifted.sum(axis=1) ** 2, axis=1) / len(index)
     weights, offsets = _fine_weights(search)
     spread = weights @ energy * np.sum(target**2)
@@ -183,8 +190,8 @@ def shifted_values(
     step = 1.0 / 8.0
     middle, before, after = lagrange_weights(np.array([-part, -part - step, -part + step]))
     rows = np.stack([middle, (after - before) / (2.0 * step)])
-    at, slope = np.einsum('rk,nkd->rnd', rows, around, optimize=True)
-    return at, slope
+    both = rows @ around
+    return both[:, 0], both[:, 1]
 
 
 def lagrange_weights(offset: np.ndarray) -> np.ndarray:
@@ -194,11 +201,10 @@ def lagrange_weights(offset: np.ndarray) -> np.ndarray:
     Lagrange's interpolation formula on equidistant points.
     """
     points = np.arange(-KERNEL_HALF, KERNEL_HALF + 1)
-    weights = np.ones((len(offset), len(points)))
-    for column, point in enumerate(points):
-        for other in points[points != point]:
-            weights[:, column] *= (offset - other) / (point - other)
-    return weights
+    own = np.eye(len(points), dtype=bool)
+    over = np.where(own, 1.0, np.asarray(offset)[:, None, None] - points)
+    under = np.where(own, 1.0, points[:, None] - points)
+    return np.prod(over / under, axis=2)
 
 
 @lru_cache(maxsize=8)
@@ -242,7 +248,7 @@ def variance_of_product_sum(
     trimmed = blocks * smoothing
     shape = (blocks, smoothing, signal.shape[1])
     first, second = first[:trimmed].reshape(shape), second[:trimmed].reshape(shape)
-    matrices_1 = np.einsum('bsi,bsj->bij', first.conj(), first, optimize=False)
-    matrices_2 = np.einsum('bsi,bsj->bij', second.conj(), second, optimize=False)
-    total = np.sum((matrices_1 * matrices_2.conj()).real)
+    matrices_1 = first.conj().transpose(0, 2, 1) @ first
+    matrices_2 = second.transpose(0, 2, 1) @ second.conj()
+    total = np.vdot(matrices_2.conj(), matrices_1).real
     return 2.0 * float(total) / (smoothing * size * max(used, 1))

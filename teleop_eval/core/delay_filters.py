@@ -38,21 +38,26 @@ _KNEE_HZ = 0.3
 # Filters that serve before anything is known about the noise: slope and corner.
 _WIDE = (0.5, 4.0)
 _NARROW = (0.5, 1.0)
+# Filter that is never far from the best one.
+_USUAL = (0.5, 3.4)
 
 
 @dataclass(frozen=True)
 class Bank:
     """
-    Filters at one rate: `taps` of each, `power` (filters, frequencies), the usual one.
+    Filters at one working rate, with their power at given frequencies.
 
-    `power` is the squared magnitude at `frequencies_hz`; `usual` is the index of the filter
-    that does well whatever the noise.
+    `taps` of each filter, `power` (filters, frequencies) its squared magnitude; `usual` the
+    index of the filter that does well whatever the noise; `detection` the wide and the narrow
+    filter to find a peak with, `detection_power` (2, frequencies) theirs.
     """
 
-    taps: tuple[np.ndarray, ...]
     frequencies_hz: np.ndarray
+    taps: tuple[np.ndarray, ...]
     power: np.ndarray
     usual: int
+    detection: tuple[np.ndarray, np.ndarray]
+    detection_power: np.ndarray
 
 
 def decimation(rate_hz: float) -> int:
@@ -69,10 +74,16 @@ def decimate(series: Series, factor: int) -> Series:
     """
     if factor == 1:
         return series
+    return apply(series, _decimation_taps(factor), factor)
+
+
+@lru_cache(maxsize=16)
+def _decimation_taps(factor: int) -> np.ndarray:
+    """Return the low pass before keeping every factor-th sample."""
     half = 3 * factor
     steps = np.arange(-half, half + 1)
     taps = np.sinc(steps / (1.5 * factor)) * np.kaiser(2 * half + 1, 5.0)
-    return apply(series, taps / taps.sum(), factor)
+    return taps / taps.sum()
 
 
 def apply(series: Series, taps: np.ndarray, factor: int = 1) -> Series:
@@ -107,29 +118,36 @@ def apply(series: Series, taps: np.ndarray, factor: int = 1) -> Series:
     return Series(values, valid)
 
 
+def filtered(pair: tuple[Series, Series], taps: np.ndarray) -> tuple[Series, Series]:
+    """Pass both series through the same filter."""
+    return apply(pair[0], taps), apply(pair[1], taps)
+
+
 @lru_cache(maxsize=16)
-def bank(rate_hz: float, high_hz: float) -> Bank:
-    """Return all filters with corners up to `high_hz` for a working rate."""
+def bank(rate_hz: float, high_hz: float, size: int) -> Bank:
+    """
+    Return all filters with corners up to `high_hz` for a working rate.
+
+    Frequencies are those of a real transform of `size` samples, up to 1.5 times `high_hz`.
+    """
     corners = [corner for corner in _CORNERS_HZ if corner <= high_hz] or [high_hz]
     shapes = [(slope, corner) for slope in _SLOPES for corner in corners]
     taps = tuple(_design(rate_hz, slope, corner) for slope, corner in shapes)
-    size = 1024
-    return Bank(
-        taps,
-        np.fft.rfftfreq(size, 1.0 / rate_hz),
-        np.array([np.abs(np.fft.rfft(row, size)) ** 2 for row in taps]),
-        min(range(len(shapes)), key=lambda i: abs(shapes[i][0] - 0.5)
-            + abs(np.log(shapes[i][1] / 3.4))),
-    )
-
-
-@lru_cache(maxsize=16)
-def detection_taps(rate_hz: float, high_hz: float) -> tuple[np.ndarray, np.ndarray]:
-    """Return the wide and the narrow filter to find the peak with."""
     wide, narrow = (
         _design(rate_hz, slope, min(corner, high_hz)) for slope, corner in (_WIDE, _NARROW)
     )
-    return wide, narrow
+    frequencies = np.fft.rfftfreq(size, 1.0 / rate_hz)
+    frequencies = frequencies[frequencies <= 1.5 * high_hz]
+
+    def power(rows: tuple[np.ndarray, ...]) -> np.ndarray:
+        spectra = [np.fft.rfft(row, size)[:len(frequencies)] for row in rows]
+        return np.abs(np.array(spectra)) ** 2
+
+    usual = min(
+        range(len(shapes)),
+        key=lambda i: abs(shapes[i][0] - _USUAL[0]) + abs(np.log(shapes[i][1] / _USUAL[1])),
+    )
+    return Bank(frequencies, taps, power(taps), usual, (wide, narrow), power((wide, narrow)))
 
 
 def _design(rate_hz: float, slope: float, corner_hz: float) -> np.ndarray:
