@@ -60,12 +60,15 @@ class OfflineRun:
         Turns a configured topic into its full name.
     progress
         Whether to show progress.
+    simulated_time
+        Whether receive times came from a simulated clock.
 
     """
 
     def __init__(self, recording: Path, settings: Settings, flat: Mapping[str, Any], *,
                  source: str, out: Path, descriptions: Mapping[str, str],
-                 resolve: Callable[[str], str], progress: bool) -> None:
+                 resolve: Callable[[str], str], progress: bool,
+                 simulated_time: bool = False) -> None:
         self._path = recording
         self._settings = settings
         self._flat = flat
@@ -74,6 +77,7 @@ class OfflineRun:
         self._descriptions = descriptions
         self._resolve = resolve
         self._progress = progress
+        self._simulated_time = simulated_time
         self._first_ns: int | None = None
         self._last_ns: int | None = None
         self._next_diagnostics_ns = 0
@@ -90,14 +94,16 @@ class OfflineRun:
 
         """
         evaluator = SessionEvaluator(
-            self._settings, descriptions=self._descriptions, resolve=self._resolve)
+            self._settings, descriptions=self._descriptions, resolve=self._resolve,
+            simulated_time=self._simulated_time)
         with open_recording(self._path) as recording:
             inputs = RecordedInputs(
                 recording, evaluator.routes, event_topic=EVENT_TOPIC, supported=SUPPORTED,
                 make_decoder=make_decoder)
             folder = SessionFolder(
                 self._out, self._settings, self._flat, source=self._source,
-                descriptions=self._descriptions, resolve=self._resolve)
+                descriptions=self._descriptions, resolve=self._resolve,
+                simulated_time=self._simulated_time)
             problems = list(inputs.problems)
             with Interruption() as interruption:
                 try:

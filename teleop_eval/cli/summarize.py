@@ -50,17 +50,16 @@ def main(argv: Sequence[str] | None = None) -> int:
     options = _parser().parse_args(argv)
     recording, config = _locate(options.recording, options.config)
     namespace = _namespace(options.namespace)
-    flat = {name: value
-            for name, value in load_parameters(config, node_name=NODE_NAME,
-                                               namespace=namespace).items()
-            if not _OF_ROS.fullmatch(name)}
+    parameters = load_parameters(config, node_name=NODE_NAME, namespace=namespace)
+    flat = {key: value for key, value in parameters.items() if not _OF_ROS.fullmatch(key)}
     settings = from_parameters(flat, where=str(config))
     name = options.recording.resolve().name
     run = OfflineRun(
         recording, settings, flat, source=name,
         out=options.out or Path(f'{name.removesuffix(".mcap").removesuffix(".db3")}_summary'),
         descriptions=read_descriptions(settings, config.parent),
-        resolve=lambda topic: resolve_topic(topic, namespace), progress=options.progress)
+        resolve=lambda topic: resolve_topic(topic, namespace), progress=options.progress,
+        simulated_time=parameters.get('use_sim_time') is True)
     outcome = run.run()
     _print(outcome)
     return STATUS_FAILURE if outcome.problems else STATUS_OK

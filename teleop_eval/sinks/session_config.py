@@ -13,7 +13,8 @@ _FILE_KEY = '.robot.description_file'
 
 
 def session_config(flat: Mapping[str, Any], descriptions: Mapping[str, str],
-                   resolve: Callable[[str], str] | None, name: str) -> dict[str, str]:
+                   resolve: Callable[[str], str] | None, *, name: str,
+                   simulated_time: bool = False) -> dict[str, str]:
     """
     Return the files that configure a session, text by file name.
 
@@ -29,9 +30,11 @@ def session_config(flat: Mapping[str, Any], descriptions: Mapping[str, str],
         the namespace and the remappings of its run.
     name
         Name of the parameter file itself.
+    simulated_time
+        Whether receive times come from a simulated clock; kept as ROS' own use_sim_time.
 
     """
-    kept = dict(flat)
+    kept = {'use_sim_time': True, **flat} if simulated_time else dict(flat)
     files: dict[str, str] = {}
     for arm, text in descriptions.items():
         if kept.get(f'arms.{arm}{_FILE_KEY}'):

@@ -64,6 +64,8 @@ class SessionFolder:
         folder, so that it can be evaluated again on another machine.
     resolve
         Turns a configured topic into its full name, for the folder's config.yaml.
+    simulated_time
+        Whether receive times come from a simulated clock.
 
     Raises
     ------
@@ -75,7 +77,8 @@ class SessionFolder:
     def __init__(self, path: Path | str, settings: Settings, flat: Mapping[str, Any], *,
                  source: str, record_inputs: bool = False,
                  descriptions: Mapping[str, str] | None = None,
-                 resolve: Callable[[str], str] | None = None) -> None:
+                 resolve: Callable[[str], str] | None = None,
+                 simulated_time: bool = False) -> None:
         self.path = Path(path)
         self._settings = settings
         self._source = source
@@ -87,7 +90,8 @@ class SessionFolder:
         self._windows = WindowTable(self.path / WINDOWS_FILE)
         self._bags: dict[str, BagWriter] = {}
         self._topics: dict[str, dict[str, str]] = {SUMMARY_BAG: {}, INPUTS_BAG: {}}
-        config = session_config(flat, descriptions or {}, resolve, CONFIG_FILE)
+        config = session_config(flat, descriptions or {}, resolve, name=CONFIG_FILE,
+                                simulated_time=simulated_time)
         make_empty(self.path)
         try:
             for name, text in config.items():

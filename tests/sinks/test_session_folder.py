@@ -150,6 +150,13 @@ def test_configuration_reads_back_complete(tmp_path):
          'arms.right.robot.description_file': 'description_right.urdf'})
 
 
+def test_simulated_time_is_kept_as_ros_names_it(tmp_path):
+    make(tmp_path / 'a', simulated_time=True).finish(summary())
+    assert load_parameters(tmp_path / 'a' / 'config.yaml') == {'use_sim_time': True, **FLAT}
+    make(tmp_path / 'b').finish(summary())
+    assert 'use_sim_time' not in load_parameters(tmp_path / 'b' / 'config.yaml')
+
+
 def test_rcl_reads_the_configuration(tmp_path):
     """ROS 2's own parameter parser sees the values that the folder was given."""
     pytest.importorskip('rclpy')
