@@ -20,17 +20,14 @@ from rclpy.utilities import remove_ros_args
 from teleop_eval.core.errors import ConfigError, OutputError, UsageError
 from teleop_eval.nodes.evaluator_node import NODE_NAME, EvaluatorNode
 from teleop_eval.nodes.parts import Parts
-from teleop_eval.nodes.schedule import Every
 from teleop_eval.nodes.stop_signals import StopSignals
 from teleop_eval.sinks.tables import print_summary
 from teleop_eval.sources.parameter_file import load_parameters
 
-# Messages wait in their queues meanwhile; their receive times are the middleware's.
-CYCLE_S = 0.02
-# How often services and parameters are served: half of what an idle node costs.
-SERVICES_S = 0.05
-# The longest piece of deferred work: far below a cycle, so that no queue fills.
-SLICE_S = 0.005
+# Messages are collected meanwhile; their receive times are the middleware's.
+CYCLE_S = 0.05
+# The longest piece of deferred work: well below a cycle, so that services are answered.
+SLICE_S = 0.01
 
 HELP = """\
 usage: teleop_eval evaluate --ros-args --params-file FILE [-r OLD:=NEW] [-p NAME:=VALUE]
@@ -98,26 +95,25 @@ def main(argv: Sequence[str] | None = None, *, parts: Parts | None = None) -> in
 
 def run(node: EvaluatorNode, context: Context, stopped: Callable[[], bool]) -> None:
     """
-    Drain, evaluate and publish in the node's own loop until told to stop.
+    Evaluate and publish in the node's own loop until told to stop; a thread reads the inputs.
 
     The executor serves services and parameters only, without waiting: waiting in it costs
     five times more than sleeping, and spinning would take the inputs' messages.
     """
     executor = SingleThreadedExecutor(context=context)
     executor.add_node(node)
-    services = Every(SERVICES_S)
     try:
-        while not stopped() and context.ok():
-            begun = time.monotonic()
-            if services.due(time.monotonic_ns()):
+        with node.inputs.reading():
+            while not stopped() and context.ok():
+                begun = time.monotonic()
                 executor.spin_once(timeout_sec=0.0)
-            if node.step():
-                continue
-            left = CYCLE_S - (time.monotonic() - begun)
-            while left > 2 * SLICE_S and node.background(SLICE_S):
+                if node.step():
+                    continue
                 left = CYCLE_S - (time.monotonic() - begun)
-            if left > 0.0:
-                time.sleep(left)
+                while left > 2 * SLICE_S and node.background(SLICE_S):
+                    left = CYCLE_S - (time.monotonic() - begun)
+                if left > 0.0:
+                    time.sleep(left)
     finally:
         executor.remove_node(node)
         executor.shutdown()
@@ -163,7 +159,11 @@ def _start_ros(arguments: list[str], context: Context) -> None:
 
 
 def _tell_end(node: EvaluatorNode) -> None:
-    if node.last_path is not None and node.last_summary is not None:
+    if node.last_path is None or node.last_summary is None:
+        return
+    try:
         print_summary({**node.last_summary, 'problems': []})  # they were logged when they came
         sys.stdout.write(f'\nResults: {node.last_path}\n')
         sys.stdout.flush()
+    except OSError:
+        pass  # the terminal is gone, as after SIGHUP; the files are not

@@ -21,7 +21,7 @@ from rclpy.parameter import Parameter as RosParameter
 from std_srvs.srv import Trigger
 
 from teleop_eval.core.errors import TeleopEvalError
-from teleop_eval.core.results import LEVEL_OK, StatusLine, WindowResult
+from teleop_eval.core.results import LEVEL_ERROR, LEVEL_OK, StatusLine, WindowResult
 from teleop_eval.core.settings import from_parameters
 from teleop_eval.nodes import statuses
 from teleop_eval.nodes.declared_parameters import check_change, declare, flat_overrides
@@ -287,6 +287,8 @@ class EvaluatorNode(Node):
             text = f'{line.name}: {statuses.LEVEL_WORDS[line.level]}: {line.message}'
             if line.level == LEVEL_OK:
                 logger.info(text)
+            elif line.level == LEVEL_ERROR:
+                logger.error(text)
             else:
                 logger.warning(text)
 

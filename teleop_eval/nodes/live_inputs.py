@@ -5,7 +5,9 @@
 from __future__ import annotations
 
 import difflib
-from collections.abc import Collection, Iterable, Mapping, Sequence
+import threading
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -16,6 +18,11 @@ from teleop_eval.nodes.receive_clock import SimulatedReceiveClock, SystemReceive
 from teleop_eval.nodes.topic_input import NeverExecuted, TopicInput
 from teleop_eval.nodes.topic_match import LATCHED_ROLES, ROLE_KINDS, Wanted, use_words
 from teleop_eval.sources.feed_order import Received
+
+# Each queue holds a second; fifty visits a second cost little and keep batches small.
+READ_S = 0.02
+# A node that is too slow for good leaves messages in their queues, where losses are counted.
+MAX_WAITING = 200_000
 
 
 class RouteLike(Protocol):
@@ -74,29 +81,63 @@ class LiveInputs:
         self.topics = {topic: self._topic_input(topic, uses, supported)
                        for topic, uses in routes.items()}
         self._latched: dict[str, Received] = {}
+        self._waiting: list[Received] = []
+        self._lock = threading.Lock()  # of subscriptions and what waits
         self._problems_so_far: dict[str, None] = {}
 
     def poll_graph(self, now_ns: int) -> list[TopicInput]:
         """Match every topic with its publishers; return those newly subscribed to."""
-        new = [topic_input for topic, topic_input in self.topics.items()
-               if topic_input.rematch(self._offers(topic), now_ns)]
+        offers = {topic: self._offers(topic) for topic in self.topics}
+        with self._lock:
+            new = [topic_input for topic, topic_input in self.topics.items()
+                   if topic_input.rematch(offers[topic], now_ns)]
         self._problems_so_far.update(dict.fromkeys(self.problems()))
         return new
 
     def drain(self) -> Batch:
-        """Take everything that has arrived."""
-        self.clock.update()
-        cut_ns = self.clock.now_ns()
-        messages: list[Received] = []
-        if cut_ns == 0:  # the simulation has not begun; messages wait in their queues
-            return Batch(messages, cut_ns, False)
-        more = False
-        for topic_input in self.topics.values():
-            first = len(messages)
-            more |= topic_input.take(messages, self.clock.at)
-            if topic_input.latched and len(messages) > first:
-                self._latched[topic_input.topic] = messages[-1]
+        """Return everything that has arrived since the last time."""
+        with self._lock:
+            cut_ns, more = self._collect()
+            messages, self._waiting = self._waiting, []
         return Batch(messages, cut_ns, more)
+
+    @contextmanager
+    def reading(self) -> Iterator[None]:
+        """
+        Empty the queues in a thread of its own while the context lasts.
+
+        Closing a window may take longer than a queue holds on a busy machine. What the thread
+        took waits for `drain`, so that computing costs no message.
+        """
+        ended = threading.Event()
+
+        def read() -> None:
+            while not ended.wait(READ_S):
+                with self._lock:
+                    if len(self._waiting) < MAX_WAITING:
+                        self._collect()
+
+        thread = threading.Thread(target=read, name='inputs', daemon=True)
+        thread.start()
+        try:
+            yield
+        finally:
+            ended.set()
+            thread.join()
+
+    def _collect(self) -> tuple[int, bool]:
+        """Move what has arrived to what waits; return the clock before, and whether more is."""
+        self.clock.update()
+        cut_ns, more = self.clock.now_ns(), False
+        if cut_ns == 0:  # the simulation has not begun; messages wait in their queues
+            return cut_ns, more
+        waiting = self._waiting
+        for topic_input in self.topics.values():
+            first = len(waiting)
+            more |= topic_input.take(waiting, self.clock.at)
+            if topic_input.latched and len(waiting) > first:
+                self._latched[topic_input.topic] = waiting[-1]
+        return cut_ns, more
 
     def latched_messages(self) -> list[Received]:
         """Return the last message of each latched topic: what is valid now."""

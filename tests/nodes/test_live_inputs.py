@@ -213,6 +213,26 @@ def test_an_overrun_queue_counts_as_lost(bench: Bench) -> None:
     assert lost == last - len(bench.got) > 0
 
 
+def test_a_thread_reads_what_no_queue_would_hold(bench: Bench) -> None:
+    """As many messages as overran the queue above, while nothing drains."""
+    publisher = bench.publishing.create_publisher(JointState, '/joints', profile(False, False))
+    bench.matched('/joints')
+    bench.send(publisher, JointState())
+    bench.receive(1)
+    joints = bench.inputs.topics['/joints']
+    assert joints.request is not None
+    sent = 1
+    with bench.inputs.reading():
+        while sent < joints.request.depth + 50:
+            for _ in range(50):
+                publisher.publish(JointState())
+            sent += 50
+            wait_until(lambda sent=sent: joints.messages == sent)
+    bench.got += bench.inputs.drain().messages
+    assert [item.number for item in bench.got] == list(range(1, sent + 1))
+    assert bench.inputs.lost('/joints') == (0, '')
+
+
 def test_a_wrong_type_is_said_and_harmless(
         bench: Bench, other_context: Context) -> None:
     # One participant cannot have two types on one topic, so the wrong one needs its own.
