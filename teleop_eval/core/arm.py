@@ -15,135 +15,140 @@ from collections.abc import Callable
 
 import numpy as np
 
+from teleop_eval.core.arm_setup import ArmSetup, make_setup, silent_inputs
 from teleop_eval.core.boundaries import Boundaries
 from teleop_eval.core.errors import TeleopEvalError
+from teleop_eval.core.freezing import can_freeze, freeze
 from teleop_eval.core.geometry import RobotGeometry, operator_geometry, robot_geometry
-from teleop_eval.core.intake import NEVER_A_GAP_NS, Intake
-from teleop_eval.core.joint_match import JointMatcher
-from teleop_eval.core.mappings import MappingModel, make_mapping
+from teleop_eval.core.intake import Intake
 from teleop_eval.core.measure import ArmMeasurement
-from teleop_eval.core.resample import default_max_gap_ns
 from teleop_eval.core.results import WindowResult
-from teleop_eval.core.samples import BoolSample, Sample, TextSample
+from teleop_eval.core.samples import BoolSample, Sample, TextSample, TrajectorySample
+from teleop_eval.core.sentences import Sentences
 from teleop_eval.core.settings import ArmSettings, Settings
 from teleop_eval.core.streams import HeldState, SampledStream
-from teleop_eval.core.timebase import TimeBase, choose_time_base, observe_clock
+from teleop_eval.core.timebase import TimeBase
 from teleop_eval.core.tracking import JointErrors
 from teleop_eval.core.transport_age import TransportAge
 from teleop_eval.core.window import Span
 
-SAMPLED_ROLES = ('hand', 'operator_joints', 'robot_joints', 'command')
 UNMODELLED = 'unmodelled'
-# Without a description nobody knows which joints turn and which slide.
-UNKNOWN_UNIT = 'rad or m'
 # An arm whose description does not come is evaluated without it after this time.
 DESCRIPTION_WAIT_NS = 30_000_000_000
-MIN_GRID_HZ = 50.0
 NEVER_NS = 2 ** 63 - 1
 
 
 class ArmEvaluator:
-    """Streaming evaluation of one arm; its state follows from the samples alone."""
+    """
+    Streaming evaluation of one arm; its state follows from the samples alone.
 
-    def __init__(self, name: str, settings: Settings, *, urdf: str | None = None) -> None:
+    Parameters
+    ----------
+    name
+        The arm's name in the settings.
+    settings
+        Of the whole evaluation.
+    urdf
+        Robot description, None if it comes on a topic or not at all.
+    results
+        Where closed windows go, shared by all arms so that they keep the order of closing.
+
+    """
+
+    def __init__(self, name: str, settings: Settings, *, urdf: str | None = None,
+                 results: list[WindowResult] | None = None) -> None:
         self.name = name
         self.settings = settings
         self.arm: ArmSettings = settings.arms[name]
         self.operator = operator_geometry(self.arm.operator)
         self.robot: RobotGeometry | None = None
-        self.models: dict[str, MappingModel] = {}
-        self.time_base: TimeBase | None = None
-        self.period_ns: int | None = None
-        self.segments = 0
-        self.problems: dict[str, int] = {}
-        self.notes: dict[str, int] = {}
+        self.setup = ArmSetup()
         self.intakes: dict[str, Intake] = {}
         self.ages: dict[str, TransportAge] = {}
-        self.results: list[WindowResult] = []
-        self.states: dict[str, HeldState] = {}
-        if self.arm.engaged.topic:
-            self.states['engaged'] = HeldState('engaged', self.arm.engaged.topic)
-        if self.arm.active_mapping.topic:
-            self.states['active_mapping'] = HeldState(
-                'active_mapping', self.arm.active_mapping.topic)
+        self.time_base: TimeBase | None = None
+        self.chosen: TimeBase | None = None
+        self.ever_by_receive = False
+        self.period_ns: int | None = None
+        self.segments = 0
+        self.problems = Sentences()
+        self.notes = Sentences()
+        self.results: list[WindowResult] = [] if results is None else results
+        self.states = {
+            role: HeldState(role, topic) for role, topic in (
+                ('engaged', self.arm.engaged.topic),
+                ('active_mapping', self.arm.active_mapping.topic)) if topic}
         self.boundaries = Boundaries(
             self.states.get('engaged'), self.states.get('active_mapping'), self._fixed_label())
+        for label in self.arm.mappings:
+            self.boundaries.index(label)
         self.measurement: ArmMeasurement | None = None
-        self.joint_names: tuple[str, ...] = ()
-        self.joint_units: tuple[str, ...] = ()
-        self.operator_joint_names: tuple[str, ...] = ()
         self.observe_joint_errors: Callable[[str, JointErrors], None] | None = None
-        self._waiting: list[tuple[str, int, Sample]] = []
-        self._awaits_description = bool(self.arm.robot.description_topic)
         self.described: str | None = None
+        self.frozen_streams: list[SampledStream] = []
+        self.next_check_ns = NEVER_NS
+        self._waiting: list[tuple[str, int, Sample]] = []
         self._ready = False
         self._warm_from_ns: int | None = None
         self._origin_ns = 0
         self._next_cell = 0
-        self.frozen_streams: list[SampledStream] = []
-        self.next_check_ns = NEVER_NS
         if urdf is not None:
-            self._describe(urdf, self.arm.robot.description_file or 'description_file')
-        if not self._awaits_description:
+            self._describe(urdf)
+        if urdf is not None or not self.arm.robot.description_topic:
             self._make_ready()
-
-    # ------------------------------------------------------------------ intake
 
     def add(self, role: str, receive_ns: int, sample: Sample) -> None:
         """Take one sample of a role; what cannot be used becomes a problem sentence."""
         if role in self.states:
             self._add_state(self.states[role], receive_ns, sample)
         elif role == 'description':
-            if isinstance(sample, TextSample):
-                self._description(sample.text)
+            self._add_description(receive_ns, sample)
         elif not self._ready:
             self._waiting.append((role, receive_ns, sample))
             if receive_ns - self._waiting[0][1] > DESCRIPTION_WAIT_NS:
-                self._problem(f'{self.name}: no robot description came on '
-                              f'{self.arm.robot.description_topic} within '
-                              f'{DESCRIPTION_WAIT_NS // 10 ** 9} s; evaluated without it.')
+                self.problems.say(f'{self.name}: no robot description came on '
+                                  f'{self.arm.robot.description_topic} within '
+                                  f'{DESCRIPTION_WAIT_NS // 10 ** 9} s; evaluated without it.')
                 self._make_ready()
         elif role in self.intakes:
             self._add_sampled(self.intakes[role], receive_ns, sample)
 
     def _add_state(self, state: HeldState, receive_ns: int, sample: Sample) -> None:
-        value: object
-        if isinstance(sample, BoolSample):
-            value = sample.value
-        elif isinstance(sample, TextSample):
-            value = sample.text
-        else:
-            self._problem(f'{self.name}: {state.role} ({state.topic}): '
-                          f'{type(sample).__name__} is of no use here.')
+        wanted = BoolSample if state.role == 'engaged' else TextSample
+        if not isinstance(sample, wanted):
+            self.problems.say(f'{self.name}: {state.role} ({state.topic}): '
+                              f'{type(sample).__name__} is of no use here.')
             return
         state.counts.messages += 1
+        value = sample.value if isinstance(sample, BoolSample) else sample.text
         state.add(receive_ns, value,
                   self._closed_until_ns if self.time_base is not None else None)
 
     def _add_sampled(self, intake: Intake, receive_ns: int, sample: Sample) -> None:
         stream = intake.stream
         stream.counts.messages += 1
-        self.ages[stream.role].add(receive_ns, sample.stamp_ns)
+        if not isinstance(sample, TrajectorySample):
+            # A plan is stamped with its start, not with its sending.
+            self.ages[stream.role].add(receive_ns, sample.stamp_ns)
         rows = intake.rows(receive_ns, sample)
         if not rows:
             return
         if stream.stepped_back(sample.stamp_ns):
             if self.time_base is None:
                 stream.drop_raw()
-            elif self.time_base.by_stamp:
+            elif stream.by_stamp:
                 self._flush(receive_ns)
                 self._new_segment(f'{stream.role}: header stamps stepped back', keep=False)
-        if self.time_base is not None and stream not in self.frozen_streams:
+        if self.time_base is not None and not stream.frozen:
             self._new_segment(f'{stream.role} appeared', keep=True)
-        if intake.planned:
-            stream.replace_after(rows[0][1] or rows[0][0])
-        for row in rows:
-            stream.add(row)
+        if stream.by_stamp and not sample.stamp_ns and stream.closes_windows:
+            intake.problem('a message without header stamp came after header stamps were '
+                           'chosen as time base; it is not used')
+            return
+        stream.add(rows)
         if self.time_base is None:
             if self._warm_from_ns is None:
-                self._warm_from_ns = receive_ns
-                self.next_check_ns = receive_ns + round(self.settings.time.warm_up_s * 1e9)
-        else:
+                self._warm_up_from(receive_ns)
+        elif stream.closes_windows:
             if self.next_check_ns == NEVER_NS:
                 self._plan_next()
             if stream.last_ns is not None and stream.last_ns >= self._close_at_ns:
@@ -151,71 +156,53 @@ class ArmEvaluator:
 
     def advance(self, receive_ns: int) -> None:
         """Let time pass: freeze after the warm-up, close windows that waited long enough."""
-        if self.time_base is None:
-            if self._ready and self._warm_from_ns is not None and any(
-                    self._closes_windows(intake) and len(intake.stream.raw) > 1
-                    for intake in self.intakes.values()):
-                self._freeze(receive_ns)
-        else:
+        if self.time_base is not None:
             self._close_ready(receive_ns)
+        elif self._warm_from_ns is not None:
+            present = {role: intake.stream for role, intake in self.intakes.items()
+                       if intake.stream.raw}
+            if can_freeze(present):
+                self._freeze(present, receive_ns)
+            else:
+                # Too little to tell a rate from: warm up anew from the next sample on.
+                for stream in present.values():
+                    stream.drop_raw(keep=1)
+                self._warm_up_from(None)
 
-    # ------------------------------------------------------- description, models
-
-    def _description(self, urdf: str) -> None:
-        if urdf == self.described:
+    def _add_description(self, receive_ns: int, sample: Sample) -> None:
+        if not isinstance(sample, TextSample) or sample.text == self.described:
             return
         if self.described is not None:
-            self._note(f'{self.name}: another robot description came during the run; the first '
-                       'one is kept.')
+            self.notes.say(f'{self.name}: another robot description came during the run; the '
+                           'first one is kept.')
             return
-        late = self._ready
-        self._describe(urdf, str(self.arm.robot.description_topic))
-        if late:
-            self._new_segment('the robot description appeared', keep=False)
+        self._describe(sample.text)
+        if self._ready:
+            self._flush(receive_ns)
+            self._new_segment('the robot description came; the metrics begin here', keep=False)
+            self.measurement = None
         self._make_ready()
 
-    def _describe(self, urdf: str, source: str) -> None:
+    def _describe(self, urdf: str) -> None:
         self.described = urdf
+        robot = self.arm.robot
+        source = robot.description_file or robot.description_topic or 'the description'
         try:
             self.robot = robot_geometry(self.arm, urdf, source=source)
         except TeleopEvalError as error:
-            self._problem(f'{self.name}: {error}')
+            self.problems.say(f'{self.name}: {error}')
 
     def _make_ready(self) -> None:
-        """Make models and matchers, now that the robot is known or known to stay unknown."""
-        robot = self.robot
-        self.models = {}
-        for label, mapping in self.arm.mappings.items():
-            self.boundaries.index(label)
-            if robot is None:
-                continue
-            try:
-                self.models[label] = make_mapping(label, mapping, self.operator, robot)
-            except TeleopEvalError as error:
-                self._problem(f'{self.name}: {error}')
-        self.joint_names = self.arm.robot.joint_names or (
-            robot.chain.joint_names if robot is not None else ())
-        self.joint_units = tuple(
-            UNKNOWN_UNIT if robot is None else robot.unit_of(name) for name in self.joint_names)
-        self.operator_joint_names = tuple(sorted({
-            source.source for mapping in self.arm.mappings.values()
-            if mapping.kind == 'joint_space' for source in mapping.joints.values()}))
-        topics = {'hand': self.arm.operator.hand_topic,
-                  'operator_joints': self.arm.operator.joints_topic,
-                  'robot_joints': self.arm.robot.joints_topic,
-                  'command': self.arm.command.topic}
-        matchers = {
-            'operator_joints': JointMatcher(self.operator_joint_names, {}),
-            'robot_joints': JointMatcher(self.joint_names, self.arm.robot.joints),
-            'command': JointMatcher(
-                self.arm.command.joint_order or self.joint_names, self.arm.command.joints),
-        }
-        for role in SAMPLED_ROLES:
-            topic, matcher = topics[role], matchers.get(role)
-            if topic is None or (matcher is not None and not matcher.names):
-                continue
-            self.intakes[role] = Intake(self.name, SampledStream(role, topic), matcher)
+        """Make models and inputs, now that the robot is known or known to stay unknown."""
+        before = self.intakes
+        self.setup = make_setup(self.name, self.arm, self.operator, self.robot)
+        for problem in self.setup.problems:
+            self.problems.say(problem)
+        self.intakes = self.setup.intakes
+        for role, intake in self.intakes.items():
             self.ages.setdefault(role, TransportAge())
+            if role in before:
+                intake.stream.counts = before[role].stream.counts
         self._ready = True
         waiting, self._waiting = self._waiting, []
         for role, receive_ns, sample in waiting:
@@ -223,11 +210,11 @@ class ArmEvaluator:
 
     def use_tool_rotation(self, hand_to_tool: np.ndarray) -> None:
         """Give the estimated rotation (4,) x, y, z, w to every mapping that lacks one."""
-        for model in self.models.values():
+        for model in self.setup.models.values():
             model.take_tool_rotation(hand_to_tool)
         x, y, z, w = hand_to_tool
-        self._note(f'{self.name}: hand-to-tool rotation estimated from motion: x {x:.4f}, '
-                   f'y {y:.4f}, z {z:.4f}, w {w:.4f}.')
+        self.notes.say(f'{self.name}: hand-to-tool rotation estimated from motion: x {x:.4f}, '
+                       f'y {y:.4f}, z {z:.4f}, w {w:.4f}.')
 
     def _fixed_label(self) -> str | None:
         if self.arm.active_mapping.topic:
@@ -236,40 +223,24 @@ class ArmEvaluator:
             return self.arm.active_mapping.fixed
         return next(iter(self.arm.mappings)) if len(self.arm.mappings) == 1 else UNMODELLED
 
-    # ------------------------------------------------------------------ segments
+    def _warm_up_from(self, receive_ns: int | None) -> None:
+        self._warm_from_ns = receive_ns
+        self.next_check_ns = NEVER_NS if receive_ns is None else (
+            receive_ns + round(self.settings.time.warm_up_s * 1e9))
 
-    def _freeze(self, receive_ns: int) -> None:
+    def _freeze(self, present: dict[str, SampledStream], receive_ns: int) -> None:
         """Choose time base, gap lengths and grid, and put what has come on them."""
-        present = {role: intake for role, intake in self.intakes.items() if intake.stream.raw}
-        clocks = {
-            role: observe_clock([row[1] for row in intake.stream.raw],
-                                [row[0] for row in intake.stream.raw])
-            for role, intake in present.items()}
-        self.time_base = choose_time_base(
-            clocks, tolerance_ns=round(self.settings.time.clock_tolerance_s * 1e9))
+        frozen = freeze(present, self.settings.time)
+        self.frozen_streams = list(present.values())
+        self.time_base = self.chosen = frozen.time_base
         if self.time_base.reason:
-            self._note(f'{self.name}: time base is receive time because '
-                       f'{self.time_base.reason}.')
+            self.ever_by_receive = True
+            self.notes.say(f'{self.name}: time base is receive time because '
+                           f'{self.time_base.reason}.')
         self.segments += 1
-        rates, firsts = [], []
-        for role, intake in present.items():
-            stream = intake.stream
-            times = np.array([row[1 if self.time_base.by_stamp else 0] for row in stream.raw])
-            stream.freeze(by_stamp=self.time_base.by_stamp,
-                          offset_ns=self.time_base.offset_of(role),
-                          max_gap_ns=self._max_gap_ns(intake, times))
-            first = stream.first_ns()
-            if self._closes_windows(intake) and first is not None and len(times) > 1:
-                rates.append(_rate_hz(times))
-                firsts.append(first)
-        self.frozen_streams = [intake.stream for intake in present.values()]
         if self.period_ns is None:
-            rate = self.settings.time.grid_rate_hz or max(MIN_GRID_HZ, round(min(rates)))
-            self.period_ns = round(1e9 / rate)
-        # A first stamp that is far off must not open hours of empty windows.
-        warm_up_ns = round(self.settings.time.warm_up_s * 1e9)
-        self._origin_ns = max(min(firsts), max(firsts) - warm_up_ns)
-        self._next_cell = 0
+            self.period_ns = round(1e9 / frozen.rate_hz)
+        self._origin_ns, self._next_cell = frozen.origin_ns, 0
         for state in self.states.values():
             state.shift(self.time_base.common_offset_ns)
         if self.measurement is None:
@@ -278,45 +249,37 @@ class ArmEvaluator:
         self._plan_next()
         self._close_ready(receive_ns)
 
-    def _max_gap_ns(self, intake: Intake, times_ns: np.ndarray) -> int:
-        if intake.planned or (intake.stream.role == 'command' and self.arm.command.hold):
-            return NEVER_A_GAP_NS
-        if self.settings.time.max_gap_s is not None:
-            return round(self.settings.time.max_gap_s * 1e9)
-        return default_max_gap_ns(np.unique(times_ns))
-
-    def _closes_windows(self, intake: Intake) -> bool:
-        return not intake.planned and not (
-            intake.stream.role == 'command' and self.arm.command.hold)
-
-    def new_segment(self, reason: str) -> None:
+    def new_segment(self, reason: str, receive_ns: int) -> None:
         """Begin a new segment from outside, as after a step of the receive clock."""
         if self.time_base is not None:
+            self._flush(receive_ns)
             self._new_segment(reason, keep=False)
+        else:
+            for intake in self.intakes.values():
+                intake.stream.drop_raw(keep=int(intake.stream.held))
+            self._warm_up_from(None)
 
     def _new_segment(self, reason: str, *, keep: bool) -> None:
         """Warm up anew; with `keep`, samples no window has used come along."""
-        self._note(f'{self.name}: a new segment began: {reason}.')
+        self.notes.say(f'{self.name}: a new segment began: {reason}.')
         self.time_base = None
-        self._warm_from_ns = None
         self.boundaries.restart()
         for state in self.states.values():
             state.shift(0)
+        self.frozen_streams = []
+        firsts = []
         for intake in self.intakes.values():
             stream = intake.stream
-            rows = stream.remaining() if stream in self.frozen_streams else list(stream.raw)
+            kept, newest = stream.remaining() if keep else [], stream.newest
+            if stream.held and newest is not None and not keep:
+                # What holds goes on; on the new axis its receive time places it.
+                kept = [[(newest[0], 0, *newest[2:])]]
             stream.restart()
-            if keep:
-                for row in rows:
-                    stream.add(row)
-                if rows and (self._warm_from_ns is None or rows[0][0] < self._warm_from_ns):
-                    self._warm_from_ns = rows[0][0]
-        self.frozen_streams = []
-        warm_up_ns = round(self.settings.time.warm_up_s * 1e9)
-        self.next_check_ns = (NEVER_NS if self._warm_from_ns is None
-                              else self._warm_from_ns + warm_up_ns)
-
-    # ------------------------------------------------------------------- windows
+            for rows in kept:
+                stream.add(rows)
+            if kept and stream.closes_windows:
+                firsts.append(kept[0][0][0])
+        self._warm_up_from(min(firsts, default=None))
 
     @property
     def _window_cells(self) -> int:
@@ -329,13 +292,12 @@ class ArmEvaluator:
 
     def _plan_next(self) -> None:
         """Note when the next window ends, and from when it may close without a stream."""
-        assert self.period_ns is not None
+        assert self.period_ns is not None  # set at the freeze
         self._close_at_ns = self._closed_until_ns + self._window_cells * self.period_ns
         self.next_check_ns = min(self._deadline_ns(stream) for stream in self._closing())
 
     def _closing(self) -> list[SampledStream]:
-        return [intake.stream for intake in self.intakes.values()
-                if intake.stream in self.frozen_streams and self._closes_windows(intake)]
+        return [stream for stream in self.frozen_streams if stream.closes_windows]
 
     def _deadline_ns(self, stream: SampledStream) -> int:
         lateness_ns = round(self.settings.time.lateness_s * 1e9)
@@ -343,42 +305,47 @@ class ArmEvaluator:
 
     def _close_ready(self, receive_ns: int) -> None:
         """Close every window whose samples are all there or no longer waited for."""
-        while self.time_base is not None:
-            closing = self._closing()
-            for stream in closing:
-                there = stream.last_ns is not None and stream.last_ns >= self._close_at_ns
-                if not there and receive_ns <= self._deadline_ns(stream):
-                    return
-            silent = self._silent_windows(closing)
+        while self.time_base is not None and self._may_close(receive_ns):
+            silent = self._silent_windows()
             if silent is None:
                 # Nothing to evaluate: look again when a sample comes.
                 self.next_check_ns = NEVER_NS
                 return
-            if silent > 0:
-                self._jump(silent)
+            if silent:
+                self._skip(silent)
                 continue
+            moved = self._moved_clock()
             self._close(self._window_cells, receive_ns)
-            self._check_clocks()
+            if moved:
+                self._new_segment(moved, keep=True)
 
-    def _silent_windows(self, closing: list[SampledStream]) -> int | None:
+    def _may_close(self, receive_ns: int) -> bool:
+        for stream in self._closing():
+            there = stream.last_ns is not None and stream.last_ns >= self._close_at_ns
+            if not there and receive_ns <= self._deadline_ns(stream):
+                return False
+        return True
+
+    def _silent_windows(self) -> int | None:
         """Return the number of windows before the next sample, None if there is no sample."""
-        assert self.period_ns is not None
-        starts = [start for stream in closing
-                  if (start := stream.next_from(self._closed_until_ns)) is not None]
+        assert self.period_ns is not None  # set at the freeze
+        until_ns = self._closed_until_ns
+        starts = [start for stream in self._closing()
+                  if (start := stream.next_from(until_ns)) is not None]
         if not starts:
             return None
-        return int((min(starts) - self._closed_until_ns) // (self._window_cells * self.period_ns))
+        return int((min(starts) - until_ns) // (self._window_cells * self.period_ns))
 
-    def _jump(self, windows: int) -> None:
+    def _skip(self, windows: int) -> None:
         """
         Leave out windows without any sample.
 
         A clock that steps ahead by hours must not cost an empty window every two seconds.
         """
         assert self.measurement is not None  # made at the freeze
+        start_ns = self._closed_until_ns
         self._next_cell += windows * self._window_cells
-        self.boundaries.restart()
-        self.measurement.restart()
+        self.measurement.skip(start_ns, self._closed_until_ns)
         self._plan_next()
 
     def _close(self, cells: int, receive_ns: int) -> None:
@@ -396,69 +363,47 @@ class ArmEvaluator:
             age.close_window(receive_ns)
         self._plan_next()
 
-    def _check_clocks(self) -> None:
-        """Begin a new segment if a stream's stamps have left the frozen offset."""
-        if self.time_base is None or not self.time_base.by_stamp:
-            return
-        start_ns = self._closed_until_ns
-        for stream in self._closing():
-            offset = stream.offset_in(start_ns, start_ns + 10 ** 18)
-            if offset is None:
-                continue
-            moved = offset - stream.offset_ns
-            if abs(moved) > self.settings.time.clock_tolerance_s * 1e9:
-                self._new_segment(f'the clock of {stream.role} moved by {moved / 1e9:+.3f} s',
-                                  keep=True)
-                return
+    def _moved_clock(self) -> str:
+        """Return which stream's stamps have left the frozen offset in this window, or ''."""
+        tolerance_ns = self.settings.time.clock_tolerance_s * 1e9
+        moved = {stream.role: offset - stream.offset_ns for stream in self._closing()
+                 if stream.by_stamp
+                 and (offset := stream.offset_from(self._closed_until_ns)) is not None}
+        if not moved:
+            return ''
+        role = max(moved, key=lambda one: abs(moved[one]))
+        spread = max(moved.values()) - min(moved.values())
+        if max(abs(moved[role]), spread) <= tolerance_ns:
+            return ''
+        return f'the clock of {role} moved by {moved[role] / 1e9:+.3f} s'
 
     def _flush(self, receive_ns: int) -> None:
         """Close what is there, the last window as far as it goes."""
-        while self.time_base is not None and self.period_ns is not None:
-            lasts = [stream.last_ns for stream in self._closing() if stream.last_ns is not None]
+        while self.time_base is not None and (silent := self._silent_windows()) is not None:
+            if silent:
+                self._skip(silent)
+                continue
+            assert self.period_ns is not None  # set at the freeze
+            last_ns = max(stream.last_ns or 0 for stream in self._closing())
             # The last cell may end beyond the last sample: the grid masks it, but the joint
             # error, which is not gridded, still sees that sample.
-            cells = (max(lasts, default=0) - self._closed_until_ns) // self.period_ns + 1
-            if cells <= 0:
-                return
+            cells = (last_ns - self._closed_until_ns) // self.period_ns + 1
             self._close(min(int(cells), self._window_cells), receive_ns)
 
     def finish(self, receive_ns: int) -> None:
         """Close everything; nothing may be added afterwards."""
         if not self._ready:
-            if self._awaits_description and self.robot is None:
-                self._problem(f'{self.name}: no robot description came on '
+            self.problems.say(f'{self.name}: no robot description came on '
                               f'{self.arm.robot.description_topic}; evaluated without it.')
             self._make_ready()
         self.advance(receive_ns)
-        if self.time_base is not None:
-            self._close_ready(receive_ns)
-            self._flush(receive_ns)
-        for role, intake in self.intakes.items():
-            if not intake.stream.counts.messages:
-                self._problem(f'{self.name}: no message came on {intake.stream.topic} ({role}).')
-            elif sentence := intake.never_matched():
-                self._problem(sentence)
-
-    # --------------------------------------------------------------------- words
-
-    def _problem(self, sentence: str) -> None:
-        self.problems[sentence] = self.problems.get(sentence, 0) + 1
-
-    def _note(self, sentence: str) -> None:
-        self.notes[sentence] = self.notes.get(sentence, 0) + 1
+        self._flush(receive_ns)
+        for age in self.ages.values():
+            age.close_window(receive_ns)
+        for sentence in silent_inputs(self.name, self.intakes, self.states):
+            self.problems.say(sentence)
 
     def all_problems(self) -> list[str]:
         """Return every problem sentence, each with how often it was met if more than once."""
-        found = dict(self.problems)
-        for intake in self.intakes.values():
-            found.update(intake.problems)
-        return [text if times == 1 else f'{text} ({times} times)'
-                for text, times in found.items()]
-
-
-def _rate_hz(times_ns: np.ndarray) -> float:
-    """Return the mean rate of samples (n,), pauses left out."""
-    periods = np.diff(np.unique(times_ns))
-    typical = np.median(periods) if len(periods) else 0
-    kept = periods[periods <= 5 * typical]
-    return float(1e9 / kept.mean()) if len(kept) and kept.mean() > 0 else MIN_GRID_HZ
+        return self.problems.texts() + [
+            text for intake in self.intakes.values() for text in intake.problems.texts()]

@@ -19,7 +19,8 @@ class CellStates:
 
     `engaged`: engaged during the whole cell; `usable`: engaged, settled and under a known
     mapping; `run`: number of the stretch between two boundaries; `label`: index into the
-    arm's mapping labels, -1 for none. `engagements`: labels under which one began.
+    arm's mapping labels, -1 for none. `engagements`: labels under which one began; engaged
+    at the very start counts as one.
     """
 
     engaged: np.ndarray
@@ -40,6 +41,8 @@ class Boundaries:
         self._fixed = None if fixed_label is None else self.index(fixed_label)
         self._settled_ns: int | None = None
         self._run = 0
+        self._begun = False
+        self._unlabelled = 0
 
     def index(self, label: str) -> int:
         """Return the number of a mapping label, a new one for a new label."""
@@ -57,16 +60,17 @@ class Boundaries:
         starts, count = span.cell_starts_ns, span.count
         label = self._label_at(starts)
         engaged = self._engaged_at(starts)
+        begins_engaged = not self._begun and self.engaged is not None and bool(engaged[0])
+        self._begun = True
         usable = engaged & (label >= 0)
         run = np.full(count, self._run, dtype=np.int64)
         if self._settled_ns is not None:
             usable &= starts >= self._settled_ns
-        changes = self._changes(span)
-        for time_ns in changes:
-            cell = int(span.cell_of(np.array([time_ns]))[0])
+        for time_ns in self._changes(span.start_ns, span.end_ns):
+            cell = int((time_ns - span.start_ns) // span.period_ns)
             # A boundary inside a cell spoils it; one on its edge does not.
             inside = span.start_ns + cell * span.period_ns < time_ns
-            if inside and cell < count:
+            if inside:
                 usable[cell] = False
                 engaged[cell] = False
             first = cell + 1 if inside else cell
@@ -74,33 +78,63 @@ class Boundaries:
             run[first:] = self._run
             self._settled_ns = time_ns + settling_ns
             usable[first:] &= starts[first:] >= self._settled_ns
-        engagements = tuple(
-            int(label[min(max(int(span.cell_of(np.array([time_ns]))[0]), 0), count - 1)])
-            for time_ns in self._rises(span))
-        return CellStates(engaged, usable, run, label, engagements)
+        begun = self._engagements(span.start_ns, span.end_ns)
+        known = label[label >= 0]
+        if begins_engaged:
+            begun.insert(0, int(label[0]))
+        return CellStates(engaged, usable, run, label,
+                          self._labelled(begun, int(known[0]) if len(known) else -1))
+
+    def skip(self, start_ns: int, end_ns: int, *, settling_ns: int) -> tuple[int, ...]:
+        """
+        Pass over a stretch without samples: its boundaries count, its cells do not.
+
+        Returns
+        -------
+        Labels under which an engagement began.
+
+        """
+        self._run += 1
+        changes = self._changes(start_ns, end_ns)
+        if changes:
+            self._settled_ns = changes[-1] + settling_ns
+        return self._labelled(self._engagements(start_ns, end_ns), -1)
+
+    def _labelled(self, begun: list[int], first_known: int) -> tuple[int, ...]:
+        """Return labels of engagements; those before any label wait for the first one."""
+        self._unlabelled += begun.count(-1)
+        found = [label for label in begun if label >= 0]
+        if first_known >= 0:
+            found += [first_known] * self._unlabelled
+            self._unlabelled = 0
+        return tuple(found)
 
     def _label_at(self, times_ns: np.ndarray) -> np.ndarray:
+        """Return the mapping's index (n,) at each time, -1 where there is none."""
         if self.mapping is None:
             return np.full(len(times_ns), -1 if self._fixed is None else self._fixed)
-        found = self.mapping.at(times_ns)
-        return np.array([self.index(label) if isinstance(label, str) and label else -1
-                         for label in found], dtype=np.int64)
+        codes = [-1] + [self.index(label) if isinstance(label, str) and label else -1
+                        for label in self.mapping.known()]
+        return np.array(codes, dtype=np.int64)[self.mapping.place(times_ns)]
 
     def _engaged_at(self, times_ns: np.ndarray) -> np.ndarray:
         if self.engaged is None:
             return np.ones(len(times_ns), dtype=bool)
-        return np.array([value is True for value in self.engaged.at(times_ns)], dtype=bool)
+        values = [False] + [value is True for value in self.engaged.known()]
+        return np.array(values)[self.engaged.place(times_ns)]
 
-    def _changes(self, span: Span) -> list[int]:
+    def _changes(self, start_ns: int, end_ns: int) -> list[int]:
+        """Return the times in [start, end) at which clutch or mapping changed."""
         found: set[int] = set()
         for state in (self.engaged, self.mapping):
             if state is not None:
-                found.update(state.changes(span.start_ns - 1, span.end_ns - 1))
+                found.update(state.changes(start_ns, end_ns))
         return sorted(found)
 
-    def _rises(self, span: Span) -> list[int]:
+    def _engagements(self, start_ns: int, end_ns: int) -> list[int]:
+        """Return the label of each engagement that began in [start, end)."""
         if self.engaged is None:
             return []
-        times = self.engaged.changes(span.start_ns - 1, span.end_ns - 1)
-        return [time for time, value in zip(times, self.engaged.at(np.array(times)), strict=True)
-                if value is True]
+        times = np.array(sorted(set(self.engaged.changes(start_ns, end_ns))), dtype=np.int64)
+        rises = times[self._engaged_at(times)]
+        return [int(label) for label in self._label_at(rises)]

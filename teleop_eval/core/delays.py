@@ -5,6 +5,7 @@
 from __future__ import annotations
 
 import re
+from array import array
 from collections import Counter, deque
 from dataclasses import dataclass
 
@@ -12,7 +13,7 @@ import numpy as np
 
 from teleop_eval.core.blocks import median_ci
 from teleop_eval.core.latency import DelayEstimate
-from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
 
 # The level on /diagnostics follows the median of so many valid windows in a row.
 LEVEL_WINDOWS = 3
@@ -27,7 +28,7 @@ class Observed:
 
 
 class DelayNow:
-    """What is known of one delay at this moment, whatever the mapping."""
+    """What is known of one delay at this moment."""
 
     def __init__(self) -> None:
         self._last: tuple[float, int] | None = None
@@ -55,22 +56,28 @@ class DelayNow:
         """Return the median of the last three valid windows in a row, None if fewer."""
         return float(np.median(self._recent)) if len(self._recent) == LEVEL_WINDOWS else None
 
-    def forget(self) -> None:
-        """Begin anew, as after a change of mapping: another delay may hold now."""
-        self._last = None
+    def interrupt(self) -> None:
+        """Go on after a pause: the last delay still serves until it is too old."""
         self._recent.clear()
         self.estimate = None
 
 
 class DelayStatistics:
-    """All window estimates of one delay under one mapping."""
+    """
+    Window estimates of one delay under one mapping.
+
+    Windows overlap, but only those count that do not: from each one that gave a value to the
+    next that begins after its end.
+    """
 
     def __init__(self) -> None:
-        self._estimates: list[DelayEstimate] = []
+        # One every ten seconds: 70 kB in 8 h.
+        self._delays, self._errors, self._peaks = array('d'), array('d'), array('d')
+        self._samples = 0
         self._free_from_ns: int | None = None
         self.windows = 0
         self._reasons: Counter[str] = Counter()
-        self._sentence: dict[str, str] = {}
+        self._newest: dict[str, DelayEstimate] = {}
         self._space = ''
 
     def add(self, estimate: DelayEstimate, start_ns: int, end_ns: int, space: str) -> None:
@@ -80,13 +87,16 @@ class DelayStatistics:
         self._space = space
         self.windows += 1
         if estimate.delay_s is not None:
-            self._estimates.append(estimate)
+            self._delays.append(estimate.delay_s)
+            self._errors.append(estimate.standard_error_s or 0.0)
+            self._peaks.append(estimate.correlation)
+            self._samples += estimate.samples
             self._free_from_ns = end_ns
         else:
             # Sentences differ in their numbers; the same words are the same reason.
             words = re.sub(r'[0-9.]+', '#', estimate.reason)
             self._reasons[words] += 1
-            self._sentence[words] = estimate.reason
+            self._newest[words] = estimate
 
     def restart(self) -> None:
         """Forget the time axis, as at the start of a segment."""
@@ -99,27 +109,24 @@ class DelayStatistics:
         `reason` says why there is no window at all; `caveat` goes with a value.
         """
         details: dict[str, object] = {'windows': self.windows}
-        if not self._estimates:
+        if not self._delays:
             if not self._reasons:
                 return missing(INSUFFICIENT, 's', reason, **details)
             words, times = self._reasons.most_common(1)[0]
-            return missing(
-                UNOBSERVABLE, 's', f'{self._sentence[words]} (in {times} of {self.windows} '
-                'windows that gave no value)', **details)
-        delays = np.array([estimate.delay_s for estimate in self._estimates])
-        errors = np.array([estimate.standard_error_s for estimate in self._estimates])
-        peaks = np.array([estimate.correlation for estimate in self._estimates])
+            newest = self._newest[words]
+            return missing(newest.status, 's', f'{newest.reason} (in {times} of {self.windows} '
+                           'windows that gave no value)', **details)
+        delays, errors = np.array(self._delays), np.array(self._errors)
         details |= {
             'standard_error_s': float(np.sqrt(np.mean(errors ** 2))),
             'p95_s': float(np.percentile(delays, 95.0)),
             'spread_s': float(np.std(delays, ddof=1)) if len(delays) > 1 else None,
-            'correlation': float(np.median(peaks)),
+            'correlation': float(np.median(self._peaks)),
             'space': self._space,
         }
         return Metric(
             float(np.median(delays)), 's', median_ci(delays), len(delays),
-            int(sum(estimate.samples for estimate in self._estimates)), reason=caveat,
-            details=details)
+            self._samples, reason=caveat, details=details)
 
 
 def window_metric(estimate: DelayEstimate | None, space: str) -> Metric:

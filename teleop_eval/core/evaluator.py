@@ -18,6 +18,7 @@ from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.reachable_cells import ReachableCells, ReachableSet
 from teleop_eval.core.results import StatusLine, WindowResult
 from teleop_eval.core.samples import Sample, TextSample
+from teleop_eval.core.sentences import Sentences
 from teleop_eval.core.settings import Settings, ThresholdSettings
 from teleop_eval.core.status import ArmStatus
 from teleop_eval.core.summary import arm_summary
@@ -66,14 +67,16 @@ class SessionEvaluator:
         self._resolve = resolve
         self._simulated_time = simulated_time
         self._receive_ns = 0
-        self._notes: dict[str, int] = {}
+        self._notes = Sentences()
+        self._results: list[WindowResult] = []
         self._thresholds = settings.thresholds
         self._reachable: dict[str, ReachableCells] = {}
         self._make_arms()
 
     def _make_arms(self) -> None:
         self.arms = {
-            name: ArmEvaluator(name, self.settings, urdf=self._descriptions.get(name))
+            name: ArmEvaluator(name, self.settings, urdf=self._descriptions.get(name),
+                               results=self._results)
             for name in self.settings.arms}
         self._status = {name: ArmStatus(arm) for name, arm in self.arms.items()}
         routes: dict[str, list[Route]] = {}
@@ -124,7 +127,7 @@ class SessionEvaluator:
         text = sample.text if isinstance(sample, TextSample) else ''
         if text == 'segment':
             for arm in self.arms.values():
-                arm.new_segment('the receive clock stepped back')
+                arm.new_segment('the receive clock stepped back', self._receive_ns)
         elif text == 'reset':
             self._reset()
 
@@ -140,15 +143,13 @@ class SessionEvaluator:
                 latest = held[name][role].latest
                 if latest is not None:
                     state.add(self._receive_ns, latest, None)
-        note = 'the evaluation was reset'
-        self._notes[note] = self._notes.get(note, 0) + 1
+        self._notes.say('the evaluation was reset')
 
     def poll(self) -> list[WindowResult]:
         """Return the windows closed since the last call, in order of closing."""
-        found = [result for arm in self.arms.values() for result in arm.results]
-        for arm in self.arms.values():
-            arm.results.clear()
-        return sorted(found, key=lambda result: (result.receive_ns, result.arm, result.end_ns))
+        found = self._results[:]
+        self._results.clear()
+        return found
 
     def background(self, postures: int = 20_000) -> bool:
         """Sample a slice of the reachable workspace; return whether there is more to do."""
@@ -186,11 +187,8 @@ class SessionEvaluator:
     @property
     def notes(self) -> list[str]:
         """Return further sentences, such as why receive time is used."""
-        found = dict(self._notes)
-        for arm in self.arms.values():
-            found.update(arm.notes)
-        return [text if times == 1 else f'{text} ({times} times)'
-                for text, times in found.items()]
+        return self._notes.texts() + [
+            text for arm in self.arms.values() for text in arm.notes.texts()]
 
     def summary(self) -> dict[str, Any]:
         """Return the evaluation as it stands, in plain types."""

@@ -4,6 +4,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from teleop_eval.core.joint_match import JointMatcher
@@ -14,10 +16,8 @@ from teleop_eval.core.samples import (
     Sample,
     TrajectorySample,
 )
+from teleop_eval.core.sentences import Sentences
 from teleop_eval.core.streams import Row, SampledStream
-
-# A planned point has no successor yet: its interval is never a gap.
-NEVER_A_GAP_NS = 2 ** 62
 
 
 class Intake:
@@ -27,7 +27,11 @@ class Intake:
     Attributes
     ----------
     problems
-        Sentences with how often each was met.
+        Sentences about what could not be used.
+    posed
+        Whether poses come, not joints.
+    foreign_messages
+        Number of messages with none of the wanted joints, as of a gripper.
 
     """
 
@@ -35,8 +39,7 @@ class Intake:
         self._arm = arm
         self.stream = stream
         self.matcher = matcher
-        self.problems: dict[str, int] = {}
-        self.planned = False
+        self.problems = Sentences()
         self.posed = False
         self.foreign_messages = 0
         self._frame_id: str | None = None
@@ -47,6 +50,10 @@ class Intake:
 
     def rows(self, receive_ns: int, sample: Sample) -> list[Row]:
         """Return the rows of a sample, [] if it cannot be used."""
+        posed = isinstance(sample, PoseSample)
+        if self.stream.matched and posed != self.posed:
+            self.problem('poses and joints came on one topic; only the first kind is used')
+            return []
         if isinstance(sample, PoseSample):
             return self._pose(receive_ns, sample)
         if isinstance(sample, JointSample):
@@ -55,69 +62,79 @@ class Intake:
             return self._trajectory(receive_ns, sample)
         if isinstance(sample, ArraySample):
             return self._array(receive_ns, sample)
-        self._problem(f'{type(sample).__name__} is of no use here')
+        self.problem(f'{type(sample).__name__} is of no use here')
         return []
 
     def _pose(self, receive_ns: int, sample: PoseSample) -> list[Row]:
         if self.stream.role in ('robot_joints', 'operator_joints'):
-            self._problem('poses came where joints are expected')
+            self.problem('poses came where joints are expected')
             return []
         self.posed = True
         self.stream.width = 3
         if self._frame_id is None:
             self._frame_id = sample.frame_id
         elif sample.frame_id != self._frame_id:
-            self._problem(f'frame_id changed from {self._frame_id!r} to {sample.frame_id!r}; '
-                          'only messages in the first frame are used')
+            self.problem(f'frame_id changed from {self._frame_id!r} to {sample.frame_id!r}; '
+                         'only messages in the first frame are used')
             return []
-        finite = bool(np.isfinite(sample.position).all())
-        if sample.orientation is not None:
-            finite = finite and bool(np.isfinite(sample.orientation).all())
-        return self._finite(
+        if sample.position.shape != (3,) or (
+                sample.orientation is not None and sample.orientation.shape != (4,)):
+            self.problem('a pose came whose position or orientation has the wrong size')
+            return []
+        finite = _finite(sample.position) and (
+            sample.orientation is None or _finite(sample.orientation))
+        return self._row(
             finite, (receive_ns, sample.stamp_ns, sample.position, sample.orientation, None))
 
     def _joints(self, receive_ns: int, sample: JointSample) -> list[Row]:
         if self.matcher is None:
-            self._problem('joints came where a pose is expected')
+            self.problem('joints came where a pose is expected')
             return []
-        found = self.matcher.values(sample)
-        if found is None:
+        if self.matcher.find(sample.names) is None:
             self._lacking(sample.names)
             return []
+        if len(sample.positions) != len(sample.names) or (
+                sample.enabled is not None and len(sample.enabled) != len(sample.names)):
+            self.problem(f'a message has {len(sample.names)} names but '
+                         f'{len(sample.positions)} positions')
+            return []
+        found = self.matcher.values(sample)
+        assert found is not None  # all joints are there
         values, enabled = found
-        return self._finite(bool(np.isfinite(values).all()),
-                            (receive_ns, sample.stamp_ns, values, None, enabled))
+        return self._row(
+            _finite(values), (receive_ns, sample.stamp_ns, values, None, enabled))
 
     def _array(self, receive_ns: int, sample: ArraySample) -> list[Row]:
         if self.matcher is None or len(sample.values) != len(self.matcher.names):
             wanted = 0 if self.matcher is None else len(self.matcher.names)
-            self._problem(f'{len(sample.values)} numbers came for {wanted} joints; set '
+            self.problem(f'{len(sample.values)} numbers came for {wanted} joints; set '
                           'command.joint_order')
             return []
         values = sample.values * self.matcher.scale
-        return self._finite(bool(np.isfinite(values).all()), (receive_ns, 0, values, None, None))
+        return self._row(_finite(values), (receive_ns, 0, values, None, None))
 
     def _trajectory(self, receive_ns: int, sample: TrajectorySample) -> list[Row]:
         if self.matcher is None:
-            self._problem('a joint trajectory came where a pose is expected')
+            self.problem('a joint trajectory came where a pose is expected')
             return []
-        points = self.matcher.points(sample)
-        if points is None:
+        if self.matcher.find(sample.names) is None:
             self._lacking(sample.names)
             return []
-        self.planned = True
-        start_ns = sample.stamp_ns or receive_ns
+        if sample.positions.shape != (len(sample.offsets_ns), len(sample.names)):
+            self.problem('a joint trajectory came whose points do not have its joints')
+            return []
+        points = self.matcher.points(sample)
+        assert points is not None  # all joints are there
+        self.stream.planned = True
         rows: list[Row] = []
         for offset_ns, point in zip(sample.offsets_ns.tolist(), points, strict=True):
-            time_ns = start_ns + offset_ns
-            # Both columns carry the planned time, so that either time base finds it.
-            stamp_ns = time_ns if sample.stamp_ns else 0
-            rows += self._finite(bool(np.isfinite(point).all()),
-                                 (time_ns if not sample.stamp_ns else receive_ns + offset_ns,
-                                  stamp_ns, point, None, None))
+            # A zero stamp means that the plan starts on receipt.
+            stamp_ns = sample.stamp_ns + offset_ns if sample.stamp_ns else 0
+            rows += self._row(
+                _finite(point), (receive_ns + offset_ns, stamp_ns, point, None, None))
         return rows
 
-    def _finite(self, finite: bool, row: Row) -> list[Row]:
+    def _row(self, finite: bool, row: Row) -> list[Row]:
         if not finite:
             self.stream.counts.non_finite += 1
             return []
@@ -129,16 +146,23 @@ class Intake:
             self.foreign_messages += 1
             return
         lacking = ', '.join(self.matcher.missing)
-        self._problem(f'joint {lacking} is missing; the message has {", ".join(names)}')
+        self.problem(f'joint {lacking} is missing; the message has {", ".join(names)}')
 
-    def _problem(self, text: str) -> None:
-        sentence = f'{self._arm}: {self.stream.role} ({self.stream.topic}): {text}.'
-        self.problems[sentence] = self.problems.get(sentence, 0) + 1
+    def problem(self, text: str) -> None:
+        """Note what is wrong with this input."""
+        self.problems.say(f'{self._arm}: {self.stream.role} ({self.stream.topic}): {text}.')
 
     def never_matched(self) -> str:
         """Return the sentence for a topic whose messages have none of the wanted joints."""
-        if self.matcher is None or not self.foreign_messages or self.stream.present:
+        if self.matcher is None or not self.foreign_messages or self.stream.matched:
             return ''
         return (f'{self._arm}: {self.stream.role} ({self.stream.topic}): none of the joints '
                 f'{", ".join(self.matcher.names)} was in {self.foreign_messages} messages; '
                 'check joint names and topic.')
+
+
+def _finite(values: np.ndarray) -> bool:
+    """Tell whether all values (n,) are finite; this is called for every message."""
+    # A sum of squares is finite only if every part is: numbers too large to square are not
+    # positions.
+    return math.isfinite(values.dot(values))

@@ -23,6 +23,7 @@ class ArmStatus:
     def __init__(self, arm: ArmEvaluator) -> None:
         self._arm = arm
         self._latency = RisingLevel()
+        self._label = -1
         self._margin = MarginLevel()
         self.last_receive_ns: dict[str, int] = {}
 
@@ -48,7 +49,8 @@ class ArmStatus:
             if topic is None:
                 continue
             last = self.last_receive_ns.get(role)
-            held = role == 'command' and arm.arm.command.hold
+            intake = arm.intakes.get(role)
+            lasting = intake is not None and not intake.stream.closes_windows
             if last is None:
                 level = LEVEL_STALE
                 words.append(f'no message on {topic} yet')
@@ -56,11 +58,14 @@ class ArmStatus:
                 continue
             age = (now_ns - last) / 1e9
             values[f'{role} age (s)'] = f'{age:.2f}'
-            if not held and age > thresholds.stale_s:
+            if not lasting and age > thresholds.stale_s:
                 level = LEVEL_STALE
                 words.append(f'{topic} is silent for {age:.1f} s')
         for role, state in arm.states.items():
             values[role] = 'none yet' if state.latest is None else str(state.latest)
+            if state.latest is None:
+                level = LEVEL_STALE
+                words.append(f'no message on {state.topic} yet')
         if arm.time_base is not None:
             values['time base'] = arm.time_base.base
             if not arm.time_base.by_stamp:
@@ -117,9 +122,11 @@ class ArmStatus:
         measured = self._arm.measurement
         if measured is None or measured.newest is None:
             return StatusLine(self._name('latency'), LEVEL_OK, self._waiting(), {})
-        pairs = measured.pairs(measured.label)
+        pairs = measured.latency.pairs(measured.label)
+        if measured.label != self._label:
+            self._label, self._latency = measured.label, RisingLevel()
         name = 'latency_s' if pairs['latency_s'] else 'latency_response_s'
-        metric, now = self._metric(name), measured.now[name]
+        metric, now = self._metric(name), measured.latency.now(measured.label)[name]
         values = {'mapping': self._mapping()}
         for key in pairs:
             values[f'{key[:-2]} (s)'] = _number(self._metric(key), 4)

@@ -11,12 +11,15 @@ their time axis once the arm has frozen its time base.
 from __future__ import annotations
 
 import bisect
+from collections import deque
 from dataclasses import dataclass, field
 
 import numpy as np
 
 # A stamp that falls back further than this belongs to a new run of that clock.
 CLOCK_STEP_NS = 1_000_000_000
+# More than the longest window, warm-up and lateness hold at 1 kHz.
+MOST_ROWS = 200_000
 
 
 @dataclass
@@ -45,27 +48,81 @@ class Items:
     orientations: np.ndarray | None
     enabled: np.ndarray | None
 
+    def picked(self, columns: list[int]) -> Items:
+        """Return the samples with these columns of their values."""
+        return Items(self.times_ns, self.values[:, columns], self.orientations,
+                     None if self.enabled is None else self.enabled[:, columns])
+
+    def since(self, time_ns: int) -> Items:
+        """Return the samples from the last one at or before a time on."""
+        first = max(int(np.searchsorted(self.times_ns, time_ns, side='right')) - 1, 0)
+        return self._cut(slice(first, None))
+
+    def followed_by(self, later: Items) -> Items:
+        """Return these samples up to where the later ones begin, and then those."""
+        if not len(later.times_ns):
+            return self
+        stop = int(np.searchsorted(self.times_ns, later.times_ns[0]))
+        if not stop:
+            return later
+        before = self._cut(slice(0, stop))
+        return Items(
+            np.concatenate([before.times_ns, later.times_ns]),
+            np.concatenate([before.values, later.values]),
+            _both(before.orientations, later.orientations),
+            _both(before.enabled, later.enabled))
+
+    def _cut(self, part: slice) -> Items:
+        return Items(self.times_ns[part], self.values[part],
+                     None if self.orientations is None else self.orientations[part],
+                     None if self.enabled is None else self.enabled[part])
+
+
+def _both(before: np.ndarray | None, later: np.ndarray | None) -> np.ndarray | None:
+    if before is None or later is None:
+        return None
+    return np.concatenate([before, later])
+
 
 Row = tuple[int, int, np.ndarray, 'np.ndarray | None', 'np.ndarray | None']
 """One sample: receive_ns, stamp_ns, value (d,), orientation (4,) or None, enabled or None."""
 
 
 class SampledStream:
-    """One input that is interpolated, or a held command with times of its own."""
+    """
+    One input with times of its own: interpolated, held or planned ahead.
 
-    def __init__(self, role: str, topic: str) -> None:
+    Attributes
+    ----------
+    held
+        Whether a value stays until the next one (a command with zero-order hold).
+    planned
+        Whether one message gives several points ahead of time, which replace those of the
+        message before from the first point on.
+    matched
+        Whether any message could be used, in whatever segment.
+    offset_ns
+        Time on the axis minus receive time.
+
+    """
+
+    def __init__(self, role: str, topic: str, *, held: bool = False) -> None:
         self.role = role
         self.topic = topic
+        self.held = held
+        self.planned = False
+        self.matched = False
         self.counts = StreamCounts()
         self.width = 0
         self.restart()
 
     def restart(self) -> None:
         """Begin anew, as at the start of a segment; counts go on."""
-        self.raw: list[Row] = []
+        self._raw: deque[list[Row]] = deque(maxlen=MOST_ROWS)
         self._times: list[int] = []
         self._rows: list[Row] = []
-        self._by_stamp: bool | None = None
+        self.frozen = False
+        self.by_stamp = False
         self._last_stamp = 0
         self.watermark_ns: int | None = None
         self.last_ns: int | None = None
@@ -73,13 +130,24 @@ class SampledStream:
         self.max_gap_ns = 0
 
     @property
+    def closes_windows(self) -> bool:
+        """Tell whether windows wait for this stream: not for what lasts or is planned."""
+        return not (self.held or self.planned)
+
+    @property
     def present(self) -> bool:
         """Tell whether any sample has come in this segment."""
-        return bool(self.raw) or self.last_ns is not None
+        return bool(self._raw) or self.last_ns is not None
 
-    def drop_raw(self) -> None:
-        """Forget what came before a clock step inside the warm-up."""
-        self.raw.clear()
+    @property
+    def raw(self) -> list[Row]:
+        """Return the samples that came before the freeze."""
+        return [row for rows in self._raw for row in rows]
+
+    def drop_raw(self, *, keep: int = 0) -> None:
+        """Forget what came before the freeze, but for the newest `keep` messages."""
+        while len(self._raw) > keep:
+            self._raw.popleft()
 
     def stepped_back(self, stamp_ns: int) -> bool:
         """Tell whether a stamp falls back by more than the clock step, and remember it."""
@@ -87,42 +155,84 @@ class SampledStream:
         self._last_stamp = stamp_ns
         return stepped
 
-    def add(self, row: Row) -> None:
-        """Take one sample: raw before the freeze, on the time axis after it."""
-        if self._by_stamp is None:
-            self.raw.append(row)
+    def add(self, rows: list[Row]) -> None:
+        """Take the rows of one message: raw before the freeze, on the axis after it."""
+        self.matched = True
+        if self.frozen:
+            self._take(rows)
         else:
-            self._accept(row)
+            self._raw.append(rows)
 
     def freeze(self, *, by_stamp: bool, offset_ns: int, max_gap_ns: int) -> None:
         """Fix the time axis and put the raw samples on it."""
-        self._by_stamp = by_stamp
+        self.frozen = True
+        self.by_stamp = by_stamp
         self.offset_ns = offset_ns
         self.max_gap_ns = max_gap_ns
-        raw, self.raw = self.raw, []
-        for row in raw:
-            self._accept(row)
+        raw, self._raw = self._raw, deque(maxlen=MOST_ROWS)
+        for rows in raw:
+            self._take(rows)
 
-    def replace_after(self, time_ns: int) -> None:
-        """Drop planned samples from a time on: a new trajectory replaces the old one's rest."""
-        keep = bisect.bisect_left(self._times, time_ns)
-        del self._times[keep:]
-        del self._rows[keep:]
-        self.last_ns = self._times[-1] if self._times else self.watermark_ns
+    def time_of(self, row: Row) -> int:
+        """Return a row's time on the axis; without a stamp it follows from receive time."""
+        return row[1] if self.by_stamp and row[1] else row[0] + self.offset_ns
 
-    def _accept(self, row: Row) -> None:
-        time_ns = row[1] if self._by_stamp else row[0]
-        if self.watermark_ns is not None and time_ns < self.watermark_ns:
-            self.counts.late += 1
-            return
-        last = self.last_ns
-        if last is not None:
-            if time_ns <= last:
+    def _take(self, rows: list[Row]) -> None:
+        if self.planned:
+            self._replan(rows)
+        elif self.held:
+            self._hold(rows)
+        else:
+            self._sample(rows)
+        if len(self._times) > MOST_ROWS:
+            # Only a stream gets here that runs on while no window closes.
+            del self._times[:MOST_ROWS // 2]
+            del self._rows[:MOST_ROWS // 2]
+
+    def _sample(self, rows: list[Row]) -> None:
+        for row in rows:
+            time_ns, last = self.time_of(row), self.last_ns
+            if self.watermark_ns is not None and time_ns < self.watermark_ns:
+                self.counts.late += 1
+                continue
+            if last is not None:
+                if time_ns <= last:
+                    self.counts.out_of_order += 1
+                    continue
+                if time_ns - last > self.max_gap_ns:
+                    self.counts.gaps += 1
+                    self.counts.gap_ns += time_ns - last
+            self._append(time_ns, row)
+
+    def _hold(self, rows: list[Row]) -> None:
+        for row in rows:
+            time_ns = self.time_of(row)
+            if self.watermark_ns is not None and time_ns < self.watermark_ns:
+                # Dropped, the value before it would go on until the next message.
+                self.counts.late += 1
+                time_ns = self.watermark_ns
+                if self.last_ns == time_ns:
+                    self._rows[-1] = row
+                    continue
+            if self.last_ns is not None and time_ns <= self.last_ns:
                 self.counts.out_of_order += 1
-                return
-            if time_ns - last > self.max_gap_ns:
-                self.counts.gaps += 1
-                self.counts.gap_ns += time_ns - last
+                continue
+            self._append(time_ns, row)
+
+    def _replan(self, rows: list[Row]) -> None:
+        # Points before the watermark stay: the plan leads from them into the next window.
+        cut = bisect.bisect_left(self._times, self.time_of(rows[0]))
+        del self._times[cut:]
+        del self._rows[cut:]
+        self.last_ns = self._times[-1] if self._times else None
+        for row in rows:
+            time_ns = self.time_of(row)
+            if self.last_ns is not None and time_ns <= self.last_ns:
+                self.counts.out_of_order += 1
+                continue
+            self._append(time_ns, row)
+
+    def _append(self, time_ns: int, row: Row) -> None:
         self._times.append(time_ns)
         self._rows.append(row)
         self.last_ns = time_ns
@@ -139,23 +249,24 @@ class SampledStream:
     def items(self, end_ns: int) -> Items:
         """Return the kept samples up to and including the first one at or after `end_ns`."""
         stop = min(bisect.bisect_left(self._times, end_ns) + 1, len(self._times))
-        rows = self._rows[:stop]
-        turned = bool(rows) and all(row[3] is not None for row in rows)
-        masked = bool(rows) and all(row[4] is not None for row in rows)
+        times = np.array(self._times[:stop], dtype=np.int64)
+        if not stop:
+            return Items(times, np.zeros((0, self.width)), None, None)
+        _, _, values, orientations, enabled = zip(*self._rows[:stop], strict=True)
         return Items(
-            np.array(self._times[:stop], dtype=np.int64),
-            np.array([row[2] for row in rows], dtype=float).reshape(stop, self.width),
-            np.array([row[3] for row in rows], dtype=float) if turned else None,
-            np.array([row[4] for row in rows], dtype=bool) if masked else None,
+            times, np.concatenate(values).reshape(stop, -1).astype(float, copy=False),
+            None if any(one is None for one in orientations)
+            else np.concatenate(orientations).reshape(stop, 4),
+            None if any(one is None for one in enabled)
+            else np.concatenate(enabled).reshape(stop, -1).astype(bool, copy=False),
         )
 
-    def offset_in(self, start_ns: int, end_ns: int) -> float | None:
-        """Return the median of stamp minus receive time between two times, in ns."""
-        first = bisect.bisect_left(self._times, start_ns)
-        stop = bisect.bisect_left(self._times, end_ns)
-        if stop - first < 5:
+    def offset_from(self, start_ns: int) -> float | None:
+        """Return the median of stamp minus receive time from a time on, in ns."""
+        rows = self._rows[bisect.bisect_left(self._times, start_ns):]
+        if len(rows) < 5:
             return None
-        return float(np.median([row[1] - row[0] for row in self._rows[first:stop]]))
+        return float(np.median([row[1] - row[0] for row in rows]))
 
     def close(self, end_ns: int) -> None:
         """Let go of what no later window needs; samples before `end_ns` are now late."""
@@ -165,9 +276,19 @@ class SampledStream:
         del self._times[:drop]
         del self._rows[:drop]
 
-    def remaining(self) -> list[Row]:
-        """Return the samples at or after the watermark, for the next segment."""
-        return self._rows[bisect.bisect_left(self._times, self.watermark_ns or 0):]
+    def remaining(self) -> list[list[Row]]:
+        """Return what no window has used yet, message by message, for the next segment."""
+        if not self.frozen:
+            return list(self._raw)
+        first = bisect.bisect_left(self._times, self.watermark_ns or 0)
+        # What holds at the watermark began before it.
+        rows = self._rows[max(first - 1, 0) if self.held else first:]
+        return [rows] if self.planned and rows else [[row] for row in rows]
+
+    @property
+    def newest(self) -> Row | None:
+        """Return the newest sample, None before the first."""
+        return self._rows[-1] if self._rows else self._raw[-1][-1] if self._raw else None
 
 
 @dataclass
@@ -183,6 +304,8 @@ class HeldState:
 
     def add(self, receive_ns: int, value: object, watermark_ns: int | None) -> None:
         """Take a new value; a late one holds from the watermark on."""
+        if self._values and self._values[-1] == value:
+            return
         time_ns = receive_ns + self.offset_ns
         if watermark_ns is not None and time_ns < watermark_ns:
             self.counts.late += 1
@@ -198,19 +321,17 @@ class HeldState:
         self.offset_ns = offset_ns
         self._times = [time + change for time in self._times]
 
-    def at(self, times_ns: np.ndarray) -> list[object]:
-        """Return the value that holds at each time, None before the first."""
-        index = np.searchsorted(np.array(self._times, dtype=np.int64), times_ns, side='right')
-        return [self._values[i - 1] if i else None for i in index]
+    def known(self) -> list[object]:
+        """Return the kept values in the order of their times."""
+        return list(self._values)
+
+    def place(self, times_ns: np.ndarray) -> np.ndarray:
+        """Return how many kept values (n,) began at or before each time."""
+        return np.searchsorted(np.array(self._times, dtype=np.int64), times_ns, side='right')
 
     def changes(self, start_ns: int, end_ns: int) -> list[int]:
-        """Return the times in (start, end] at which the value really changed."""
-        found = []
-        for i, time_ns in enumerate(self._times):
-            before = self._values[i - 1] if i else None
-            if start_ns < time_ns <= end_ns and self._values[i] != before:
-                found.append(time_ns)
-        return found
+        """Return the times in [start, end) at which the value changed."""
+        return [time_ns for time_ns in self._times if start_ns <= time_ns < end_ns]
 
     @property
     def latest(self) -> object:

@@ -6,7 +6,8 @@ from __future__ import annotations
 
 from typing import Any
 
-from teleop_eval.core.arm import UNKNOWN_UNIT, ArmEvaluator
+from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.arm_setup import UNKNOWN_UNIT
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
@@ -27,7 +28,7 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
                 'condition': CONDITION,
                 'metrics': {name: metrics[name].to_dict() for name in metrics},
             }
-    base = arm.time_base
+    base = arm.chosen
     return {
         'time_base': {
             'base': None if base is None else base.base,
@@ -49,16 +50,17 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
     """Return every metric of one arm under one mapping, by name."""
     accumulator = measured.accumulators[index]
     label = arm.boundaries.labels[index]
-    model = arm.models.get(label)
+    model = arm.setup.models.get(label)
     no_ideal = _why_no_ideal(arm, label)
     caveat = _clock_caveat(arm)
     found: dict[str, Metric] = {}
-    pairs = measured.pairs(index)
+    pairs = measured.latency.pairs(index)
     for name, delay in accumulator.delays.items():
         if pairs[name] is None:
             found[name] = missing(NOT_CONFIGURED, 's', _why_no_pair(arm, name, no_ideal))
         else:
-            found[name] = delay.metric(caveat=caveat, reason='the run is shorter than a latency window')
+            found[name] = delay.metric(
+                caveat=caveat, reason='the run is shorter than a latency window')
     why_delay = 'no delay was observed to compensate'
     reach = 1.0 if arm.robot is None else arm.robot.reach.length_m
     for prefix, one, reason, hint in (
@@ -103,7 +105,7 @@ def _joint_metrics(arm: ArmEvaluator, accumulator: Any, caveat: str) -> dict[str
                else 'the command is a tool pose, not joints')
         return {name: missing(NOT_CONFIGURED, metric.unit, why)
                 for name, metric in found.items()}
-    if len(arm.joint_names) > 1 and UNKNOWN_UNIT in arm.joint_units:
+    if len(arm.setup.joint_names) > 1 and UNKNOWN_UNIT in arm.setup.joint_units:
         why = ('without a robot description nobody knows which joints turn and which slide; '
                'see the value of each joint')
         found = {name: metric if '.' in name else missing(NOT_CONFIGURED, metric.unit, why)
@@ -131,7 +133,7 @@ def _why_no_ideal(arm: ArmEvaluator, label: str) -> str:
         return f'mapping {label!r} is not configured (configured: {listed})'
     if arm.robot is None:
         return 'this arm has no usable robot description'
-    model = arm.models.get(label)
+    model = arm.setup.models.get(label)
     if model is None:
         return f'mapping {label!r} cannot be modelled; see problems'
     if model.needs not in arm.intakes:
@@ -150,10 +152,10 @@ def _why_no_pair(arm: ArmEvaluator, name: str, no_ideal: str) -> str:
 
 def _clock_caveat(arm: ArmEvaluator) -> str:
     words = []
-    if arm.time_base is not None and not arm.time_base.by_stamp:
+    if arm.ever_by_receive:
         words.append('receive-based: includes the transport of both messages to this computer')
     for role, age in arm.ages.items():
-        if arm.time_base is not None and arm.time_base.by_stamp and (warning := age.warning()):
+        if arm.chosen is not None and arm.chosen.by_stamp and (warning := age.warning()):
             words.append(f'{role}: {warning}')
     return '; '.join(words)
 

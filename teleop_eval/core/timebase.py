@@ -30,6 +30,12 @@ class StreamClock:
     distinct_stamps: int
     offset_ns: int | None
 
+    @property
+    def stands(self) -> bool:
+        """Tell whether the stamps do not advance from message to message."""
+        given = self.stamps - self.zero_stamps
+        return given > 1 and self.distinct_stamps < max(2, given // 2)
+
 
 @dataclass(frozen=True)
 class TimeBase:
@@ -71,7 +77,8 @@ def choose_time_base(clocks: Mapping[str, StreamClock], *, tolerance_ns: int) ->
     Parameters
     ----------
     clocks
-        By role, every stream of the arm that has a time of its own.
+        By role, every sampled stream of the arm. Held and planned ones have no say: they
+        have no regular stamps.
     tolerance_ns
         Largest difference between the offsets of two streams.
 
@@ -83,7 +90,7 @@ def choose_time_base(clocks: Mapping[str, StreamClock], *, tolerance_ns: int) ->
             share = 'all' if clock.zero_stamps == clock.stamps else (
                 f'{clock.zero_stamps} of {clock.stamps}')
             faults.append(f'{role}: {share} header stamps are zero or absent')
-        elif clock.stamps > 4 and clock.distinct_stamps < clock.stamps // 2:
+        elif clock.stands:
             faults.append(f'{role}: header stamps do not advance '
                           f'({clock.distinct_stamps} values in {clock.stamps} messages)')
     known = {role: offset for role, offset in offsets.items() if offset is not None}

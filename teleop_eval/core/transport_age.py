@@ -16,6 +16,8 @@ from teleop_eval.core.metric import NOT_CONFIGURED, UNOBSERVABLE, Metric, missin
 # 5 ms in 100 s.
 DRIFT_S = 0.005
 DRIFT_ERRORS = 4.0
+# More than come in one window; only where no window closes are there as many.
+MOST_PENDING = 100_000
 
 
 class TransportAge:
@@ -23,8 +25,8 @@ class TransportAge:
     Receive time minus header stamp of one input.
 
     Ages are counted from the first one, so that a clock that is off by a minute costs no
-    resolution, with one histogram for either side. The smallest age of each window follows the clocks, since delays only add; its slope
-    over time is the drift.
+    resolution, with one histogram for either side. The smallest age of each window follows
+    the clocks, since delays only add; its slope over time is the drift.
     """
 
     def __init__(self) -> None:
@@ -46,6 +48,8 @@ class TransportAge:
             if self._origin_ns is None:
                 self._origin_ns = receive_ns
             self._pending.append((receive_ns - stamp_ns) / 1e9)
+            if len(self._pending) >= MOST_PENDING:
+                self.close_window(receive_ns)
 
     def close_window(self, receive_ns: int) -> None:
         """Put the pending messages into the statistics."""

@@ -67,7 +67,7 @@ def operator_tracks(hand: SampledStream | None, joints: SampledStream | None, sp
                     geometry: OperatorGeometry) -> dict[str, Track]:
     """Return the operator's tracks: hand, hand_turn, operator_joints, u_o as far as known."""
     tracks: dict[str, Track] = {}
-    if hand is not None and hand.present:
+    if hand is not None:
         items = hand.items(span.end_ns)
         position = on_grid(items, span, max_gap_ns=hand.max_gap_ns)
         tracks['hand'] = position
@@ -77,7 +77,7 @@ def operator_tracks(hand: SampledStream | None, joints: SampledStream | None, sp
         normalised = geometry.normalise(position.values)
         if normalised is not None:
             tracks['u_o'] = Track.computed(normalised, position.valid)
-    if joints is not None and joints.present:
+    if joints is not None:
         items = joints.items(span.end_ns)
         tracks['operator_joints'] = on_grid(items, span, max_gap_ns=joints.max_gap_ns)
     return tracks
@@ -126,8 +126,9 @@ def ideal_tracks(model: MappingModel, operator: dict[str, Track],
         joint_names=operator_joint_names,
         robot_joints=robot_joints,
     ))
-    tracks = {'u_i': Track.computed(robot.normalise(ideal.positions_m, robot_joints),
-                                    source.valid)}
+    # A sliding joint carries the shoulder: the ideal one belongs to the ideal joints.
+    carried = robot_joints if ideal.joints is None else ideal.joints
+    tracks = {'u_i': Track.computed(robot.normalise(ideal.positions_m, carried), source.valid)}
     if ideal.orientations is not None:
         valid = source.valid if model.needs != 'hand' or turn is None else (
             source.valid & turn.valid)

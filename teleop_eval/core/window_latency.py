@@ -1,0 +1,197 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The three delays of one arm, window after window."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from teleop_eval.core.accumulator import LATENCIES, MappingAccumulator
+from teleop_eval.core.delays import DelayNow, Observed, window_metric
+from teleop_eval.core.history import History
+from teleop_eval.core.latency import DelayEstimate, DelaySettings, estimate_delay
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.window import Span
+
+if TYPE_CHECKING:
+    from teleop_eval.core.arm import ArmEvaluator
+
+
+@dataclass(frozen=True)
+class Pair:
+    """Two sides of one latency: names of tracks, columns of each, and the space they are in."""
+
+    reference: str
+    response: str
+    space: str
+    columns: tuple[np.ndarray | None, np.ndarray | None] = (None, None)
+
+
+class WindowLatency:
+    """
+    Estimates each delay at every hop, and knows which delay is in use now.
+
+    Attributes
+    ----------
+    keep_cells
+        Length of the history that an estimate needs.
+    hop_windows
+        Number of windows from one estimate to the next.
+
+    """
+
+    def __init__(self, arm: ArmEvaluator, period_s: float,
+                 chain_columns: np.ndarray | None) -> None:
+        self._arm = arm
+        self._period_s = period_s
+        self._chain_columns = chain_columns
+        latency = arm.settings.latency
+        self._settings = DelaySettings(min_s=latency.min_s, max_s=latency.max_s)
+        self.cells = round(latency.window_s / period_s)
+        keep_s = latency.window_s + self._settings.context_s + latency.max_s
+        self.keep_cells = round(keep_s / period_s) + 2
+        self.hop_windows = round(latency.hop_s / arm.settings.time.window_s)
+        self._now: dict[int, dict[str, DelayNow]] = {}
+        self._spaces = dict.fromkeys(LATENCIES, '')
+        self._seen: set[str] = set()
+
+    def now(self, label: int) -> dict[str, DelayNow]:
+        """Return what is known at this moment of each delay under a mapping."""
+        if label not in self._now:
+            self._now[label] = {name: DelayNow() for name in LATENCIES}
+        return self._now[label]
+
+    def forget(self) -> None:
+        """Forget the delays: their times have no meaning on a new time axis."""
+        self._now.clear()
+
+    def interrupt(self) -> None:
+        """
+        Go on after a pause or under another mapping.
+
+        The delays still serve for their time, but windows do not follow each other.
+        """
+        for known in self._now.values():
+            for now in known.values():
+                now.interrupt()
+
+    def saw(self, names: set[str]) -> None:
+        """Note which tracks there are."""
+        self._seen |= names
+
+    def pairs(self, label: int) -> dict[str, Pair | None]:
+        """Return the two sides of each latency under a mapping, None where there are none."""
+        have = self._seen
+        model = self._arm.setup.models.get(self._arm.boundaries.labels[label])
+        chain = self._chain_columns
+        has_ideal = model is not None and model.needs in have and 'u_i' in have
+        joints_ideal = has_ideal and 'q_i' in have and model.needs == 'operator_joints'
+        found: dict[str, Pair | None] = dict.fromkeys(LATENCIES)
+        if joints_ideal and 'q_r' in have:
+            found['latency_s'] = Pair('q_i', 'q_r', 'joints', (None, chain))
+        elif has_ideal and 'u_r' in have:
+            found['latency_s'] = Pair('u_i', 'u_r', 'tool')
+        elif model is None and {'u_o', 'u_r'} <= have:
+            found['latency_s'] = Pair('u_o', 'u_r', 'hand_to_tool')
+        if joints_ideal and 'q_c' in have:
+            found['latency_command_s'] = Pair('q_i', 'q_c', 'joints', (None, chain))
+        elif has_ideal and 'u_c' in have:
+            found['latency_command_s'] = Pair('u_i', 'u_c', 'tool')
+        if {'q_c', 'q_r'} <= have:
+            found['latency_response_s'] = Pair('q_c', 'q_r', 'joints')
+        elif {'u_c', 'u_r'} <= have:
+            found['latency_response_s'] = Pair('u_c', 'u_r', 'tool')
+        return found
+
+    def measure(self, history: History, span: Span, label: int,
+                accumulator: MappingAccumulator) -> None:
+        """Estimate each delay over the window that ends with the span."""
+        start_ns, now = span.end_ns - self.cells * span.period_ns, self.now(label)
+        for name, pair in self.pairs(label).items():
+            if pair is None:
+                continue
+            self._spaces[name] = pair.space
+            if len(history) < self.cells:
+                need_s = self._arm.settings.latency.window_s
+                now[name].add(_too_short(len(history) * self._period_s, need_s), span.end_ns)
+                continue
+            estimate = self._estimate(history, pair, label)
+            now[name].add(estimate, span.end_ns)
+            accumulator.delays[name].add(estimate, start_ns, span.end_ns, pair.space)
+
+    def _estimate(self, history: History, pair: Pair, label: int) -> DelayEstimate:
+        reference = history.velocity(pair.reference, self._period_s, usable_only=True)
+        response = history.velocity(pair.response, self._period_s, usable_only=False)
+        if reference is None or response is None:
+            return _none('one of the two sides has not come since the last interruption')
+        sides = []
+        for track, columns in zip((reference, response), pair.columns, strict=True):
+            values = track.values if columns is None else track.values[:, columns]
+            sides.append(values * self._joint_weights(columns) if pair.space == 'joints'
+                         else values)
+        stop = len(history)
+        return estimate_delay(
+            sides[0], sides[1], 1.0 / self._period_s,
+            valid_reference=reference.valid & (history.label == label),
+            valid_response=response.valid, runs=history.run,
+            window=(stop - self.cells, stop), settings=self._settings)
+
+    def _joint_weights(self, columns: np.ndarray | None) -> np.ndarray:
+        """Return weights (n,) that put sliding joints (m) on a scale with angles."""
+        arm = self._arm
+        reach = arm.robot.reach.length_m if arm.robot is not None else 1.0
+        weights = np.array(
+            [1.0 / reach if unit == 'm' else 1.0 for unit in arm.setup.joint_units])
+        return weights if columns is None else weights[columns]
+
+    def metrics(self, label: int) -> dict[str, Metric]:
+        """Return the newest estimate of each delay as a metric."""
+        return {
+            name: missing(NOT_CONFIGURED, 's', 'one of the two sides of this delay is not there')
+            if pair is None else window_metric(self.now(label)[name].estimate, self._spaces[name])
+            for name, pair in self.pairs(label).items()}
+
+    def in_use(self, now_ns: int, label: int, names: Sequence[str] = ()) -> Observed | None:
+        """
+        Return the delay under a mapping, None if it is not known.
+
+        It is the sum over `names`, by default a + b from ideal command to robot.
+        """
+        if label < 0:
+            return None
+        age_s = self._arm.settings.latency.max_age_s
+        stages = names or self._stages(label)
+        seen = [self.now(label)[name].observed(now_ns, age_s) for name in stages]
+        known = [one for one in seen if one is not None]
+        if len(known) < len(seen):
+            return None
+        return Observed(sum(one.delay_s for one in known), max(one.age_s for one in known))
+
+    def why_none(self, label: int, unit: str, names: Sequence[str] = ()) -> Metric:
+        """Return the metric for what needs a delay when `in_use` knows none."""
+        estimates = [self.now(label)[name].estimate for name in names or self._stages(label)]
+        tried = any(one is not None and one.status == UNOBSERVABLE for one in estimates)
+        return missing(
+            UNOBSERVABLE if tried else INSUFFICIENT, unit, 'no delay has been observed within '
+            f'{self._arm.settings.latency.max_age_s:g} s')
+
+    def _stages(self, label: int) -> list[str]:
+        pairs = self.pairs(label)
+        return (['latency_command_s', 'latency_response_s']
+                if pairs['latency_command_s'] and pairs['latency_response_s']
+                else ['latency_s'])
+
+
+def _none(reason: str) -> DelayEstimate:
+    nan = float('nan')
+    return DelayEstimate(
+        delay_s=None, standard_error_s=None, correlation=nan, status=INSUFFICIENT,
+        reason=reason, samples=0, speed_reference=nan, speed_response=nan, snr=nan)
+
+
+def _too_short(have_s: float, need_s: float) -> DelayEstimate:
+    return _none(f'the run so far has {have_s:.0f} s of a latency window of {need_s:g} s')
