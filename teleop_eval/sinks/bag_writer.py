@@ -27,6 +27,8 @@ from teleop_eval.sinks.message_definitions import standard_definition
 
 CHUNK_BYTES = 4 << 20
 MAX_QUEUED_BYTES = 64 << 20
+# What a queued message costs besides its data.
+_ROW_BYTES = 64
 _LIBRARY = 'teleop_eval'
 _DISK_FULL = {errno.ENOSPC, errno.EDQUOT}
 
@@ -180,25 +182,25 @@ class BagWriter:
             If the topic was not announced, or a commit that was due failed.
 
         """
-        channel = self._channels.get(topic)
-        if channel is None or self._closed:
-            raise self._cannot_queue(topic)
-        size = len(data) + 64
-        if self._queued + size > MAX_QUEUED_BYTES:
-            self.dropped += 1
-        else:
-            self._rows.append((channel, log_ns, data))
-            self._queued += size
-        if time.monotonic() - self._last_commit >= self._interval:
-            self.flush()
+        self.write_many(((topic, log_ns, data),))
 
     def write_many(self, rows: Iterable[tuple[str, int, bytes]]) -> None:
-        """Queue messages given as (topic, log time in nanoseconds, data)."""
+        """Queue messages given as (topic, log time in nanoseconds, data), as `write` does."""
+        channels, append = self._channels, self._rows.append
         for topic, log_ns, data in rows:
-            self.write(topic, log_ns, data)
+            channel = channels.get(topic)
+            if channel is None or self._closed:
+                raise self._cannot_queue(topic)
+            size = len(data) + _ROW_BYTES
+            if self._queued + size > MAX_QUEUED_BYTES:
+                self.dropped += 1
+            else:
+                append((channel, log_ns, data))
+                self._queued += size
+        self.commit_if_due()
 
     def commit_if_due(self) -> None:
-        """Commit if the interval has passed; call it from the loop when no message comes."""
+        """Commit if the interval has passed; call it when no message comes for a while."""
         if time.monotonic() - self._last_commit >= self._interval:
             self.flush()
 
@@ -267,7 +269,8 @@ class BagWriter:
 
     def _append_chunk(self) -> None:
         """Move rows of at most one chunk's size from the queue into the file."""
-        parts, index = [self._announce] if self._announce else [], {}
+        parts = [self._announce] if self._announce else []
+        index: dict[int, list[bytes]] = {}
         offset, taken, queued = len(self._announce), 0, 0
         start_ns = end_ns = self._rows[0][1] if self._rows else 0
         for channel, log_ns, data in self._rows:
@@ -291,7 +294,7 @@ class BagWriter:
             elif log_ns > end_ns:
                 end_ns = log_ns
             taken += 1
-            queued += size + 64
+            queued += size + _ROW_BYTES
         before = self._file.counts.chunks
         try:
             self._file.append(b''.join(parts), index=index, start_ns=start_ns, end_ns=end_ns)

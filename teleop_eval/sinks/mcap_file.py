@@ -65,7 +65,8 @@ class LiveMcapFile:
         self.counts = rec.Counts()
         self._schemas: dict[int, bytes] = {}
         self._channels: dict[int, bytes] = {}
-        self._chunk_indexes: list[bytes] = []
+        self._chunk_indexes = bytearray()
+        self._largest_index = 128
         self._unindexed: list[bytes] = []
         self._tail_is_stale = False
         self._free = 0
@@ -128,6 +129,7 @@ class LiveMcapFile:
         )
         self._free = _after(self._free + size)
         self._unindexed.append(summary_entry)
+        self._largest_index = max(self._largest_index, len(summary_entry))
         self._count(index, start_ns=start_ns, end_ns=end_ns)
         self.publish()
 
@@ -142,7 +144,7 @@ class LiveMcapFile:
                 continue
             self._insert(entry, self._index_free, self._tail.footer)
             self._index_free = _after(self._index_free + len(entry))
-            self._chunk_indexes.append(self._unindexed.pop(0))
+            self._chunk_indexes += self._unindexed.pop(0)
         self._put(self._statistics(), self._tail.statistics)
 
     def finish(self, metadata: str) -> None:
@@ -176,11 +178,13 @@ class LiveMcapFile:
             counts.messages += len(entries)
             counts.per_channel[channel_id] += len(entries)
 
-    def _put(self, data: bytes, position: int) -> None:
-        view = memoryview(data)
-        while view:
-            written = os.pwrite(self._fd, view, position)
-            view, position = view[written:], position + written
+    def _put(self, data: bytes | bytearray, position: int) -> None:
+        # Views are given back even if an error's traceback lives on: it would pin the data.
+        done = 0
+        with memoryview(data) as whole:
+            while done < len(whole):
+                with whole[done:] as part:
+                    done += os.pwrite(self._fd, part, position + done)
 
     def _put_free_space(self, position: int, end: int) -> None:
         self._put(rec.prefix(rec.PADDING, end - position - rec.PREFIX_SIZE), position)
@@ -216,7 +220,7 @@ class LiveMcapFile:
             raise
         self._tail = tail
         self._index_free = self._index_place(tail)
-        self._chunk_indexes += self._unindexed
+        self._chunk_indexes += b''.join(self._unindexed)
         self._unindexed = []
         self._tail_is_stale = False
 
@@ -234,35 +238,32 @@ class LiveMcapFile:
     def _plan_tail(self, start: int) -> _Tail:
         summary = start + len(rec.data_end())
         statistics = summary + len(self._announcements())
-        entries = self._chunk_indexes + self._unindexed
-        used = statistics + len(self._statistics()) + sum(map(len, entries))
-        # Room for as many chunks again as the next stretch of data may bring.
-        per_chunk = max(map(len, entries[-16:]), default=128) + 2 * rec.PREFIX_SIZE
-        chunks = max(len(entries) // 8, _INDEX_SPACE // 128)
+        used = statistics + len(self._statistics()) + self._entries_size()
+        # Room for an eighth more chunks than there are, as there is for data.
+        per_chunk = self._largest_index + 2 * rec.PREFIX_SIZE
+        chunks = max(self.counts.chunks // 8, _INDEX_SPACE // 128)
         footer = fit_in_page(
             used + 4 * rec.PREFIX_SIZE + per_chunk * chunks, rec.FOOTER_SIZE + len(rec.MAGIC)
         )
         return _Tail(start, summary, statistics, footer)
 
     def _index_place(self, tail: _Tail) -> int:
-        entries = sum(map(len, self._chunk_indexes)) + sum(map(len, self._unindexed))
-        return _after(tail.statistics + len(self._statistics()) + entries)
+        return _after(tail.statistics + len(self._statistics()) + self._entries_size())
+
+    def _entries_size(self) -> int:
+        return len(self._chunk_indexes) + sum(map(len, self._unindexed))
 
     def _write_tail(self, start: int) -> _Tail:
         tail = self._plan_tail(start)
         place = self._index_place(tail)
-        body = b''.join(
-            [
-                rec.data_end(),
-                self._announcements(),
-                self._statistics(),
-                *self._chunk_indexes,
-                *self._unindexed,
-            ]
-        )
-        body += _filler(place - start - len(body))
-        body += rec.prefix(rec.PADDING, tail.footer - place - rec.PREFIX_SIZE)
-        self._put(body, start)
+        head = rec.data_end() + self._announcements() + self._statistics()
+        self._put(head, start)
+        self._put(self._chunk_indexes, start + len(head))
+        end = b''.join(self._unindexed)
+        position = start + len(head) + len(self._chunk_indexes)
+        end += _filler(place - position - len(end))
+        end += rec.prefix(rec.PADDING, tail.footer - place - rec.PREFIX_SIZE)
+        self._put(end, position)
         return tail
 
     def _closing(self, metadata: str, position: int) -> bytes:
@@ -273,7 +274,7 @@ class LiveMcapFile:
             rec.CHANNEL: b''.join(self._channels.values()),
             rec.STATISTICS: self._statistics(metadata=1),
             rec.METADATA_INDEX: rec.metadata_index('rosbag2', offset=position, length=len(stored)),
-            rec.CHUNK_INDEX: b''.join(self._chunk_indexes + self._unindexed),
+            rec.CHUNK_INDEX: bytes(self._chunk_indexes) + b''.join(self._unindexed),
         }
         summary_start = place = position + len(data)
         summary, offsets = b'', b''

@@ -23,6 +23,7 @@ from teleop_eval.sources.stored_file import Message
 
 HEADER, FOOTER, SCHEMA, CHANNEL, MESSAGE, CHUNK = 0x01, 0x02, 0x03, 0x04, 0x05, 0x06
 MESSAGE_INDEX, CHUNK_INDEX, STATISTICS, DATA_END = 0x07, 0x08, 0x0B, 0x0F
+PADDING = 0x80
 PREFIX = Struct('<BQ')
 
 _CHUNK_HEAD = Struct('<QQQII')

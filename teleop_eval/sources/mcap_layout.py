@@ -13,7 +13,7 @@ from typing import BinaryIO
 
 from mcap.data_stream import ReadDataStream
 from mcap.exceptions import McapError
-from mcap.records import Channel, ChunkIndex, Footer, Schema, Statistics
+from mcap.records import Channel, Footer, Schema, Statistics
 
 from teleop_eval.core.errors import RecordingError
 from teleop_eval.sources import mcap_chunk as mc
@@ -22,12 +22,16 @@ MAGIC = b'\x89MCAP0\r\n'
 _FOOTER_SIZE = 29
 _RUN = 1 << 20
 _MESSAGE_HEAD = struct.Struct('<H4xQ')
+_CHUNK_INDEX = struct.Struct('<QQQQI')
+_INDEX_OFFSET = struct.Struct('<HQ')
+_INDEX_LENGTH = struct.Struct('<QI')
+_LENGTH = struct.Struct('<Q')
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, slots=True)
 class Block:
     """
-    A stretch of the file that is read at once: a chunk record, or messages outside chunks.
+    A stretch of the file that is read at once: records with chunks or messages among them.
 
     `channels` is empty where it is not known which channels occur; `partial` marks the chunk
     inside which the file ends.
@@ -37,7 +41,6 @@ class Block:
     size: int
     start_ns: int
     end_ns: int
-    is_chunk: bool
     partial: bool = False
     channels: frozenset[int] = frozenset()
 
@@ -105,45 +108,93 @@ def _summary_start(stream: BinaryIO, size: int) -> int | None:
 
 def _from_summary(stream: BinaryIO, start: int, size: int) -> Layout | None:
     """Read the summary; None where it is damaged or does not cover the file."""
+    layout, chunks = Layout(), _Chunks()
+    total: Statistics | None = None
     stream.seek(start)
-    data = stream.read(size - start)
-    layout, totals = Layout(), []
-
-    def take(opcode: int, content: bytes) -> None:
-        if opcode == mc.STATISTICS:
-            totals.append(Statistics.read(_stream(content)))
-        elif opcode == mc.CHUNK_INDEX:
-            index = ChunkIndex.read(_stream(content))
-            layout.blocks.append(
-                Block(
-                    index.chunk_start_offset,
-                    index.chunk_length,
-                    index.message_start_time,
-                    index.message_end_time,
-                    is_chunk=True,
-                    channels=frozenset(index.message_index_offsets),
-                )
-            )
-        else:
-            layout.take(opcode, content)
-
+    position = start
     try:
-        mc.for_each_record(data, take)
+        while position < size:
+            opcode, length = mc.PREFIX.unpack(stream.read(mc.PREFIX.size))
+            position += mc.PREFIX.size + length
+            if position > size:
+                return None
+            content = stream.read(length)
+            if opcode == mc.FOOTER:
+                break
+            if opcode == mc.STATISTICS:
+                total = Statistics.read(_stream(content))
+            elif opcode == mc.CHUNK_INDEX:
+                chunks.add(content)
+            else:
+                layout.take(opcode, content)
     except (McapError, ValueError, struct.error, EOFError):
         return None
-    if not totals or not _covers(stream, layout, totals[-1], start):
+    layout.blocks = chunks.blocks
+    if total is None or not _covers(stream, layout, total, chunks=chunks, summary=start):
         return None
-    total = totals[-1]
     layout.counts = dict(total.channel_message_counts)
     if total.message_count:
         layout.start_ns, layout.end_ns = total.message_start_time, total.message_end_time
     return layout
 
 
-def _covers(stream: BinaryIO, layout: Layout, total: Statistics, summary: int) -> bool:
+class _Chunks:
+    """
+    Chunks of a summary, small neighbours put together to blocks.
+
+    Hours of recording may have 100 000 chunks; so memory grows with the bytes, not with them.
+    """
+
+    def __init__(self) -> None:
+        self.blocks: list[Block] = []
+        self.count = 0
+        self.spans: dict[int, int] = {}
+        self._span = 0
+        self._memory = 0
+        self._end = -1
+        self._sets: dict[frozenset[int], frozenset[int]] = {}
+
+    def add(self, content: bytes) -> None:
+        """Take in a chunk index record."""
+        start_ns, end_ns, offset, size, map_size = _CHUNK_INDEX.unpack_from(content)
+        place = _CHUNK_INDEX.size + map_size
+        offsets = _INDEX_OFFSET.iter_unpack(content[_CHUNK_INDEX.size : place])
+        channels = frozenset(channel_id for channel_id, _ in offsets)
+        index_length, name_size = _INDEX_LENGTH.unpack_from(content, place)
+        (memory,) = _LENGTH.unpack_from(content, place + _INDEX_LENGTH.size + name_size + 8)
+        self.count += 1
+        if offset == self._end and self._joins(memory, start_ns):
+            last = self.blocks.pop()
+            self._memory += memory
+            # Unknown channels on either side stay unknown.
+            both = last.channels | channels if last.channels and channels else frozenset()
+            new = Block(
+                last.offset,
+                offset + size - last.offset,
+                last.start_ns,
+                max(last.end_ns, end_ns),
+                channels=self._sets.setdefault(both, both),
+            )
+        else:
+            known = self._sets.setdefault(channels, channels)
+            self._memory = memory
+            new = Block(offset, size, start_ns, end_ns, channels=known)
+        self.blocks.append(new)
+        if offset != self._end:
+            self._span = offset
+        self._end = offset + size + index_length
+        self.spans[self._span] = self._end
+
+    def _joins(self, memory: int, start_ns: int) -> bool:
+        return self._memory + memory <= _RUN and start_ns >= self.blocks[-1].end_ns
+
+
+def _covers(
+    stream: BinaryIO, layout: Layout, total: Statistics, *, chunks: _Chunks, summary: int
+) -> bool:
     """Tell whether the summary's chunks and channels are all there is."""
     # A writer killed within a commit leaves totals that are one chunk behind.
-    if len(layout.blocks) != total.chunk_count or len(layout.channels) < total.channel_count:
+    if chunks.count != total.chunk_count or len(layout.channels) < total.channel_count:
         return False
     if any(block.offset + block.size > summary for block in layout.blocks):
         return False
@@ -152,11 +203,10 @@ def _covers(stream: BinaryIO, layout: Layout, total: Statistics, summary: int) -
         return False
     # Messages may also lie outside of chunks; then the gaps between chunks begin with them.
     position = len(MAGIC)
-    chunks = {block.offset: block.size for block in layout.blocks}
     while position < summary:
-        skip = chunks.get(position)
-        if skip is not None:
-            position += skip
+        end = chunks.spans.get(position)
+        if end is not None and end > position:
+            position = end
             continue
         stream.seek(position)
         prefix = stream.read(mc.PREFIX.size)
@@ -247,9 +297,7 @@ class _Scan:
     def _close_run(self) -> None:
         if self._run:
             start, first, last = self._run
-            self._layout.blocks.append(
-                Block(start, self._position - start, first, last, is_chunk=False)
-            )
+            self._layout.blocks.append(Block(start, self._position - start, first, last))
             self._run = []
 
     def _chunk(self, after: int, *, cut: bool) -> None:
@@ -273,7 +321,6 @@ class _Scan:
                 after - self._position,
                 min(stamps),
                 max(stamps),
-                is_chunk=True,
                 partial=cut,
             )
         )

@@ -35,7 +35,7 @@ class McapFile:
         layout = read_layout(path)
         self.notes = list(layout.notes)
         self.start_ns, self.end_ns = layout.start_ns, layout.end_ns
-        self.message_count = sum(layout.counts.values())
+        self.message_count: int | None = sum(layout.counts.values())
         self._blocks = layout.blocks
         self._topic_of: dict[int, str] = {}
         self.topics: dict[str, TopicInfo] = {}
@@ -74,26 +74,55 @@ class McapFile:
                 yield batch
 
     def _load(self, stream: BinaryIO, block: Block, wanted: Mapping[int, str]) -> list[Message]:
+        """Read a block's messages in log-time order."""
         stream.seek(block.offset)
         data = stream.read(block.size)
+        if len(data) < block.size:
+            self._leave_out(block.offset, 'is not where the summary says')
+        parts: list[mc.Walked] = []
+        position = 0
+        while position + mc.PREFIX.size <= len(data):
+            opcode, length = mc.PREFIX.unpack_from(data, position)
+            start = position + mc.PREFIX.size
+            if opcode == mc.CHUNK:
+                walked = self._chunk(block, position, data[start : start + length], wanted)
+                if walked is not None:
+                    parts.append(walked)
+            elif opcode == mc.MESSAGE:
+                parts.append(mc.walk_messages(data[position:], wanted))
+                break
+            elif opcode not in (mc.MESSAGE_INDEX, mc.PADDING):
+                self._leave_out(block.offset + position, 'is not where the summary says')
+                break
+            position = start + length
+        if len(parts) == 1:
+            messages, in_order = parts[0].messages, parts[0].in_order
+        else:
+            messages = [message for walked in parts for message in walked.messages]
+            in_order = False
+        if not in_order:
+            messages.sort(key=_LOG_NS)
+        return messages
+
+    def _chunk(
+        self, block: Block, position: int, content: bytes, wanted: Mapping[int, str]
+    ) -> mc.Walked | None:
+        offset = block.offset + position
         try:
-            if block.is_chunk:
-                if len(data) < block.size or data[:1] != b'\x06':
-                    raise mc.DamagedError('is not where the summary says')
-                data = mc.chunk_records(data[mc.PREFIX.size :], partial=block.partial)
-            walked = mc.walk_messages(data, wanted)
+            walked = mc.walk_messages(mc.chunk_records(content, partial=block.partial), wanted)
         except mc.DamagedError as error:
-            add_note(self.notes, damage_note(self.path, block.offset, str(error)))
-            return []
+            self._leave_out(offset, str(error))
+            return None
         if walked.unread and not block.partial:
             add_note(
                 self.notes,
-                f'A chunk of {self.path.name} at byte {block.offset} ends inside a record; its '
+                f'A chunk of {self.path.name} at byte {offset} ends inside a record; its '
                 'complete messages are used.',
             )
-        if not walked.in_order:
-            walked.messages.sort(key=_LOG_NS)
-        return walked.messages
+        return walked
+
+    def _leave_out(self, offset: int, reason: str) -> None:
+        add_note(self.notes, damage_note(self.path, offset, reason))
 
     def _add_channel(self, layout: Layout, channel_id: int) -> None:
         channel = layout.channels[channel_id]

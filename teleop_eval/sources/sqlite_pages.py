@@ -134,7 +134,7 @@ def _read_row(page: bytes, place: int, number: int) -> _Row | None:
     size, position = _varint(page, place)
     row_id, payload = _varint(page, position)
     head_size, position = _varint(page, payload)
-    kinds = []
+    kinds: list[int] = []
     head_end = payload + head_size
     while position < head_end and len(kinds) < 5:
         kind, position = _varint(page, position)
