@@ -109,7 +109,9 @@ def child(at, tear):
         os._exit(7)
     return os.waitstatus_to_exitcode(os.waitpid(pid, 0)[1])
 
-BagWriter(target / 'warm').close()
+# The first topic makes the table of message types; the children inherit it.
+with BagWriter(target / 'warm') as warm:
+    warm.add_topic('/count', 'std_msgs/msg/UInt64')
 at = 1
 while child(at, 0) == -signal.SIGKILL:
     child(at, 1)
