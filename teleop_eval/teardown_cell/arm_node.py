@@ -9,7 +9,7 @@ import time
 from typing import Any
 
 from sensor_msgs.msg import JointState
-from std_msgs.msg import String
+from std_msgs.msg import Float64, String
 
 from teleop_eval.resources import config_file
 from teleop_eval.teardown_cell.arm import HOME, ArmState, SimulatedArm, arm_chain
@@ -18,6 +18,7 @@ from teleop_eval.teardown_cell.cell_node import (
     SAMPLED,
     SLICE_S,
     CellNode,
+    StartSignal,
     nanoseconds,
     run_node,
     stamp,
@@ -26,13 +27,11 @@ from teleop_eval.teardown_cell.cell_node import (
 from teleop_eval.teardown_cell.plan import (
     COMMAND_TOPIC,
     DESCRIPTION_TOPIC,
+    GRACE_S,
     JOINT_STATES_TOPIC,
+    LATENESS_TOPIC,
     Plan,
 )
-
-# How long a state waits for commands that a busy machine has not delivered yet; then the
-# last command is held, as a drive does whose master is silent.
-GRACE_NS = 400_000_000
 
 
 class Arm:
@@ -49,6 +48,9 @@ class Arm:
         self._description = cell.node.create_publisher(String, DESCRIPTION_TOPIC, LATCHED)
         self._description.publish(String(data=text))
         self._commands = cell.subscribe(JointState, COMMAND_TOPIC, SAMPLED)
+        self._lateness = cell.node.create_publisher(Float64, LATENESS_TOPIC, LATCHED)
+        self._start = StartSignal(cell)
+        self._latest_ns = 0
 
     def work(self) -> None:
         """Take the commands that wait and publish the states that are due."""
@@ -56,14 +58,22 @@ class Arm:
             self._accept(message)
         now = time.time_ns()
         while self._arm.next_ns <= now and (
-                self._arm.ready() or now - self._arm.next_ns > GRACE_NS):
+                self._arm.ready() or now - self._arm.next_ns > GRACE_S * 1e9):
             self._states.publish(self._message(self._arm.advance()))
 
     def _accept(self, message: Any) -> None:
         by_name = dict(zip(message.name, message.position, strict=False))
         if all(name in by_name for name in self._names):
-            self._arm.add_command(nanoseconds(message.header.stamp),
-                                  [by_name[name] for name in self._names])
+            stamp_ns = nanoseconds(message.header.stamp)
+            self._arm.add_command(stamp_ns, [by_name[name] for name in self._names])
+            if self._start.time_at(stamp_ns) >= 0.0:
+                self._note_lateness(time.time_ns() - stamp_ns)
+
+    def _note_lateness(self, late_ns: int) -> None:
+        """Publish how late the latest command came: beyond the grace, the truth is void."""
+        if late_ns > self._latest_ns:
+            self._latest_ns = late_ns
+            self._lateness.publish(Float64(data=late_ns * 1e-9))
 
     def _message(self, state: ArmState) -> JointState:
         message = JointState(name=self._names, position=state.positions.tolist(),

@@ -9,8 +9,8 @@ from collections.abc import Mapping
 
 from std_msgs.msg import Float64
 
-from teleop_eval.teardown_cell.cell_node import SAMPLED, CellNode, take
-from teleop_eval.teardown_cell.plan import ARM_NAME, NAMESPACE, Plan
+from teleop_eval.teardown_cell.cell_node import LATCHED, SAMPLED, CellNode, take
+from teleop_eval.teardown_cell.plan import ARM_NAME, LATENESS_TOPIC, NAMESPACE, Plan
 
 LATENCY, TRACKING = 'latency_s', 'tracking_error_rms_norm'
 
@@ -51,7 +51,7 @@ def live_line(plan: Plan, t: float, values: Mapping[str, float]) -> str:
 
 
 class LiveValues:
-    """The evaluator's metrics as they are published."""
+    """The evaluator's metrics and the lateness of commands as they are published."""
 
     def __init__(self, cell: CellNode) -> None:
         """Subscribe."""
@@ -59,9 +59,13 @@ class LiveValues:
         self._subscriptions = {
             name: cell.subscribe(Float64, f'{NAMESPACE}/teleop_eval/{ARM_NAME}/{name}', SAMPLED)
             for name in (LATENCY, TRACKING)}
+        self._lateness = cell.subscribe(Float64, LATENESS_TOPIC, LATCHED)
+        self.lateness_s = 0.0
 
     def update(self) -> None:
         """Take what has been published."""
         for name, subscription in self._subscriptions.items():
             for message in take(subscription):
                 self.values[name] = float(message.data)
+        for message in take(self._lateness):
+            self.lateness_s = float(message.data)

@@ -17,6 +17,7 @@ import numpy.typing as npt
 from teleop_eval.core.kinematics import SerialChain
 from teleop_eval.core.rotations import to_matrix
 from teleop_eval.teardown_cell.human_arm import JOINT_NAMES, SHOULDER_M, Array, HumanArm
+from teleop_eval.teardown_cell.single_pose import SingleChain
 
 
 @dataclass(frozen=True)
@@ -91,7 +92,8 @@ class Reach:
     def __init__(self, chain: SerialChain, *, shoulder_m: npt.ArrayLike,
                  reach_m: float) -> None:
         """Keep the geometry."""
-        self._chain = chain
+        self._chain = SingleChain(chain)
+        self._lower, self._upper = chain.lower, chain.upper
         self._shoulder = np.asarray(shoulder_m, dtype=float)
         self._scale = reach_m / HumanArm().length_m
 
@@ -131,15 +133,15 @@ class Reach:
         goal, turn = self.target(hand), to_matrix(orientation)
         q = np.array(start, dtype=float)
         for _ in range(self.rounds):
-            pose = self._chain.forward(q[None])
+            pose = self._chain.pose(q.tolist())
             error = np.concatenate([
-                goal - pose.positions[0], _rotation_error(turn, pose.rotations[0])])
+                goal - pose.position, _rotation_error(turn, pose.rotation)])
             if np.max(np.abs(error)) < self.tolerance:
                 break
-            jacobian = self._chain.jacobian(q[None])[0]
+            jacobian = pose.jacobian
             square = jacobian @ jacobian.T + self.damping**2 * np.eye(6)
             step = jacobian.T @ np.linalg.solve(square, error)
-            q = np.clip(q + np.clip(step, -0.3, 0.3), self._chain.lower, self._chain.upper)
+            q = np.clip(q + np.clip(step, -0.3, 0.3), self._lower, self._upper)
         return q
 
 

@@ -6,6 +6,7 @@ from __future__ import annotations
 
 import sys
 import time
+from collections import deque
 
 from geometry_msgs.msg import PoseStamped
 from sensor_msgs.msg import JointState
@@ -29,23 +30,25 @@ from teleop_eval.teardown_cell.plan import (
 
 # Further behind than this, samples are left out, as a tracker would.
 CATCH_UP_NS = 500_000_000
+# Samples computed ahead of time: fewer than between the start signal and the start.
+AHEAD = 20
 
 
-def hand_message(stamp_ns: int, state: OperatorState) -> PoseStamped:
+def hand_message(stamp_ns: int, states: OperatorState, index: int) -> PoseStamped:
     """Return the pose of the hand as a message."""
     message = PoseStamped()
     message.header.stamp = stamp(stamp_ns)
     message.header.frame_id = OPERATOR_FRAME
     position, orientation = message.pose.position, message.pose.orientation
-    position.x, position.y, position.z = map(float, state.hand[0])
+    position.x, position.y, position.z = map(float, states.hand[index])
     orientation.x, orientation.y, orientation.z, orientation.w = map(
-        float, state.orientation[0])
+        float, states.orientation[index])
     return message
 
 
-def joints_message(stamp_ns: int, state: OperatorState) -> JointState:
+def joints_message(stamp_ns: int, states: OperatorState, index: int) -> JointState:
     """Return the operator's joints as a message."""
-    message = JointState(name=list(JOINT_NAMES), position=state.joints[0].tolist())
+    message = JointState(name=list(JOINT_NAMES), position=states.joints[index].tolist())
     message.header.stamp = stamp(stamp_ns)
     message.header.frame_id = OPERATOR_FRAME
     return message
@@ -59,18 +62,31 @@ def body(cell: CellNode, plan: Plan) -> None:
     start = StartSignal(cell)
     period = round(1e9 / plan.timing.operator_rate_hz)
     due = time.time_ns()
+    ahead: deque[tuple[PoseStamped, JointState]] = deque()
     while not cell.stopped:
         now = time.time_ns()
+        if now - due > CATCH_UP_NS:
+            due += (now - due) // period * period
+            ahead.clear()
+        if not ahead:
+            ahead.extend(_messages(motion, start, due, period))
         if now < due:
             sleep_until(due)
             continue
-        if now - due > CATCH_UP_NS:
-            due += (now - due) // period * period
-        state = motion.at([max(start.time_at(due), 0.0)])
-        hand.publish(hand_message(due, state))
-        joints.publish(joints_message(due, state))
+        pose, state = ahead.popleft()
+        hand.publish(pose)
+        joints.publish(state)
         due += period
         cell.watch()
+
+
+def _messages(motion: OperatorMotion, start: StartSignal, due: int,
+              period: int) -> list[tuple[PoseStamped, JointState]]:
+    """Return the messages of the next samples: computed together, they cost a tenth."""
+    stamps = [due + index * period for index in range(AHEAD)]
+    states = motion.at([max(start.time_at(stamp_ns), 0.0) for stamp_ns in stamps])
+    return [(hand_message(stamp_ns, states, index), joints_message(stamp_ns, states, index))
+            for index, stamp_ns in enumerate(stamps)]
 
 
 def main(argv: list[str] | None = None) -> int:

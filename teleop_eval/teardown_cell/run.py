@@ -11,6 +11,7 @@ import sys
 import tempfile
 import time
 from collections.abc import Sequence
+from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
 from typing import Any
@@ -28,6 +29,7 @@ from teleop_eval.teardown_cell.live_line import LiveValues, live_line
 from teleop_eval.teardown_cell.plan import (
     COMMAND_TOPIC,
     DIAGNOSTICS_TOPIC,
+    GRACE_S,
     HAND_TOPIC,
     JOINT_STATES_TOPIC,
     MAX_SECONDS,
@@ -84,25 +86,33 @@ def main(argv: Sequence[str] | None = None) -> int:
     with CellNode('demo', options.domain) as cell:
         session = _free_session(options.out)
         _look(cell)
-        finished = None if cell.stopped else _session(cell, plan, session)
-    if finished is None:
+        outcome = None if cell.stopped else _session(cell, plan, session)
+    if outcome is None:
         _say('Interrupted before the start: nothing was measured.')
         return 1
-    return _report(session, plan, finished)
+    return _report(session, plan, outcome)
 
 
-def _session(cell: CellNode, plan: Plan, session: Path) -> bool | None:
-    """Run all processes; return whether the end was reached, None without a start."""
+@dataclass(frozen=True)
+class Outcome:
+    """Whether the run reached its end, and how late the latest command came, s."""
+
+    finished: bool
+    lateness_s: float
+
+
+def _session(cell: CellNode, plan: Plan, session: Path) -> Outcome | None:
+    """Run all processes; return None when interrupted before the start."""
     with tempfile.TemporaryDirectory(prefix='teardown_cell_') as logs:
         with Children(Path(logs), os.environ) as children:
             _start_children(children, cell, plan, session)
             if not _wait_until_ready(children, cell):
                 return None
-            finished = _run(children, cell, plan)
+            outcome = _run(children, cell, plan)
             _say('The evaluator finishes its files ...')
             children.finish(EVALUATOR, patience_s=EVALUATOR_END_S,
                             hurry=lambda: cell.signals > 1)
-            return finished
+            return outcome
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -197,17 +207,19 @@ def _wait_until_ready(children: Children, cell: CellNode) -> bool:
     return not cell.stopped
 
 
-def _run(children: Children, cell: CellNode, plan: Plan) -> bool:
-    """Give the start and watch until the end; return whether it was reached."""
+def _run(children: Children, cell: CellNode, plan: Plan) -> Outcome:
+    """Give the start and watch until the end."""
     live = LiveValues(cell)
     start = cell.node.create_publisher(Int64, START_TOPIC, LATCHED)
     start_ns = time.time_ns() + 1_000_000_000
     start.publish(Int64(data=start_ns))
-    return _watch(children, cell, plan, live, start_ns)
+    finished = _watch(children, cell, plan, live, start_ns)
+    return Outcome(finished, live.lateness_s)
 
 
 def _watch(children: Children, cell: CellNode, plan: Plan, live: LiveValues,
            start_ns: int) -> bool:
+    """Show what happens; return whether the end was reached."""
     next_line = 0.0
     while not cell.stopped:
         t = (time.time_ns() - start_ns) * 1e-9
@@ -237,18 +249,22 @@ def _missing(cell: CellNode) -> list[str]:
             + [f'listener to {topic}' for topic in topics])
 
 
-def _report(session: Path, plan: Plan, finished: bool) -> int:
+def _report(session: Path, plan: Plan, outcome: Outcome) -> int:
     summary = _read_summary(session)
     _say('Computing the truth ...\n')
     chain = arm_chain(config_file('teardown_arm.urdf').read_text('utf-8'))
     truth = truth_document(chain, plan, window_s=window_s(plan))
+    truth['largest_command_lateness_s'] = outcome.lateness_s
     _write(session / 'truth.json', json.dumps(truth, indent=1) + '\n')
     print_summary(summary, truth=truth)
     _say(f'\n{CAUTION}\n\nSession folder: {session}\n'
          f'Next: teleop_eval summarize {session} --out {session.name}_again')
-    if not finished:
+    if outcome.lateness_s > GRACE_S:
+        _say(f'This machine was too busy: commands came up to {outcome.lateness_s:.2f} s late, '
+             'so the arm waited and the numbers may differ from the truth; run it again.')
+    if not outcome.finished:
         _say('The run was interrupted: the numbers cover what was measured until then.')
-    return 0 if finished else 1
+    return 0 if outcome.finished else 1
 
 
 def _read_summary(session: Path) -> dict[str, Any]:

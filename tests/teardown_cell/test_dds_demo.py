@@ -105,13 +105,17 @@ def test_the_demo_measures_the_truth_and_stays_inside(
     (session,) = tmp_path.iterdir()
     summary = json.loads((session / 'summary.json').read_text())
     truth = json.loads((session / 'truth.json').read_text())
-    _check_numbers(summary, truth)
+    assert ('too busy' in output) == (truth['largest_command_lateness_s'] > 0.4)
+    if 'too busy' not in output:
+        _check_numbers(summary, truth)
     assert 'mirror' in output and 'reach' in output and 'truth' in output
     assert str(session) in output and 'teleop_eval summarize' in output
     assert 'injure' in output and 'no safety function' in output
     assert max(map(len, output.split('Computing the truth')[1].split('This cell is')[0]
                    .splitlines())) <= 80
     assert processes_of(cell_domain) == []
+    if 'too busy' in output:
+        pytest.skip('The machine was too busy for the simulated arm: no numbers to check.')
 
 
 def _check_graph(graph: dict) -> None:

@@ -72,7 +72,7 @@ def test_a_second_cell_in_the_domain_is_refused(
 
 
 @pytest.mark.parametrize(('arguments', 'said'), [
-    (['--domain', '0'], '1 to 101'), (['--seconds', '3'], '16'), (['--seconds', 'nan'], '16'),
+    (['--domain', '0'], '1 to 101'), (['--seconds', '3'], '20'), (['--seconds', 'nan'], '20'),
     (['--seed', '-1'], '--seed')])
 def test_usage_errors(arguments: list[str], said: str) -> None:
     before = dict(os.environ)
