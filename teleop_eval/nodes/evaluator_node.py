@@ -152,7 +152,8 @@ class EvaluatorNode(Node):
                            session.name or datetime.now().strftime('%Y-%m-%d_%H-%M-%S'))
         folder = self._parts.make_folder(
             path, self.settings, self._flat, source='live', record_inputs=session.record_inputs,
-            descriptions=self._descriptions, resolve=self._resolve)
+            descriptions=self._descriptions, resolve=self._resolve,
+            simulated_time=self._simulated)
         evaluator, self._spare = self._spare or self._new_evaluator(), None
         self.session = LiveSession(
             evaluator, folder, event_topic=self._parts.event_topic,
@@ -174,8 +175,7 @@ class EvaluatorNode(Node):
         batch = self.inputs.drain()
         windows = self.session.add(batch.messages)
         session, self.session = self.session, None
-        lines = self._lines(session)
-        session.keep_diagnostics(session.feed_time_ns(self.inputs.clock.now_ns()), lines)
+        self._keep(session, self._lines(session))
         last, whole = session.finish(
             lambda summary: add_losses(summary, self.inputs, self._routes),
             problems=self.inputs.problems_so_far())
@@ -253,8 +253,13 @@ class EvaluatorNode(Node):
         clock_ns = self.inputs.clock.now_ns()
         self.outputs.diagnostics(clock_ns, lines)
         if self.session is not None:
-            self.session.keep_diagnostics(self.session.feed_time_ns(clock_ns), lines)
+            self._keep(self.session, lines)
         self._tell(lines)
+
+    def _keep(self, session: LiveSession, lines: Sequence[StatusLine]) -> None:
+        clock_ns = self.inputs.clock.now_ns()
+        if clock_ns:  # a simulation that has not begun has no time to file them under
+            session.keep_diagnostics(session.feed_time_ns(clock_ns), lines)
 
     def _lines(self, session: LiveSession | None) -> list[StatusLine]:
         recording = self.settings.session.record_inputs

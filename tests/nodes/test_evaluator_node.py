@@ -19,6 +19,7 @@ from rclpy.executors import SingleThreadedExecutor
 from rclpy.node import Node
 from rclpy.parameter import Parameter
 from rclpy.qos import DurabilityPolicy, QoSProfile
+from rosgraph_msgs.msg import Clock
 from sensor_msgs.msg import JointState
 from std_msgs.msg import Bool, Float64, String
 from std_srvs.srv import Trigger
@@ -251,6 +252,34 @@ def test_thresholds_can_be_set_and_nothing_else(make_bench: Any) -> None:
         Parameter('thresholds.latency_error_s', value=0.6)])
     assert both.successful
     assert bench.node.settings.thresholds.latency_warn_s == 0.5
+
+
+def test_simulated_time_is_receive_time_and_a_jump_back_a_segment(
+        make_bench: Any, tmp_path: Path) -> None:
+    bench = make_bench('-p', 'use_sim_time:=true', '-p', 'session.name:=s')
+    assert bench.node.session.evaluator.simulated_time
+    clock = bench.publisher(Clock, '/clock')
+    mapping = bench.publisher(String, '/mapping')
+
+    def send(seconds: int, label: str, count: int) -> None:
+        reading = Clock()
+        reading.clock.sec = seconds
+        clock.publish(reading)
+        wait_until(lambda: bench.node.inputs.clock.now_ns() == seconds * 10**9, bench.step)
+        mapping.publish(String(data=label))
+        bench.wait_fed(count)
+
+    send(100, 'a', 1)
+    send(103, 'b', 2)
+    send(50, 'c', 4)
+    assert [(ns, sample.text) for ns, _, sample in bench.fed()] == [
+        (100 * 10**9, 'a'), (103 * 10**9, 'b'), (103 * 10**9 + 1, 'segment'),
+        (103 * 10**9 + 2, 'c')]
+    bench.node.stop_session()
+    summary = json.loads((tmp_path / 'sessions/s/summary.json').read_text(encoding='utf-8'))
+    assert summary['session']['duration_s'] == pytest.approx(3.0)
+    config = (tmp_path / 'sessions/s/config.yaml').read_text(encoding='utf-8')
+    assert 'use_sim_time: true' in config
 
 
 def test_remapped_topics_are_found(make_bench: Any) -> None:
