@@ -38,8 +38,8 @@ _KNEE_HZ = 0.3
 # Filters that serve before anything is known about the noise: slope and corner.
 _WIDE = (0.5, 4.0)
 _NARROW = (0.5, 1.0)
-# Filter that is never far from the best one.
-_USUAL = (0.5, 3.4)
+# Filter to prefer: best for white noise of a position sensor and motion up to 3 Hz.
+_USUAL = (1.0, 3.4)
 
 
 @dataclass(frozen=True)
@@ -48,8 +48,8 @@ class Bank:
     Filters at one working rate, with their power at given frequencies.
 
     `taps` of each filter, `power` (filters, frequencies) its squared magnitude; `usual` the
-    index of the filter that does well whatever the noise; `detection` the wide and the narrow
-    filter to find a peak with, `detection_power` (2, frequencies) theirs.
+    index of the filter to prefer while nothing speaks against it; `detection` the wide and
+    the narrow filter to find a peak with, `detection_power` (2, frequencies) theirs.
     """
 
     frequencies_hz: np.ndarray

@@ -1,8 +1,6 @@
 # Copyright 2026 The teleop_eval authors
 # SPDX-License-Identifier: Apache-2.0
-"""
-First look for a delay over the whole range, and the checks whether there is one to tell.
-"""
+"""First look for a delay over the whole range, and the checks that there is one to tell."""
 
 from __future__ import annotations
 
