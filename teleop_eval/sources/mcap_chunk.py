@@ -86,6 +86,9 @@ def _decompress(data: bytes, compression: str, size: int) -> bytes:
         if compression == '':
             records = data
         elif compression == 'zstd':
+            # A damaged head may state gigabytes, which would be reserved at once.
+            if zstandard.frame_content_size(data) not in (-1, size):
+                raise DamagedError('has another size than stated')
             records = zstandard.ZstdDecompressor().decompress(data, max_output_size=size)
         elif compression == 'lz4':
             records = lz4.frame.decompress(data)
