@@ -242,7 +242,7 @@ def variance_of_product_sum(
 
     """
     first, second = rfft(signal, size, axis=0), rfft(noise, size, axis=0)
-    used = np.count_nonzero(np.any(noise != 0.0, axis=1))
+    used = max(1, int(np.count_nonzero(np.any(noise != 0.0, axis=1))))
     # Zero and the Nyquist bin would count once, all others twice; both are negligible.
     blocks = len(first) // smoothing
     trimmed = blocks * smoothing
@@ -251,4 +251,4 @@ def variance_of_product_sum(
     matrices_1 = first.conj().transpose(0, 2, 1) @ first
     matrices_2 = second.transpose(0, 2, 1) @ second.conj()
     total = np.vdot(matrices_2.conj(), matrices_1).real
-    return 2.0 * float(total) / (smoothing * size * max(used, 1))
+    return 2.0 * float(total) / (smoothing * size * used)

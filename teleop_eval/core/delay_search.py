@@ -90,10 +90,10 @@ def check_motion(speeds: tuple[float, float], settings: DelaySettings) -> None:
 def check_chance(search: Search, rate: float, settings: DelaySettings) -> None:
     """Refuse a peak that unrelated motions of these spectra could have."""
     highest = search.highest
-    centred = [_centred(series) for series in search.pair]
+    centred = (_centred(search.pair[0]), _centred(search.pair[1]))
     size = next_fast_len(2 * len(centred[0]), True)
     smoothing = max(1, round(SMOOTHING_HZ * size / rate))
-    spread = variance_of_product_sum(*centred, smoothing, size)
+    spread = variance_of_product_sum(centred[0], centred[1], smoothing, size)
     energy = np.sum(centred[0] ** 2) * np.sum(centred[1] ** 2)
     valid = np.count_nonzero(search.pair[1].valid)
     share = search.found.pairs[search.best] / max(1, valid)
