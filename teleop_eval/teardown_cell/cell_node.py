@@ -32,7 +32,7 @@ KEEP_INSIDE = (
     '-r', f'/parameter_events:={NAMESPACE}/parameter_events',
 )
 # Longest sleep between looks at the stop flag and the inputs, s.
-SLICE_S = 0.002
+SLICE_S = 0.004
 BEFORE_START_S = -1.0
 
 
