@@ -22,7 +22,11 @@ from rich.text import Text
 
 # Mappings side by side that 80 characters hold; further ones follow in a table below.
 ABREAST, ABREAST_WITH_TRUTH = 3, 2
-NAME_WIDTH, UNIT_WIDTH, VALUE_WIDTH, TRUTH_WIDTH = 27, 7, 14, 6
+NAME_WIDTH, UNIT_WIDTH, TRUTH_WIDTH = 35, 5, 6
+# By the number of mappings abreast; beside a truth column there is less room.
+VALUE_WIDTHS = {1: 18, 2: 18, 3: 12}
+VALUE_WIDTH_BESIDE_TRUTH = 11
+UNIT_SIGNS = {'arm lengths': 'L', 'arm lengths^3': 'L^3'}
 LONGEST_LABEL, LONGEST_SENTENCE = 60, 400
 NO_ENTRY = '-'
 # Rows in the order in which a practitioner asks; a name of none of these families comes last.
@@ -32,6 +36,10 @@ FAMILIES = (
     ('workspace_', 'reach_', 'hull_', 'joint_range_', 'limit_', 'manipulability_'),
     ('engaged_time_', 'engagements', 'engagement_'),
 )
+# Left to metrics.csv: what repeats a row in other words or says little on its own.
+IN_FILE_ONLY = re.compile(
+    r'.*\..*|.*_(p95|max)_m|orientation_error_(compensated_)?(p95|max)_rad|reach_p50_norm.*'
+    r'|joint_error_(compensated_)?p95|hull_volume_norm_operator|engagement_rate_per_min')
 # Within a family: plain before compensated, robot before operator, then by the first of these
 # words in the name, arm lengths before metres.
 WORDS = ('rms', 'p50', 'p95', 'max', 'p5', 'min', 'static', 'varying')
@@ -145,6 +153,12 @@ def _arm(arm: str, of_arm: Mapping[str, Any],
         reason = clean(str(base.get('reason') or ''), LONGEST_SENTENCE)
         heading.append(f'  time base: {clean(str(base["base"]))}'
                        + (f' ({reason})' if reason else ''), style='not bold')
+    geometry = _mapping(of_arm.get('geometry'))
+    lengths = [f'{whose} {number(float(geometry[key]))} m' for whose, key in (
+        ('robot', 'robot_reach_m'), ('operator', 'operator_arm_length_m'))
+        if _finite(geometry.get(key))]
+    if lengths:
+        heading.append(f'; arm length: {", ".join(lengths)}', style='not bold')
     mappings = _mapping(of_arm.get('mappings'))
     if not mappings:
         return [heading, Text('No mapping was active while the arm was evaluated.')]
@@ -155,7 +169,36 @@ def _arm(arm: str, of_arm: Mapping[str, Any],
     for first in range(0, len(labels), abreast):
         shown = {label: _mapping(mappings[label]) for label in labels[first:first + abreast]}
         parts.append(_table(shown, true_mappings, remarks))
-    return parts + remarks.lines()
+    parts.append(Text('L = arm lengths; further metrics and single joints: metrics.csv',
+                      style='dim'))
+    return parts + remarks.lines() + _not_configured(mappings)
+
+
+def _nowhere(metrics: Any, name: str) -> bool:
+    """Tell whether a metric is not configured under any mapping: no row for it."""
+    return all(_mapping(of.get(name)).get('status', 'not_configured') == 'not_configured'
+               for of in metrics)
+
+
+def _not_configured(mappings: Mapping[str, Any]) -> list[RenderableType]:
+    """Return a sentence for each reason why metrics are not configured anywhere."""
+    metrics = [_mapping(_mapping(of).get('metrics')) for of in mappings.values()]
+    by_reason: dict[str, list[str]] = {}
+    for name in _names(metrics):
+        found = [_mapping(of[name]) for of in metrics if name in of]
+        if _nowhere(metrics, name) and found:
+            reason = clean(str(found[0].get('reason') or 'no reason given'), LONGEST_SENTENCE)
+            by_reason.setdefault(reason, []).append(clean(name))
+    return [_listed('-', f'not configured: {_families(names)}: {reason}')
+            for reason, names in by_reason.items()]
+
+
+def _families(names: Sequence[str]) -> str:
+    """Return names that share their first two words as one with an ending of dots."""
+    heads: dict[str, list[str]] = {}
+    for name in names:
+        heads.setdefault('_'.join(name.split('_')[:2]), []).append(name)
+    return ', '.join(of[0] if len(of) == 1 else f'{head}...' for head, of in heads.items())
 
 
 def _table(shown: Mapping[str, Mapping[str, Any]], true_mappings: Mapping[str, Any],
@@ -163,22 +206,26 @@ def _table(shown: Mapping[str, Mapping[str, Any]], true_mappings: Mapping[str, A
     table = Table(box=SIMPLE_HEAD, show_edge=False, pad_edge=False, padding=0)
     table.add_column('metric', width=NAME_WIDTH, overflow='fold')
     table.add_column('unit', width=UNIT_WIDTH, overflow='fold')
+    width = VALUE_WIDTH_BESIDE_TRUTH if true_mappings else VALUE_WIDTHS[len(shown)]
     for label, of_mapping in shown.items():
         condition = of_mapping.get('condition')
         title = Text(clean(label), overflow='fold')
         if condition not in (None, 'teleoperated'):
             title.append(f'\n{clean(str(condition))}')
-        table.add_column(title, justify='right', overflow='fold', width=VALUE_WIDTH)
+        table.add_column(title, justify='right', overflow='fold', width=width)
         if true_mappings:
             table.add_column('truth', justify='right', style='cyan', width=TRUTH_WIDTH)
     metrics = {label: _mapping(of_mapping.get('metrics')) for label, of_mapping in shown.items()}
     group = None
     for name in _names(metrics.values()):
+        if IN_FILE_ONLY.fullmatch(name) or _nowhere(metrics.values(), name):
+            continue
         if group is not None and _group(name) != group:
             table.add_row()
         group = _group(name)
         units = [str(_mapping(of[name]).get('unit', '')) for of in metrics.values() if name in of]
-        row: list[RenderableType] = [Text(_broken(clean(name))), Text(clean(units[0], 24))]
+        unit = UNIT_SIGNS.get(units[0], clean(units[0], 24))
+        row: list[RenderableType] = [Text(_broken(clean(name))), Text(unit)]
         for label, of in metrics.items():
             row.append(_cell(of.get(name), remarks))
             if true_mappings:

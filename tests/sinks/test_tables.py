@@ -62,13 +62,27 @@ def test_truth_stands_beside_the_measured_value():
 
 
 @pytest.mark.parametrize(('status', 'words'), [
-    ('unobservable', 'unobservable'), ('insufficient', 'insufficient'),
-    ('not_configured', 'not configured')])
+    ('unobservable', 'unobservable'), ('insufficient', 'insufficient')])
 def test_a_missing_number_is_said_in_words_with_its_reason(status, words):
     shown = text(summary(mirror={'latency_s': metric(None, status=status, reason=REASON)}))
     assert f'{words} (1)' in ' '.join(shown.split())
     assert f'(1) {words}: {REASON}' in ' '.join(shown.split())
     assert 'None' not in shown and 'nan' not in shown
+
+
+def test_what_is_not_configured_anywhere_is_a_sentence_and_no_row():
+    gone = metric(None, status='not_configured', reason='there is no clutch')
+    shown = text(summary(mirror={'engagements': gone, 'latency_s': metric(0.1)},
+                         reach={'engagements': gone, 'latency_s': metric(0.1)}))
+    assert not any(line.startswith('engagements') for line in shown.splitlines())
+    assert 'not configured: engagements: there is no clutch' in ' '.join(shown.split())
+
+
+def test_what_one_mapping_lacks_keeps_its_row():
+    gone = metric(None, status='not_configured', reason='there is no hand')
+    shown = text(summary(mirror={'workspace_overlap': gone},
+                         reach={'workspace_overlap': metric(0.5, '1')}))
+    assert 'not configured (1)' in ' '.join(row(shown, 'workspace_overlap').split())
 
 
 def test_one_reason_is_printed_once():
@@ -94,7 +108,8 @@ def test_latency_comes_first_and_unknown_metrics_last():
         'a_new_metric': metric(1.0), 'engaged_time_s': metric(9.0),
         'tracking_error_p95_norm': metric(0.2), 'tracking_error_rms_norm': metric(0.1),
         'latency_command_s': metric(0.01), 'latency_s': metric(0.1)}))
-    names = [line.split()[0] for line in shown.splitlines() if line and line.split()]
+    names = [line.split()[0] for line in shown.splitlines() if line.strip()
+             and not line.startswith('L =')]
     listed = [name for name in names if '_' in name and name != 'trial_3']
     assert listed == ['latency_s', 'latency_command_s', 'tracking_error_rms_norm',
                       'tracking_error_p95_norm', 'engaged_time_s', 'a_new_metric']
