@@ -11,16 +11,16 @@ segment; what has been accumulated stays.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 
 import numpy as np
 
-from teleop_eval.core.arm_setup import ArmSetup, make_setup, silent_inputs
+from teleop_eval.core.arm_setup import ArmSetup, make_setup, silent_inputs, unknown_label
 from teleop_eval.core.boundaries import Boundaries
 from teleop_eval.core.errors import TeleopEvalError
 from teleop_eval.core.freezing import can_freeze, freeze
 from teleop_eval.core.geometry import RobotGeometry, operator_geometry, robot_geometry
-from teleop_eval.core.intake import Intake
+from teleop_eval.core.intake import RUN_ON, Intake
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.results import WindowResult
 from teleop_eval.core.samples import BoolSample, Sample, TextSample, TrajectorySample
@@ -89,6 +89,7 @@ class ArmEvaluator:
         self._waiting: list[tuple[str, int, Sample]] = []
         self._ready = False
         self._warm_from_ns: int | None = None
+        self._stepped_at_ns = -NEVER_NS
         self._origin_ns = 0
         self._next_cell = 0
         if urdf is not None:
@@ -120,6 +121,8 @@ class ArmEvaluator:
             return
         state.counts.messages += 1
         value = sample.value if isinstance(sample, BoolSample) else sample.text
+        if sentence := unknown_label(self.name, self.arm, value):
+            self.problems.say(sentence)
         state.add(receive_ns, value,
                   self._closed_until_ns if self.time_base is not None else None)
 
@@ -132,12 +135,16 @@ class ArmEvaluator:
         rows = intake.rows(receive_ns, sample)
         if not rows:
             return
-        if stream.stepped_back(sample.stamp_ns):
+        if back_ns := stream.stepped_back(sample.stamp_ns):
             if self.time_base is None:
                 stream.drop_raw()
             elif stream.by_stamp:
                 self._flush(receive_ns)
                 self._new_segment(f'{stream.role}: header stamps stepped back', keep=False)
+            # One clock often stamps several streams, and they step together.
+            if receive_ns - self._stepped_at_ns > self.settings.time.warm_up_s * 1e9:
+                intake.stepped_back(back_ns)
+            self._stepped_at_ns = receive_ns
         if self.time_base is not None and not stream.frozen:
             self._new_segment(f'{stream.role} appeared', keep=True)
         if stream.by_stamp and not sample.stamp_ns and stream.closes_windows:
@@ -317,6 +324,7 @@ class ArmEvaluator:
             moved = self._moved_clock()
             self._close(self._window_cells, receive_ns)
             if moved:
+                self.problems.say(f'{self.name}: {moved}, so a new segment began; {RUN_ON}.')
                 self._new_segment(moved, keep=True)
 
     def _may_close(self, receive_ns: int) -> bool:
@@ -390,18 +398,20 @@ class ArmEvaluator:
             cells = (last_ns - self._closed_until_ns) // self.period_ns + 1
             self._close(min(int(cells), self._window_cells), receive_ns)
 
-    def finish(self, receive_ns: int) -> None:
-        """Close everything; nothing may be added afterwards."""
+    def finish(self, receive_ns: int, *, explained: Collection[str] = ()) -> None:
+        """Close everything; the silence of the `explained` roles needs no sentence."""
         if not self._ready:
-            self.problems.say(f'{self.name}: no robot description came on '
-                              f'{self.arm.robot.description_topic}; evaluated without it.')
+            if 'description' not in explained:
+                self.problems.say(f'{self.name}: no robot description came on '
+                                  f'{self.arm.robot.description_topic}; evaluated without it.')
             self._make_ready()
         self.advance(receive_ns)
         self._flush(receive_ns)
         for age in self.ages.values():
             age.close_window(receive_ns)
-        for sentence in silent_inputs(self.name, self.intakes, self.states):
-            self.problems.say(sentence)
+        for role, sentence in silent_inputs(self.name, self.intakes, self.states).items():
+            if role not in explained:
+                self.problems.say(sentence)
 
     def all_problems(self) -> list[str]:
         """Return every problem sentence, each with how often it was met if more than once."""

@@ -12,6 +12,7 @@ from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.intake import Intake
 from teleop_eval.core.joint_match import JointMatcher
 from teleop_eval.core.mappings import MappingModel, make_mapping
+from teleop_eval.core.sentences import listed, nearest, shown
 from teleop_eval.core.settings import ArmSettings
 from teleop_eval.core.streams import HeldState, SampledStream
 
@@ -48,15 +49,61 @@ def make_setup(name: str, arm: ArmSettings, operator: OperatorGeometry,
                 setup.models[label] = make_mapping(label, mapping, operator, robot)
             except TeleopEvalError as error:
                 setup.problems.append(f'{name}: {error}')
-    setup.joint_names = arm.robot.joint_names or (
-        robot.chain.joint_names if robot is not None else ())
+        steps = robot.chain.steps
+        if steps and all(step.backward for step in steps):
+            setup.problems.append(
+                f'{name}: tip_link {arm.robot.tip_link!r} is above base_link '
+                f'{arm.robot.base_link!r} in the description; exchange the two unless the robot '
+                'hangs on its tool.')
+    setup.joint_names = _evaluated_joints(name, arm, robot, setup.problems)
     setup.joint_units = tuple(
         UNKNOWN_UNIT if robot is None else robot.unit_of(joint) for joint in setup.joint_names)
     setup.operator_joint_names = tuple(sorted({
         source.source for mapping in arm.mappings.values()
         if mapping.kind == 'joint_space' for source in mapping.joints.values()}))
     _make_intakes(name, arm, setup)
+    if setup.joint_names:
+        for key, units, known in (
+                ('robot', arm.robot.joints, setup.joint_names),
+                ('command', arm.command.joints, arm.command.joint_order or setup.joint_names)):
+            setup.problems += [_foreign_unit(name, f'{key}.joints.{joint}', joint, known)
+                               for joint in units if joint not in known]
     return setup
+
+
+def _evaluated_joints(name: str, arm: ArmSettings, robot: RobotGeometry | None,
+                      problems: list[str]) -> tuple[str, ...]:
+    """Return the configured joints, or those that move the tip where one of them is left out."""
+    given = arm.robot.joint_names or ()
+    if robot is None:
+        return given
+    moving = robot.chain.joint_names
+    lacking = [joint for joint in moving if joint not in given]
+    if given and lacking:
+        strange = [joint for joint in given if joint not in robot.chain.description.joints]
+        has = f' and has {listed(strange)}, which the description does not' if strange else ''
+        problems.append(
+            f'{name}: robot.joint_names leaves out {listed(lacking)}, which moves '
+            f'{arm.robot.tip_link}{has}; the joints that move it are evaluated instead '
+            f'({listed(moving)}), so correct joint_names or remove it.')
+    return moving if lacking else given
+
+
+def unknown_label(name: str, arm: ArmSettings, label: object) -> str:
+    """Return the sentence on a label that names none of the configured mappings, else ''."""
+    if not label or not isinstance(label, str) or not arm.mappings or label in arm.mappings:
+        return ''
+    near = nearest(label, arm.mappings)
+    hint = f'did you mean {near!r}?' if near else 'add it to the parameter file.'
+    return (f'{name}: active_mapping ({arm.active_mapping.topic}) is {shown(label)}, which is not '
+            f'among the mappings {listed(arm.mappings)}; {hint}')
+
+
+def _foreign_unit(name: str, key: str, joint: str, known: tuple[str, ...]) -> str:
+    near = nearest(joint, known)
+    hint = f'did you mean {near}?' if near else 'remove it.'
+    return (f'{name}: {key} is not used, since {joint} is not among the joints '
+            f'{listed(known)}; {hint}')
 
 
 def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup) -> None:
@@ -83,16 +130,15 @@ def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup) -> None:
 
 
 def silent_inputs(name: str, intakes: Mapping[str, Intake],
-                  states: Mapping[str, HeldState]) -> list[str]:
-    """Return a sentence for each input by role of which nothing useful came in the whole run."""
-    found = []
+                  states: Mapping[str, HeldState]) -> dict[str, str]:
+    """Return by role a sentence for each input of which nothing useful came in the whole run."""
+    found = {}
     for role, intake in intakes.items():
         if not intake.stream.counts.messages:
-            found.append(f'{name}: no message came on {intake.stream.topic} ({role}).')
+            found[role] = f'{name}: no message came on {intake.stream.topic} ({role}).'
         elif sentence := intake.never_matched():
-            found.append(sentence)
+            found[role] = sentence
     for role, state in states.items():
         if state.latest is None:
-            found.append(
-                f'{name}: no message came on {state.topic} ({role}); {_WITHOUT[role]}.')
+            found[role] = f'{name}: no message came on {state.topic} ({role}); {_WITHOUT[role]}.'
     return found

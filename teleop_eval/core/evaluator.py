@@ -10,7 +10,7 @@ timer, no thread. Live and post-run numbers are the same because they come from 
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Collection, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -68,6 +68,7 @@ class SessionEvaluator:
         self._simulated_time = simulated_time
         self._receive_ns = 0
         self._notes = Sentences()
+        self._problems = Sentences()
         self._results: list[WindowResult] = []
         self._thresholds = settings.thresholds
         self._reachable: dict[str, ReachableCells] = {}
@@ -126,6 +127,8 @@ class SessionEvaluator:
     def _event(self, sample: Sample) -> None:
         text = sample.text if isinstance(sample, TextSample) else ''
         if text == 'segment':
+            self._problems.say('The clock that gives the receive times stepped back by more than '
+                               '1 s, so a new segment began; let it run on during a session.')
             for arm in self.arms.values():
                 arm.new_segment('the receive clock stepped back', self._receive_ns)
         elif text == 'reset':
@@ -182,7 +185,8 @@ class SessionEvaluator:
     @property
     def problems(self) -> list[str]:
         """Return the sentences about the inputs that a user must see."""
-        return [text for arm in self.arms.values() for text in arm.all_problems()]
+        return self._problems.texts() + [
+            text for arm in self.arms.values() for text in arm.all_problems()]
 
     @property
     def notes(self) -> list[str]:
@@ -199,10 +203,20 @@ class SessionEvaluator:
             arms[name] = arm_summary(arm, reachable, simulated_time=self._simulated_time)
         return {'arms': arms, 'notes': self.notes, 'problems': self.problems}
 
-    def finish(self) -> dict[str, Any]:
-        """Close the last windows, complete the reachable workspace, return the summary."""
-        for arm in self.arms.values():
-            arm.finish(self._receive_ns)
+    def finish(self, *, explained: Collection[str] = ()) -> dict[str, Any]:
+        """
+        Close the last windows, complete the reachable workspace, return the summary.
+
+        Parameters
+        ----------
+        explained
+            Full names of topics on whose silence the caller has said something already.
+
+        """
+        for name, arm in self.arms.items():
+            arm.finish(self._receive_ns, explained={
+                route.role for topic in explained for route in self.routes.get(topic, ())
+                if route.arm == name})
         while self.background(100_000):
             pass
         return self.summary()

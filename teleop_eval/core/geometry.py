@@ -9,7 +9,6 @@ from dataclasses import dataclass
 import numpy as np
 
 from teleop_eval.core import rotations
-from teleop_eval.core.errors import ConfigError
 from teleop_eval.core.kinematics import SerialChain
 from teleop_eval.core.reach import Reach, Shoulder, find_reach, find_shoulder
 from teleop_eval.core.settings import ArmSettings, OperatorSettings
@@ -98,19 +97,11 @@ def robot_geometry(settings: ArmSettings, urdf: str, *, source: str) -> RobotGeo
     ------
     DescriptionError
         If the description cannot be used or a configured link is not in it.
-    ConfigError
-        If joint_names leaves out a joint that moves the tip.
 
     """
     robot = settings.robot
     description = parse_urdf(urdf, source=source)
     chain = SerialChain.from_description(description, robot.base_link or '', robot.tip_link or '')
-    if robot.joint_names:
-        lacking = [name for name in chain.joint_names if name not in robot.joint_names]
-        if lacking:
-            raise ConfigError(
-                f'robot.joint_names leaves out {", ".join(lacking)}, which moves '
-                f'{robot.tip_link}; add it or remove joint_names.')
     shoulder = find_shoulder(chain, robot.shoulder_link)
     sliding = frozenset(
         name for name, joint in description.joints.items() if joint.kind == 'prismatic')

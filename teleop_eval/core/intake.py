@@ -16,8 +16,10 @@ from teleop_eval.core.samples import (
     Sample,
     TrajectorySample,
 )
-from teleop_eval.core.sentences import Sentences
+from teleop_eval.core.sentences import Sentences, listed, nearest, shown
 from teleop_eval.core.streams import Row, SampledStream
+
+RUN_ON = 'let the clocks of all publishers run on during a session'
 
 
 class Intake:
@@ -32,6 +34,8 @@ class Intake:
         Whether poses come, not joints.
     foreign_messages
         Number of messages with none of the wanted joints, as of a gripper.
+    foreign_names
+        Joints of the last one of them.
 
     """
 
@@ -42,7 +46,9 @@ class Intake:
         self.problems = Sentences()
         self.posed = False
         self.foreign_messages = 0
+        self.foreign_names: tuple[str, ...] = ()
         self._frame_id: str | None = None
+        self._non_finite = ''
         if matcher is not None:
             stream.width = len(matcher.names)
         else:
@@ -74,8 +80,8 @@ class Intake:
         if self._frame_id is None:
             self._frame_id = sample.frame_id
         elif sample.frame_id != self._frame_id:
-            self.problem(f'frame_id changed from {self._frame_id!r} to {sample.frame_id!r}; '
-                         'only messages in the first frame are used')
+            self.problem(f'frame_id changed from {shown(self._frame_id)} to '
+                         f'{shown(sample.frame_id)}; only messages in the first frame are used')
             return []
         if sample.position.shape != (3,) or (
                 sample.orientation is not None and sample.orientation.shape != (4,)):
@@ -137,28 +143,50 @@ class Intake:
     def _row(self, finite: bool, row: Row) -> list[Row]:
         if not finite:
             self.stream.counts.non_finite += 1
+            # Only the first values are shown: all others count under the same sentence.
+            self._non_finite = self._non_finite or self._where_not_finite(row)
+            self.problem(f'{self._non_finite} came; messages with NaN or infinity are left out, '
+                         'so look for their cause at the publisher')
             return []
         return [row]
+
+    def _where_not_finite(self, row: Row) -> str:
+        names = ('x', 'y', 'z') if self.matcher is None or self.posed else self.matcher.names
+        parts = [*zip(names, row[2].tolist(), strict=True)]
+        if row[3] is not None:
+            parts += zip(('qx', 'qy', 'qz', 'qw'), row[3].tolist(), strict=True)
+        return listed(f'{name} = {value:g}' for name, value in parts
+                      if not math.isfinite(value * value)) or 'a number too large'
 
     def _lacking(self, names: tuple[str, ...]) -> None:
         assert self.matcher is not None  # only asked after a match failed
         if self.matcher.foreign:
             self.foreign_messages += 1
+            self.foreign_names = names
             return
-        lacking = ', '.join(self.matcher.missing)
-        self.problem(f'joint {lacking} is missing; the message has {", ".join(names)}')
+        near = nearest(self.matcher.missing[0], [
+            name for name in names if name not in self.matcher.names])
+        hint = f'; did you mean {near}?' if near else '; correct the name or the topic'
+        self.problem(f'joint {listed(self.matcher.missing)} is missing in a message that has '
+                     f'{listed(names)}{hint}')
+
+    def stepped_back(self, back_ns: int) -> None:
+        """Say that the header stamps fell back."""
+        self.problem(f'header stamps stepped back by {back_ns / 1e9:.3f} s, so a new segment '
+                     f'began; {RUN_ON}')
 
     def problem(self, text: str) -> None:
         """Note what is wrong with this input."""
-        self.problems.say(f'{self._arm}: {self.stream.role} ({self.stream.topic}): {text}.')
+        end = '' if text.endswith('?') else '.'
+        self.problems.say(f'{self._arm}: {self.stream.role} ({self.stream.topic}): {text}{end}')
 
     def never_matched(self) -> str:
         """Return the sentence for a topic whose messages have none of the wanted joints."""
         if self.matcher is None or not self.foreign_messages or self.stream.matched:
             return ''
         return (f'{self._arm}: {self.stream.role} ({self.stream.topic}): none of the joints '
-                f'{", ".join(self.matcher.names)} was in {self.foreign_messages} messages; '
-                'check joint names and topic.')
+                f'{listed(self.matcher.names)} was in {self.foreign_messages} messages, the last '
+                f'of which has {listed(self.foreign_names)}; check joint names and topic.')
 
 
 def _finite(values: np.ndarray) -> bool:

@@ -4,9 +4,14 @@
 
 from __future__ import annotations
 
+import difflib
+from collections.abc import Collection, Iterable
+
 # A message that differs each time must not fill the memory with sentences.
 MOST = 100
 _MORE = 'there is more to say than is kept here.'
+_LONGEST = 80
+_MOST_NAMES = 12
 
 
 class Sentences:
@@ -27,5 +32,24 @@ class Sentences:
 
     def texts(self) -> list[str]:
         """Return the sentences, with the number of times where it is not one."""
-        return [text if times == 1 else f'{text} ({times} times)'
+        return [text if times == 1 else f'{text.removesuffix(".")} ({times} times).'
                 for text, times in self._times.items()]
+
+
+def shown(name: object) -> str:
+    """Quote a name or value, cut where it would make the sentence unreadable."""
+    text = repr(name)
+    return text if len(text) <= _LONGEST else f'{text[:_LONGEST - 4]} ...'
+
+
+def listed(names: Iterable[str]) -> str:
+    """Return names for a sentence, the first ones if there are many."""
+    names = [name if len(name) <= _LONGEST else f'{name[:_LONGEST - 4]} ...' for name in names]
+    if len(names) > _MOST_NAMES:
+        names = [*names[:_MOST_NAMES], f'{len(names) - _MOST_NAMES} more']
+    return ', '.join(names)
+
+
+def nearest(name: str, known: Collection[str]) -> str:
+    """Return the known name most like one that may be misspelt, '' if none is."""
+    return next(iter(difflib.get_close_matches(name[:_LONGEST], sorted(known), 1)), '')

@@ -149,11 +149,11 @@ class SampledStream:
         while len(self._raw) > keep:
             self._raw.popleft()
 
-    def stepped_back(self, stamp_ns: int) -> bool:
-        """Tell whether a stamp falls back by more than the clock step, and remember it."""
-        stepped = 0 < stamp_ns < self._last_stamp - CLOCK_STEP_NS
+    def stepped_back(self, stamp_ns: int) -> int:
+        """Return by how many ns a stamp falls back, 0 below the clock step; remember it."""
+        back_ns = self._last_stamp - stamp_ns
         self._last_stamp = stamp_ns
-        return stepped
+        return back_ns if stamp_ns > 0 and back_ns > CLOCK_STEP_NS else 0
 
     def add(self, rows: list[Row]) -> None:
         """Take the rows of one message: raw before the freeze, on the axis after it."""

@@ -4,14 +4,13 @@
 
 from __future__ import annotations
 
-import difflib
-
 import numpy as np
 
 from teleop_eval.core import rotations
 from teleop_eval.core.errors import ConfigError
 from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.mappings.base import Ideal, OperatorCells
+from teleop_eval.core.sentences import listed, nearest, shown
 from teleop_eval.core.settings import MappingSettings
 
 
@@ -30,17 +29,17 @@ class JointSpaceMapping:
                  robot: RobotGeometry) -> None:
         del operator  # the link lengths of the operator's arm play no part here
         names = robot.chain.joint_names
+        for name in settings.joints:
+            if name not in names:
+                near = nearest(name, names)
+                hint = f'did you mean {near}?' if near else f'those are {listed(names)}.'
+                raise ConfigError(f'mapping {label!r} names robot joint {shown(name)}, which is '
+                                  f'not among the joints that move the tool; {hint}')
         lacking = [name for name in names if name not in settings.joints]
         if lacking:
             raise ConfigError(
                 f'mapping {label!r} gives no source for robot joint {lacking[0]}; add '
                 f'mappings.{label}.joints.{lacking[0]}.source.')
-        for name in settings.joints:
-            if name not in names:
-                near = difflib.get_close_matches(name, names, 1)
-                hint = f'; did you mean {near[0]}?' if near else f' ({", ".join(names)}).'
-                raise ConfigError(f'mapping {label!r} names robot joint {name}, which is not '
-                                  f'among the joints that move the tool{hint}')
         self._robot = robot
         sources = [settings.joints[name] for name in names]
         self.sources = tuple(source.source for source in sources)
