@@ -40,11 +40,14 @@ class JointErrorStatistics:
         chosen = errors[:, self._total]
         self._all.add(np.abs(chosen[np.isfinite(chosen)]))
 
-    def metrics(self, prefix: str, *, reason: str, caveat: str = '') -> dict[str, Metric]:
+    def metrics(self, prefix: str, *, reason: str, status: str = INSUFFICIENT,
+                caveat: str = '') -> dict[str, Metric]:
         """Return {prefix}_rms, _p95, _max over the joints and {prefix}_rms.JOINT of each."""
-        found = self._all.metrics(prefix, '', self._total_unit, reason=reason, caveat=caveat)
+        found = self._all.metrics(
+            prefix, '', self._total_unit, reason=reason, status=status, caveat=caveat)
         for name, unit, one in zip(self._names, self._units, self._single, strict=True):
-            each = one.metrics(prefix, '', unit, reason=reason, caveat=caveat)
+            each = one.metrics(
+                prefix, '', unit, reason=reason, status=status, caveat=caveat)
             found.update({f'{key}.{name}': value for key, value in each.items()})
         return found
 

@@ -7,6 +7,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
+from teleop_eval.core.description import CONTINUOUS
 from teleop_eval.core.errors import TeleopEvalError
 from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.intake import Intake
@@ -28,12 +29,14 @@ class ArmSetup:
     What one arm is evaluated with.
 
     `joint_names` and `joint_units` (n,) of the robot's evaluated joints;
-    `operator_joint_names` (m,) of those the mappings need; `problems` are sentences.
+    `operator_joint_names` (m,) of those the mappings need; `turning` are the robot's joints
+    without limits; `problems` are sentences.
     """
 
     joint_names: tuple[str, ...] = ()
     joint_units: tuple[str, ...] = ()
     operator_joint_names: tuple[str, ...] = ()
+    turning: frozenset[str] = frozenset()
     models: dict[str, MappingModel] = field(default_factory=dict)
     intakes: dict[str, Intake] = field(default_factory=dict)
     problems: list[str] = field(default_factory=list)
@@ -61,6 +64,9 @@ def make_setup(name: str, arm: ArmSettings, operator: OperatorGeometry,
     setup.operator_joint_names = tuple(sorted({
         source.source for mapping in arm.mappings.values()
         if mapping.kind == 'joint_space' for source in mapping.joints.values()}))
+    setup.turning = frozenset() if robot is None else frozenset(
+        joint for joint, kind in zip(robot.chain.joint_names, robot.chain.kinds, strict=True)
+        if kind == CONTINUOUS)
     _make_intakes(name, arm, setup)
     if setup.joint_names:
         for key, units, known in (
@@ -113,8 +119,10 @@ def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup) -> None:
         'operator_joints': (arm.operator.joints_topic,
                             JointMatcher(setup.operator_joint_names, {})),
         'robot_joints': (arm.robot.joints_topic,
-                         JointMatcher(setup.joint_names, arm.robot.joints)),
-        'command': (arm.command.topic, JointMatcher(commanded, arm.command.joints)),
+                         JointMatcher(setup.joint_names, arm.robot.joints,
+                                      turning=setup.turning)),
+        'command': (arm.command.topic, JointMatcher(commanded, arm.command.joints,
+                                                    turning=setup.turning)),
     }
     lacking = [joint for joint in setup.joint_names if joint not in commanded]
     for role, (topic, matcher) in topics.items():

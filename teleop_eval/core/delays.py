@@ -13,7 +13,7 @@ import numpy as np
 
 from teleop_eval.core.blocks import median_ci
 from teleop_eval.core.latency import DelayEstimate
-from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, missing
 
 # The level on /diagnostics follows the median of so many valid windows in a row.
 LEVEL_WINDOWS = 3
@@ -101,6 +101,12 @@ class DelayStatistics:
     def restart(self) -> None:
         """Forget the time axis, as at the start of a segment."""
         self._free_from_ns = None
+
+    @property
+    def unobservable(self) -> bool:
+        """Tell whether windows were looked at and none told the delay."""
+        return not self._delays and any(
+            one.status == UNOBSERVABLE for one in self._newest.values())
 
     def metric(self, *, caveat: str, reason: str) -> Metric:
         """

@@ -54,6 +54,11 @@ class Intake:
         else:
             stream.width = 3
 
+    @property
+    def turning(self) -> np.ndarray:
+        """Return the columns of joints that turn without limits."""
+        return np.zeros(0, dtype=np.int64) if self.matcher is None else self.matcher.turning
+
     def rows(self, receive_ns: int, sample: Sample) -> list[Row]:
         """Return the rows of a sample, [] if it cannot be used."""
         posed = isinstance(sample, PoseSample)
@@ -116,7 +121,7 @@ class Intake:
             self.problem(f'{len(sample.values)} numbers came for {wanted} joints; set '
                           'command.joint_order')
             return []
-        values = sample.values * self.matcher.scale
+        values = self.matcher.continued(sample.values * self.matcher.scale)
         return self._row(_finite(values), (receive_ns, 0, values, None, None))
 
     def _trajectory(self, receive_ns: int, sample: TrajectorySample) -> list[Row]:

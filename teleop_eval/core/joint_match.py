@@ -4,12 +4,15 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 
 import numpy as np
 
 from teleop_eval.core.samples import JointSample, TrajectorySample
 from teleop_eval.core.settings import UnitSettings
+
+TURN = 2.0 * math.pi
 
 
 class JointMatcher:
@@ -20,11 +23,17 @@ class JointMatcher:
     ----------
     names
         Wanted joints (n,), in the order of the values given back.
+    turning
+        Columns of joints without limits, which some drivers report within one turn: their
+        values are made to run on beyond it, lest the wrap look like motion.
 
     """
 
-    def __init__(self, names: tuple[str, ...], units: Mapping[str, UnitSettings]) -> None:
+    def __init__(self, names: tuple[str, ...], units: Mapping[str, UnitSettings], *,
+                 turning: frozenset[str] = frozenset()) -> None:
         self.names = names
+        self.turning = np.flatnonzero([name in turning for name in names])
+        self._last = np.full(len(self.turning), np.nan)
         self.scale = np.array([units[name].scale if name in units else 1.0 for name in names])
         self._scaled = bool(np.any(self.scale != 1.0))
         self._known: tuple[str, ...] | None = None
@@ -55,9 +64,24 @@ class JointMatcher:
             return None
         values = sample.positions[columns]
         enabled = None if sample.enabled is None else sample.enabled[columns]
-        return (values * self.scale if self._scaled else values), enabled
+        return self.continued(values * self.scale if self._scaled else values), enabled
+
+    def continued(self, values: np.ndarray) -> np.ndarray:
+        """Return positions (n,) in rad or m, whole turns away from the ones before."""
+        if not len(self.turning):
+            return values
+        angles = values[self.turning]
+        turns = np.round((self._last - angles) / TURN)
+        angles = angles + TURN * np.where(np.isfinite(turns), turns, 0.0)
+        self._last = np.where(np.isfinite(angles), angles, self._last)
+        values = values.copy()
+        values[self.turning] = angles
+        return values
 
     def points(self, sample: TrajectorySample) -> np.ndarray | None:
         """Return a trajectory's positions (k, n) in rad or m, None if joints miss."""
         columns = self.find(sample.names)
-        return None if columns is None else sample.positions[:, columns] * self.scale
+        if columns is None:
+            return None
+        points = sample.positions[:, columns] * self.scale
+        return np.array([self.continued(point) for point in points]).reshape(points.shape)

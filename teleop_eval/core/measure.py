@@ -308,7 +308,7 @@ class ArmMeasurement:
             return joint_errors(
                 times[usable], values[usable], command.times_ns, command.values,
                 hold=stream.held, max_gap_ns=stream.max_gap_ns, delay_ns=delay_ns,
-                enabled=command.enabled)
+                enabled=command.enabled, turning=arm.intakes['robot_joints'].turning)
 
         raw = errors_of(here[span.cell_of(times)], 0)
         accumulator.joints_raw.add(raw.errors)

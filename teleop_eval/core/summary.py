@@ -6,10 +6,11 @@ from __future__ import annotations
 
 from typing import Any
 
+from teleop_eval.core.accumulator import MappingAccumulator
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT
 from teleop_eval.core.measure import ArmMeasurement
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
 from teleop_eval.core.tracking import ARM_LENGTHS
 
@@ -61,13 +62,14 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
         else:
             found[name] = delay.metric(
                 caveat=caveat, reason='the run is shorter than a latency window')
-    why_delay = 'no delay was observed to compensate'
+    unknown = _why_no_delay(accumulator)
     reach = 1.0 if arm.robot is None else arm.robot.reach.length_m
-    for prefix, one, reason, hint in (
-            ('tracking_error', accumulator.raw, 'no engaged and settled sample', ''),
-            ('tracking_error_compensated', accumulator.compensated, why_delay, caveat)):
-        found |= one.metrics(prefix, '_norm', ARM_LENGTHS, reason=reason, caveat=hint)
-        found |= one.metrics(prefix, '_m', 'm', factor=reach, reason=reason, caveat=hint)
+    for prefix, one, why, hint in (
+            ('tracking_error', accumulator.raw,
+             {'reason': 'no engaged and settled sample'}, ''),
+            ('tracking_error_compensated', accumulator.compensated, unknown, caveat)):
+        found |= one.metrics(prefix, '_norm', ARM_LENGTHS, **why, caveat=hint)
+        found |= one.metrics(prefix, '_m', 'm', factor=reach, **why, caveat=hint)
     absorbed = model is not None and model.estimates_tool_rotation
     no_turn = ('orientation of hand and tool is not both known' if not absorbed or
                measured.tool_rotation is not None else
@@ -93,11 +95,12 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
     return found | _engagement(arm, accumulator)
 
 
-def _joint_metrics(arm: ArmEvaluator, accumulator: Any, caveat: str) -> dict[str, Metric]:
+def _joint_metrics(arm: ArmEvaluator, accumulator: MappingAccumulator,
+                   caveat: str) -> dict[str, Metric]:
     raw = accumulator.joints_raw.metrics(
         'joint_error', reason='no sample with a valid command')
     compensated = accumulator.joints_compensated.metrics(
-        'joint_error_compensated', reason='no response delay was observed', caveat=caveat)
+        'joint_error_compensated', **_why_no_delay(accumulator), caveat=caveat)
     found: dict[str, Metric] = raw | compensated
     command = arm.intakes.get('command')
     if command is None or command.posed:
@@ -113,7 +116,7 @@ def _joint_metrics(arm: ArmEvaluator, accumulator: Any, caveat: str) -> dict[str
     return found
 
 
-def _engagement(arm: ArmEvaluator, accumulator: Any) -> dict[str, Metric]:
+def _engagement(arm: ArmEvaluator, accumulator: MappingAccumulator) -> dict[str, Metric]:
     seconds, times = accumulator.engaged_s, accumulator.engagements
     found = {'engaged_time_s': Metric(seconds, 's', samples=accumulator.engaged_cells)}
     if 'engaged' not in arm.states:
@@ -140,6 +143,13 @@ def _why_no_ideal(arm: ArmEvaluator, label: str) -> str:
         topic = 'operator.hand_topic' if model.needs == 'hand' else 'operator.joints_topic'
         return f'mapping {label!r} needs {topic}'
     return ''
+
+
+def _why_no_delay(accumulator: MappingAccumulator) -> dict[str, str]:
+    """Return status and reason of what needs a delay where none was known."""
+    if any(delay.unobservable for delay in accumulator.delays.values()):
+        return {'status': UNOBSERVABLE, 'reason': 'no delay could be observed to compensate'}
+    return {'status': INSUFFICIENT, 'reason': 'no delay was observed to compensate'}
 
 
 def _why_no_pair(arm: ArmEvaluator, name: str, no_ideal: str) -> str:

@@ -36,15 +36,16 @@ class MagnitudeStatistics:
             self._blocks.add(float(magnitudes @ magnitudes), magnitudes.size)
 
     def metrics(self, prefix: str, suffix: str, unit: str, *, factor: float = 1.0,
-                reason: str = '', caveat: str = '') -> dict[str, Metric]:
+                reason: str = '', status: str = INSUFFICIENT,
+                caveat: str = '') -> dict[str, Metric]:
         """
         Return the metrics {prefix}_rms{suffix}, _p95 and _max, values times `factor`.
 
-        Without samples they are insufficient for `reason`; `caveat` goes with a value.
+        Without samples they have `status` for `reason`; `caveat` goes with a value.
         """
         names = [f'{prefix}_{which}{suffix}' for which in ('rms', 'p95', 'max')]
         if not self.samples:
-            return {name: missing(INSUFFICIENT, unit, reason or 'no valid samples')
+            return {name: missing(status, unit, reason or 'no valid samples')
                     for name in names}
         interval = self._blocks.root_mean_ci()
         if interval is not None:
@@ -126,7 +127,8 @@ class JointErrors:
 
 def joint_errors(robot_times_ns: np.ndarray, robot: np.ndarray, command_times_ns: np.ndarray,
                  command: np.ndarray, *, hold: bool, max_gap_ns: int, delay_ns: int = 0,
-                 enabled: np.ndarray | None = None) -> JointErrors:
+                 enabled: np.ndarray | None = None,
+                 turning: np.ndarray | None = None) -> JointErrors:
     """
     Return robot minus command at the robot's own sample times, without a grid.
 
@@ -143,6 +145,8 @@ def joint_errors(robot_times_ns: np.ndarray, robot: np.ndarray, command_times_ns
         The command is taken this much earlier.
     enabled
         (m, d): joints switched on by each command, which holds until the next command.
+    turning
+        Columns of joints without limits: whole turns between the two sides are no error.
 
     """
     errors = np.full(robot.shape, np.nan)
@@ -162,6 +166,9 @@ def joint_errors(robot_times_ns: np.ndarray, robot: np.ndarray, command_times_ns
                           out=np.zeros(len(times)), where=span > 0)
         expected = expected + share[:, None] * (command[right] - expected)
     errors[there] = robot[there] - expected[there]
+    if turning is not None:
+        turn = 2.0 * math.pi
+        errors[:, turning] -= turn * np.round(errors[:, turning] / turn)
     if enabled is not None:
         errors[~enabled[left]] = np.nan
     return JointErrors(robot_times_ns, errors)
