@@ -183,9 +183,12 @@ class ArmEvaluator:
             self.notes.say(f'{self.name}: another robot description came during the run; the '
                            'first one is kept.')
             return
-        self._describe(sample.text)
-        if self._ready:
+        began = self._ready
+        if began:
             self._flush(receive_ns)
+        self._describe(sample.text)
+        if began:
+            # Nothing measured without the robot fits to what is measured with it.
             self._new_segment('the robot description came; the metrics begin here', keep=False)
             self.measurement = None
         self._make_ready()
@@ -197,7 +200,9 @@ class ArmEvaluator:
         try:
             self.robot = robot_geometry(self.arm, urdf, source=source)
         except TeleopEvalError as error:
-            self.problems.say(f'{self.name}: {error}')
+            text = str(error)
+            end = '' if text.endswith(('.', '?')) else '.'
+            self.problems.say(f'{self.name}: {text}{end}')
 
     def _make_ready(self) -> None:
         """Make models and inputs, now that the robot is known or known to stay unknown."""

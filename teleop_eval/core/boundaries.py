@@ -60,7 +60,9 @@ class Boundaries:
         starts, count = span.cell_starts_ns, span.count
         label = self._label_at(starts)
         engaged = self._engaged_at(starts)
-        begins_engaged = not self._begun and self.engaged is not None and bool(engaged[0])
+        before = np.array([span.start_ns - 1], dtype=np.int64)
+        begins_engaged = (not self._begun and self.engaged is not None
+                          and bool(self._engaged_at(before)[0]))
         self._begun = True
         usable = engaged & (label >= 0)
         run = np.full(count, self._run, dtype=np.int64)

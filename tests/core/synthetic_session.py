@@ -111,14 +111,20 @@ def clock(start, end, rate_hz, *, phase=0.3):
 
 
 class Feed:
-    """Messages by receive time; those of equal time keep the order in which they were put."""
+    """
+    Messages by receive time.
+
+    Those of equal time keep the order in which they were put, labels and flags first: so they
+    keep their time to the nanosecond.
+    """
 
     def __init__(self):
         self._messages = []
 
     def put(self, receive_s, topic, sample):
         """Add one message."""
-        self._messages.append((ns(receive_s), len(self._messages), topic, sample))
+        first = isinstance(sample, (BoolSample, TextSample))
+        self._messages.append((ns(receive_s), not first, len(self._messages), topic, sample))
         return self
 
     def poses(self, topic, times, positions, turns=None, *, transport=0.002, ahead=0.0,
@@ -163,7 +169,7 @@ class Feed:
     def messages(self):
         """Return (receive_ns, topic, sample), receive_ns strictly increasing."""
         found, last = [], 0
-        for receive_ns, _, topic, sample in sorted(self._messages, key=lambda one: one[:2]):
+        for receive_ns, _, _, topic, sample in sorted(self._messages, key=lambda one: one[:3]):
             last = max(receive_ns, last + 1)
             found.append((last, topic, sample))
         return found
