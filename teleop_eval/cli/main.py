@@ -7,6 +7,7 @@ from __future__ import annotations
 import difflib
 import importlib
 import os
+import re
 import sys
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -16,6 +17,8 @@ from teleop_eval.core.errors import TeleopEvalError, UsageError
 
 PROGRAM = 'teleop_eval'
 STATUS_OK, STATUS_FAILURE, STATUS_USAGE = 0, 1, 2
+# Longer than any path that people give.
+_ENDLESS = re.compile(r'\S{1000,}')
 
 
 @dataclass(frozen=True)
@@ -100,7 +103,8 @@ def main(argv: Sequence[str] | None = None) -> int:
 
 
 def one_line(text: str) -> str:
-    """Return text without the control characters that a hostile name may hold."""
+    """Return text without the control characters and endless names of a hostile input."""
+    text = _ENDLESS.sub(lambda found: f'{found[0][:80]}...{found[0][-40:]}', text)
     return ''.join(sign if sign.isprintable() else ' ' if sign.isspace() else '?'
                    for sign in text)
 

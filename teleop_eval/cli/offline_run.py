@@ -112,8 +112,11 @@ class OfflineRun:
                     problems.append(f'Reading stopped: {error}')
                 if interruption.wanted:
                     problems.append(self._interrupted(recording))
-                return self._finish(evaluator, folder, problems=problems,
-                                    notes=[*recording.notes, *inputs.malformed()])
+                losses = recording.losses
+                return self._finish(
+                    evaluator, folder, problems=[*problems, *losses, *inputs.malformed()],
+                    notes=[note for note in recording.notes if note not in losses],
+                    explained=inputs.explained())
 
     def _feed(self, recording: Recording, inputs: RecordedInputs, evaluator: SessionEvaluator,
               folder: SessionFolder, interruption: Interruption) -> None:
@@ -165,7 +168,7 @@ class OfflineRun:
             self._failure = self._failure or error
 
     def _finish(self, evaluator: SessionEvaluator, folder: SessionFolder, *,
-                problems: list[str], notes: list[str]) -> Outcome:
+                problems: list[str], notes: list[str], explained: set[str]) -> Outcome:
         """
         Write what there is, whatever went wrong before.
 
@@ -175,7 +178,7 @@ class OfflineRun:
             When something could not be written, now or on the way.
 
         """
-        summary = evaluator.finish()
+        summary = evaluator.finish(explained=explained)
         self._windows(evaluator, folder)
         try:
             whole = folder.finish(

@@ -11,6 +11,7 @@ from typing import Protocol
 
 from teleop_eval.core.errors import InputError, RecordingError, TeleopEvalError
 from teleop_eval.core.samples import Sample
+from teleop_eval.core.sentences import listed
 from teleop_eval.sinks import messages
 from teleop_eval.sources.decode import full_type_name
 from teleop_eval.sources.recording import Recording, TopicInfo
@@ -68,12 +69,12 @@ class RecordedInputs:
     read
         Number of messages read so far, by topic; the reader counts.
     problems
-        A sentence for each configured topic that the recording lacks.
+        A sentence for each configured topic that the recording lacks or that cannot serve.
 
     Raises
     ------
     InputError
-        For a topic whose type cannot serve.
+        When none of the topics that the recording has can serve.
     RecordingError
         When the recording has none of the topics.
 
@@ -86,22 +87,22 @@ class RecordedInputs:
         self.decoders: dict[str, Decoder] = {}
         self.read: Counter[str] = Counter()
         self._failures: dict[str, tuple[int, str]] = {}
-        for topic, uses in routes.items():
-            info = recording.topics.get(topic)
-            if info is None:
-                self.problems.append(_absence(topic, uses, recording))
-                continue
-            _check(info, uses, recording, supported)
-            enabled_field = _enabled_field(topic, uses)
+        absent = [topic for topic in routes if topic not in recording.topics]
+        for topic in [topic for topic in routes if topic in recording.topics]:
             try:
-                self.decoders[topic] = make_decoder(
-                    info.type_name, definition=info.definition,
-                    definition_format=info.definition_format or 'ros2msg',
-                    enabled_field=enabled_field)
+                self.decoders[topic] = _decoder(
+                    recording.topics[topic], routes[topic], recording, supported, make_decoder)
             except InputError as error:
-                raise InputError(f'Topic {topic} of {recording.path}: {error}') from error
+                self.problems.append(str(error))
         if not self.decoders:
-            raise RecordingError(_nothing(recording, routes))
+            raise (InputError(' '.join(self.problems)) if self.problems
+                   else RecordingError(_nothing(recording, routes)))
+        self._silent = routes.keys() - self.decoders
+        if recording.losses and len(absent) > 1:
+            self.problems.append(f'What is left of {recording.path.name} holds nothing of '
+                                 f'{listed(absent)}.')
+        else:
+            self.problems += [_absence(topic, routes[topic], recording) for topic in absent]
         events = recording.topics.get(event_topic)
         self.topics = tuple(self.decoders)
         if events is not None and events.type_name == messages.STRING:
@@ -114,11 +115,38 @@ class RecordedInputs:
         count, first = self._failures.get(topic, (0, str(error)))
         self._failures[topic] = (count + 1, first)
 
+    def explained(self) -> set[str]:
+        """Return the topics of which nothing can come and on which a sentence says why."""
+        return self._silent | {topic for topic, (count, _) in self._failures.items()
+                               if count == self.read[topic]}
+
     def malformed(self) -> list[str]:
         """Return a sentence for each topic with messages that could not be decoded."""
         return [f'{count} of {self.read[topic]} messages on {topic} cannot be decoded and are '
                 f'left out; the first because: {first.rstrip(".")}.'
                 for topic, (count, first) in self._failures.items()]
+
+
+def _decoder(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
+             supported: Mapping[str, Iterable[str]],
+             make_decoder: Callable[..., Decoder]) -> Decoder:
+    """
+    Return the decoder of a topic.
+
+    Raises
+    ------
+    InputError
+        When the topic cannot serve.
+
+    """
+    _check(info, uses, recording, supported)
+    enabled_field = _enabled_field(info.name, uses)
+    try:
+        return make_decoder(
+            info.type_name, definition=info.definition,
+            definition_format=info.definition_format or 'ros2msg', enabled_field=enabled_field)
+    except InputError as error:
+        raise InputError(f'Topic {info.name} of {recording.path}: {error}') from error
 
 
 def _enabled_field(topic: str, uses: Sequence[RouteLike]) -> str:
@@ -160,7 +188,7 @@ def _check(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
             raise InputError(
                 f'Topic {info.name} is configured as {_use(route)}, but has the type '
                 f'{type_name}, which cannot serve as that; expected is '
-                f'{", ".join(expected)}{_OR_FIELDS if kind in _ANY_NAME else ""}.')
+                f'{" or ".join(expected)}{_OR_FIELDS if kind in _ANY_NAME else ""}.')
 
 
 def _all_types(supported: Mapping[str, Iterable[str]]) -> set[str]:
@@ -176,9 +204,9 @@ def _absence(topic: str, uses: Sequence[RouteLike], recording: Recording) -> str
 
 
 def _nothing(recording: Recording, routes: Mapping[str, Sequence[RouteLike]]) -> str:
-    held = ', '.join(sorted(recording.topics)[:12]) or 'no topic at all'
+    held = listed(sorted(recording.topics)) or 'no topic at all'
     return (f'The recording {recording.path} has none of the configured topics '
-            f'({", ".join(sorted(routes))}); it has {held}. Check the names and --namespace.')
+            f'({listed(sorted(routes))}); it has {held}. Check the names and --namespace.')
 
 
 def _use(route: RouteLike) -> str:

@@ -19,6 +19,7 @@ from teleop_eval.core.description import (
 )
 from teleop_eval.core.errors import DescriptionError
 from teleop_eval.core.rotations import Array
+from teleop_eval.core.sentences import listed, shown
 
 # Arms with hands and torso have under 30. Without a bound a hostile file could ask for a chain
 # of a hundred thousand joints, and for the memory to sample it.
@@ -87,9 +88,12 @@ def _ancestry(
 ) -> list[str]:
     """Return the link and all links above it, up to the root."""
     if link not in description.links:
-        near = difflib.get_close_matches(link, sorted(description.links), n=3, cutoff=0.4)
-        hint = f'did you mean {" or ".join(map(repr, near))}?' if near else 'check the spelling'
-        raise DescriptionError(f'{description.source}: there is no link {link!r}: {hint}')
+        links = sorted(description.links)
+        near = difflib.get_close_matches(link[:80], links, n=3, cutoff=0.4)
+        hint = (f'did you mean {" or ".join(map(shown, near))}?' if near
+                else f'the links are {listed(links)}')
+        raise DescriptionError(
+            f'{description.source}: there is no link {shown(link)}: {hint}')
     trail = [link]
     while trail[-1] in above:
         trail.append(above[trail[-1]].parent)

@@ -18,12 +18,15 @@ from dataclasses import dataclass
 from typing import Any
 
 from teleop_eval.core.errors import ConfigError
+from teleop_eval.core.sentences import cut, shown
 
 NAME_PATTERN = re.compile(r'[a-z][a-z0-9_]*')
 
 # Kinds a parameter can have; each has a ROS parameter type of the same meaning.
 BOOL, INTEGER, DOUBLE, STRING = 'bool', 'integer', 'double', 'string'
 DOUBLES, STRINGS = 'double_array', 'string_array'
+# A file of another tool has nothing but unknown parameters.
+_MOST_UNKNOWN = 5
 
 
 @dataclass(frozen=True)
@@ -97,9 +100,11 @@ def build(settings: type, flat: Mapping[str, Any], *, where: str = 'the paramete
     """
     used: set[str] = set()
     built = _build(settings, flat, '', used, where)
-    for key in flat:
-        if key not in used:
-            raise ConfigError(_unknown(key, settings, flat, where))
+    unknown = [key for key in flat if key not in used]
+    if unknown:
+        hints = ' '.join(_unknown(key, settings, flat) for key in unknown[:_MOST_UNKNOWN])
+        more = len(unknown) - _MOST_UNKNOWN
+        raise ConfigError(f'{where}: {hints}' + (f' And {more} more.' if more > 0 else ''))
     return built
 
 
@@ -155,8 +160,8 @@ def _names(flat: Mapping[str, Any], prefix: str, described: NamedMap, where: str
     for name in names:
         if not described.free_names and not NAME_PATTERN.fullmatch(name):
             raise ConfigError(
-                f'{where}: the name {name!r} in {prefix}{name} must be lower-case letters, '
-                'digits and underscores, beginning with a letter; rename it.'
+                f'{where}: the name {shown(name)} in {prefix}{cut(name)} must be lower-case '
+                'letters, digits and underscores, beginning with a letter; rename it.'
             )
     return sorted(names)
 
@@ -193,10 +198,9 @@ def convert(described: Parameter, value: Any, key: str, where: str) -> Any:
             fits = all(isinstance(item, str) for item in value)
             value = tuple(value) if fits else value
     if not fits:
-        hint = '; quote it if it is a text' if kind == STRING else ''
+        hint = '; quote it if it is a text' if kind == STRING else '; correct it'
         raise ConfigError(
-            f'{where}: {key} must be {_KIND_WORDS[kind]}, but is {value!r} '
-            f'({type(value).__name__}){hint}.'
+            f'{where}: {key} must be {_KIND_WORDS[kind]}, but is {_typed(value)}{hint}.'
         )
     _check_limits(described, value, key, where)
     if described.default is None and value in ('', ()):
@@ -204,6 +208,14 @@ def convert(described: Parameter, value: Any, key: str, where: str) -> Any:
     return value
 
 
+def _typed(value: Any) -> str:
+    """Return a value with its kind in words."""
+    kind = next((words for kind, words in _VALUE_WORDS if isinstance(value, kind)), 'the value')
+    return f'{kind} {shown(list(value) if isinstance(value, tuple) else value)}'
+
+
+_VALUE_WORDS = ((bool, 'the truth value'), ((int, float), 'the number'), (str, 'the text'),
+                ((list, tuple), 'the list'))
 _KIND_WORDS = {
     BOOL: 'true or false',
     INTEGER: 'a whole number',
@@ -221,35 +233,37 @@ def _is_number(value: Any) -> bool:
 def _check_limits(described: Parameter, value: Any, key: str, where: str) -> None:
     unit = f' {described.unit}' if described.unit else ''
     if described.choices and value not in described.choices:
-        near = difflib.get_close_matches(str(value), described.choices, 1)
+        near = difflib.get_close_matches(str(value)[:80], described.choices, 1)
         hint = f' Did you mean {near[0]!r}?' if near else ''
         listed = ', '.join(repr(choice) for choice in described.choices)
-        raise ConfigError(f'{where}: {key} is {value!r} but must be one of {listed}.{hint}')
+        raise ConfigError(
+            f'{where}: {key} is {shown(value)}, but must be one of {listed}.{hint}')
     if described.size is not None and value and len(value) != described.size:
         raise ConfigError(
-            f'{where}: {key} needs {described.size} numbers, but has {len(value)}.'
+            f'{where}: {key} needs {described.size} numbers, but has {len(value)}; correct it.'
         )
     numbers = value if isinstance(value, tuple) else (value,)
     for number in numbers:
         if not _is_number(number):
             return
         if not math.isfinite(number):
-            raise ConfigError(f'{where}: {key} is {number}, but must be a finite number.')
+            raise ConfigError(
+                f'{where}: {key} is {number}, but must be a finite number; correct it.')
         low, high = described.low, described.high
         if (low is not None and number < low) or (high is not None and number > high):
             raise ConfigError(
                 f'{where}: {key} is {number:g}{unit}, outside its range '
                 f'{"-inf" if low is None else f"{low:g}"} to '
-                f'{"inf" if high is None else f"{high:g}"}{unit}.'
+                f'{"inf" if high is None else f"{high:g}"}{unit}; correct value or unit.'
             )
 
 
-def _unknown(key: str, settings: type, flat: Mapping[str, Any], where: str) -> str:
+def _unknown(key: str, settings: type, flat: Mapping[str, Any]) -> str:
     known = [name for name, _ in describe(settings, flat)]
-    near = difflib.get_close_matches(key, known, 1, cutoff=0.6)
+    near = difflib.get_close_matches(key[:200], known, 1, cutoff=0.6)
     if not near:  # a wrong word deep inside: compare within the same group only
         head = key.rpartition('.')[0]
         near = difflib.get_close_matches(
-            key, [name for name in known if name.startswith(head + '.')], 1, cutoff=0.3)
+            key[:200], [name for name in known if name.startswith(head + '.')], 1, cutoff=0.3)
     hint = f'; did you mean {near[0]}?' if near else '; remove it or see config/evaluate.yaml.'
-    return f'{where}: there is no parameter {key}{hint}'
+    return f'there is no parameter {cut(key)}{hint}'

@@ -38,13 +38,17 @@ class Sentences:
 
 def shown(name: object) -> str:
     """Quote a name or value, cut where it would make the sentence unreadable."""
-    text = repr(name)
+    return cut(repr(name))
+
+
+def cut(text: str) -> str:
+    """Cut a text where it would make the sentence unreadable."""
     return text if len(text) <= _LONGEST else f'{text[:_LONGEST - 4]} ...'
 
 
 def listed(names: Iterable[str]) -> str:
     """Return names for a sentence, the first ones if there are many."""
-    names = [name if len(name) <= _LONGEST else f'{name[:_LONGEST - 4]} ...' for name in names]
+    names = [cut(name) for name in names]
     if len(names) > _MOST_NAMES:
         names = [*names[:_MOST_NAMES], f'{len(names) - _MOST_NAMES} more']
     return ', '.join(names)

@@ -5,6 +5,7 @@
 from __future__ import annotations
 
 import dataclasses
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
@@ -21,7 +22,10 @@ from teleop_eval.core.parameters import (
     named_map,
     parameter,
 )
+from teleop_eval.core.sentences import listed, nearest, shown
 
+# As ROS 2 has them: absolute, relative or private.
+_TOPIC = re.compile(r'(?:~/|/)?[A-Za-z_][A-Za-z0-9_]*(?:/[A-Za-z_][A-Za-z0-9_]*)*')
 TRACKED_POINTS = ('wrist', 'finger_tip')
 
 
@@ -284,7 +288,8 @@ def _check(settings: Settings, where: str) -> None:
     if settings.thresholds.latency_error_s < settings.thresholds.latency_warn_s:
         raise ConfigError(
             f'{where}: thresholds.latency_error_s ({settings.thresholds.latency_error_s:g} s) '
-            f'is below thresholds.latency_warn_s ({settings.thresholds.latency_warn_s:g} s).')
+            f'is below thresholds.latency_warn_s ({settings.thresholds.latency_warn_s:g} s); '
+            'exchange or change them.')
     for name, arm in settings.arms.items():
         _check_arm(f'arms.{name}', arm, where)
 
@@ -307,9 +312,10 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
         raise ConfigError(f'{where}: {key}.active_mapping has both topic and fixed; keep one.')
     fixed = arm.active_mapping.fixed
     if fixed and arm.mappings and fixed not in arm.mappings:
-        listed = ', '.join(arm.mappings)
-        raise ConfigError(f'{where}: {key}.active_mapping.fixed is {fixed!r}, which is not '
-                          f'among the mappings {listed}.')
+        near = nearest(fixed, arm.mappings)
+        hint = f'did you mean {near!r}?' if near else 'correct it.'
+        raise ConfigError(f'{where}: {key}.active_mapping.fixed is {shown(fixed)}, which is not '
+                          f'among the mappings {listed(arm.mappings)}; {hint}')
     for label, mapping in arm.mappings.items():
         if not mapping.kind:
             raise ConfigError(f'{where}: {key}.mappings.{label}.kind is missing; give '
@@ -322,11 +328,26 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
                 raise ConfigError(f'{where}: {key}.mappings.{label}.joints.{joint}.sign is '
                                   f'{source.sign:g}, but must be 1 or -1; use scale for '
                                   'factors.')
+    for field, topic in _topics(key, arm):
+        if topic and not _TOPIC.fullmatch(topic):
+            raise ConfigError(f'{where}: {field} is {shown(topic)}, which is no topic name: '
+                              'between slashes it may hold letters, digits and _, and must not '
+                              'begin with a digit.')
     for field, quaternion in _quaternions(key, arm):
         norm = sum(part * part for part in quaternion) ** 0.5
         if abs(norm - 1.0) > 1e-3:
             raise ConfigError(f'{where}: {field} has norm {norm:.4g}, but a rotation has 1 '
                               '(order x, y, z, w).')
+
+
+def _topics(key: str, arm: ArmSettings) -> list[tuple[str, str | None]]:
+    return [(f'{key}.operator.hand_topic', arm.operator.hand_topic),
+            (f'{key}.operator.joints_topic', arm.operator.joints_topic),
+            (f'{key}.robot.joints_topic', arm.robot.joints_topic),
+            (f'{key}.robot.description_topic', arm.robot.description_topic),
+            (f'{key}.command.topic', arm.command.topic),
+            (f'{key}.engaged.topic', arm.engaged.topic),
+            (f'{key}.active_mapping.topic', arm.active_mapping.topic)]
 
 
 def _quaternions(key: str, arm: ArmSettings) -> list[tuple[str, tuple[float, ...]]]:

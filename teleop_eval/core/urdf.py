@@ -119,7 +119,8 @@ def _parse_xml(text: str, source: str) -> Element:
         raise DescriptionError(f'{source}: the text is empty: give a URDF')
     if len(text) > MAX_CHARACTERS:
         raise DescriptionError(
-            f'{source}: {len(text)} characters are more than the {MAX_CHARACTERS} allowed'
+            f'{source}: {len(text)} characters are more than the {MAX_CHARACTERS} allowed: '
+            'give the URDF of one robot'
         )
     parser = DefusedXMLParser(
         target=_BoundedBuilder(), forbid_dtd=True, forbid_entities=True, forbid_external=True
@@ -129,13 +130,15 @@ def _parse_xml(text: str, source: str) -> Element:
         root: Element = parser.close()
     except DescriptionError as error:
         raise DescriptionError(f'{source}: {error}') from None
-    except DefusedXmlException as error:
+    except DefusedXmlException:
         raise DescriptionError(
             f'{source}: a document type, entity or external reference is not allowed in a '
-            f'URDF ({type(error).__name__}): remove it'
+            'URDF: remove it'
         ) from None
     except (ParseError, ValueError, LookupError) as error:
-        raise DescriptionError(f'{source}: the text is not XML ({error})') from None
+        raise DescriptionError(
+            f'{source}: the text is not XML ({error}): give a complete URDF'
+        ) from None
     return root
 
 
@@ -204,11 +207,13 @@ class _JointReader:
         try:
             number = float(text.replace('_', '?'))  # Python would read 1_0 as 10
         except ValueError:
-            raise self._fault(f'has {what} {text[:60]!r}, which is not a number') from None
+            raise self._fault(
+                f'has {what} {text[:60]!r}, which is not a number: correct it'
+            ) from None
         if math.isnan(number):
             raise self._fault(f'has {what} NaN: give a finite number')
         if abs(number) > largest:
-            raise self._fault(f'has {what} {text[:60]!r}, beyond +-{largest:g}')
+            raise self._fault(f'has {what} {text[:60]!r}, beyond +-{largest:g}: correct it')
         return number
 
     def _vector(self, element: Element | None, attribute: str, default: str) -> Array:
@@ -269,7 +274,7 @@ def _check_tree(links: set[str], joints: Mapping[str, Joint], source: str) -> No
             if link not in links:
                 raise DescriptionError(
                     f'{source}: joint {_shown(joint.name)} has the {role} link {_shown(link)}, '
-                    'which does not exist'
+                    'which does not exist: add the link or correct the name'
                 )
         if joint.child in above:
             raise DescriptionError(
@@ -290,7 +295,7 @@ def _check_mimics(joints: Mapping[str, Joint], source: str) -> None:
         if joint.mimic is not None and joint.mimic.joint not in joints:
             raise DescriptionError(
                 f'{source}: joint {_shown(joint.name)} mimics {_shown(joint.mimic.joint)}, '
-                'which does not exist'
+                'which does not exist: correct the name'
             )
     steps = {joint.name: joint.mimic.joint for joint in joints.values() if joint.mimic}
     looped = _first_on_cycle(steps)

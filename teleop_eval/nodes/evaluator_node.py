@@ -178,7 +178,7 @@ class EvaluatorNode(Node):
         self._keep(session, self._lines(session))
         last, whole = session.finish(
             lambda summary: add_losses(summary, self.inputs, self._routes),
-            problems=self.inputs.problems_so_far())
+            problems=self.inputs.problems_so_far(), explained=self.inputs.unusable())
         self._publish([*windows, *last])
         self.outputs.summary(summary_text(session, self.settings, self.inputs, self._routes,
                                           whole=whole))

@@ -152,6 +152,11 @@ class LiveInputs:
         return list(dict.fromkeys(
             problem for topic in self._of(arm) for problem in self.topics[topic].problems))
 
+    def unusable(self) -> list[str]:
+        """Return the topics that were never subscribed to because something is wrong."""
+        return [topic for topic, topic_input in self.topics.items()
+                if topic_input.request is None and topic_input.problems]
+
     def problems_so_far(self) -> list[str]:
         """Return what is or was wrong with the topics."""
         return list(self._problems_so_far)

@@ -8,7 +8,7 @@ Nothing here reads a clock or knows ROS, so that the same stream gives the same 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass
 from functools import partial
 from pathlib import Path
@@ -140,7 +140,8 @@ class LiveSession:
             self.write_problem = ''
 
     def finish(self, complete: Callable[[dict[str, Any]], None], *,
-               problems: Sequence[str] = ()) -> tuple[list[WindowResult], dict[str, Any]]:
+               problems: Sequence[str] = (),
+               explained: Collection[str] = ()) -> tuple[list[WindowResult], dict[str, Any]]:
         """
         Finish evaluator and files.
 
@@ -150,6 +151,8 @@ class LiveSession:
             Puts into the evaluator's summary what only the caller knows.
         problems
             Sentences for the summary.
+        explained
+            Topics whose silence is explained by one of them.
 
         Returns
         -------
@@ -160,14 +163,16 @@ class LiveSession:
 
         """
         self._feed_all(self._feed.order([]))
-        summary = self.evaluator.finish()
+        refused = {topic for topic, stream in self._known.items()
+                   if stream.malformed == stream.messages > 0}
+        summary = self.evaluator.finish(explained=refused | set(explained))
         last = self._windows()
         complete(summary)
         whole: dict[str, Any]
         try:
             whole = self.folder.finish(
                 summary, start_ns=self.first_ns, end_ns=self.last_ns,
-                notes=self.malformed_sentences(), problems=[*self.problems, *problems])
+                notes=(), problems=[*self.problems, *self.malformed_sentences(), *problems])
         except OutputError as error:
             self._failed(error)
             whole = summary

@@ -4,12 +4,14 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
 from teleop_eval.core.results import LEVEL_ERROR, LEVEL_OK, LEVEL_STALE, LEVEL_WARN, StatusLine
 from teleop_eval.nodes.live_session import LiveSession
 
+_TIMES = re.compile(r'(?<=[.?]) \(\d+ times\)\.$| \(\d+ times\)(?=\.$)')
 LEVEL_WORDS = {LEVEL_OK: 'OK', LEVEL_WARN: 'WARN', LEVEL_ERROR: 'ERROR', LEVEL_STALE: 'STALE'}
 
 
@@ -56,9 +58,14 @@ class Changes:
 
     def new(self, sentences: Sequence[str]) -> list[str]:
         """Return the sentences not said before."""
-        fresh = [sentence for sentence in dict.fromkeys(sentences) if sentence not in self._said]
+        fresh = {}
+        for sentence in sentences:
+            # How often something was met grows all the time, and is no news.
+            what = _TIMES.sub('', sentence)
+            if what not in self._said:
+                fresh[what] = sentence
         self._said.update(fresh)
-        return fresh
+        return list(fresh.values())
 
     def levels(self, lines: Sequence[StatusLine]) -> list[StatusLine]:
         """Return the statuses whose level changed; at first sight only errors."""

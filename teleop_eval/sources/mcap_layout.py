@@ -17,6 +17,7 @@ from mcap.records import Channel, Footer, Schema, Statistics
 
 from teleop_eval.core.errors import RecordingError
 from teleop_eval.sources import mcap_chunk as mc
+from teleop_eval.sources.stored_file import Loss
 
 MAGIC = b'\x89MCAP0\r\n'
 _FOOTER_SIZE = 29
@@ -239,15 +240,15 @@ class _Scan:
             ended = False
         self._close_run()
         if not ended:
-            layout.notes.append(
+            layout.notes.append(Loss(
                 f'{self._path.name} ends early: it is cut or damaged at byte {self._position} '
                 f'of {self._size}; the complete messages before are used.'
-            )
+            ))
         elif not self._complete:
-            layout.notes.append(
+            layout.notes.append(Loss(
                 f'{self._path.name} ends early: its closing part is missing; all messages '
                 'found are used.'
-            )
+            ))
         if not layout.channels:
             raise RecordingError(
                 f'{self._path} holds no topic that can be read; it was cut before its first '
@@ -332,6 +333,6 @@ class _Scan:
         layout.end_ns = log_ns if layout.end_ns is None else max(layout.end_ns, log_ns)
 
 
-def damage_note(path: Path, offset: int, reason: str) -> str:
+def damage_note(path: Path, offset: int, reason: str) -> Loss:
     """Say that a chunk is left out."""
-    return f'A chunk of {path.name} at byte {offset} {reason}; its messages are left out.'
+    return Loss(f'A chunk of {path.name} at byte {offset} {reason}; its messages are left out.')

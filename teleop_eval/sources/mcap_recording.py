@@ -14,7 +14,7 @@ from typing import BinaryIO
 from teleop_eval.sources import mcap_chunk as mc
 from teleop_eval.sources.mcap_layout import Block, Layout, damage_note, read_layout
 from teleop_eval.sources.qos_profiles import read_qos
-from teleop_eval.sources.stored_file import Message, TopicInfo, add_note, definition_format
+from teleop_eval.sources.stored_file import Loss, Message, TopicInfo, add_note, definition_format
 
 _LOG_NS = itemgetter(0)
 
@@ -116,8 +116,8 @@ class McapFile:
         if walked.unread and not block.partial:
             add_note(
                 self.notes,
-                f'A chunk of {self.path.name} at byte {offset} ends inside a record; its '
-                'complete messages are used.',
+                Loss(f'A chunk of {self.path.name} at byte {offset} ends inside a record; its '
+                     'complete messages are used.'),
             )
         return walked
 

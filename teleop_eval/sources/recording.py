@@ -22,7 +22,7 @@ import zstandard
 from teleop_eval.core.errors import RecordingError
 from teleop_eval.sources.bag_metadata import BagMetadata, read_bag_metadata
 from teleop_eval.sources.recording_files import Scratch, data_files, open_file
-from teleop_eval.sources.stored_file import Message, StoredFile, TopicInfo, add_note
+from teleop_eval.sources.stored_file import Loss, Message, StoredFile, TopicInfo, add_note
 
 __all__ = ['Message', 'Recording', 'TopicInfo', 'open_recording']
 
@@ -97,7 +97,7 @@ def _open_all(
             errors.append(error)
     if not stored:
         raise errors[0]
-    notes += [f'One file is left out: {error}' for error in errors]
+    notes += [Loss(f'One file is left out: {error}') for error in errors]
     return stored
 
 
@@ -145,6 +145,11 @@ class Recording:
             for note in stored.notes:
                 add_note(notes, note)
         return notes
+
+    @property
+    def losses(self) -> list[str]:
+        """Those of the notes that tell of lost messages."""
+        return [note for note in self.notes if isinstance(note, Loss)]
 
     def messages(self, topics: Iterable[str] | None = None) -> Iterator[Message]:
         """
@@ -229,7 +234,8 @@ class Recording:
                 continue
             add_note(
                 self._notes,
-                f'A message of {topic} at {log_ns} ns cannot be decompressed and is left out.',
+                Loss(f'A message of {topic} at {log_ns} ns cannot be decompressed and is left '
+                     'out.'),
             )
 
 

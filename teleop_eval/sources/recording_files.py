@@ -16,7 +16,7 @@ from teleop_eval.sources.bag_metadata import BagMetadata
 from teleop_eval.sources.mcap_layout import MAGIC as MCAP_MAGIC
 from teleop_eval.sources.mcap_recording import McapFile
 from teleop_eval.sources.sqlite_recording import SqliteFile
-from teleop_eval.sources.stored_file import StoredFile
+from teleop_eval.sources.stored_file import Loss, StoredFile
 
 _SUFFIXES = ('.mcap', '.db3', '.mcap.zstd', '.db3.zstd')
 _SQLITE_MAGIC = b'SQLite format 3\0'
@@ -120,7 +120,7 @@ class Scratch:
             except zstandard.ZstdError:
                 whole = False
         if not whole:
-            notes.append(f'{path.name} ends early: its compressed data is cut or damaged.')
+            notes.append(Loss(f'{path.name} ends early: its compressed data is cut or damaged.'))
         if plain.stat().st_size == 0:
             raise RecordingError(f'{path} cannot be decompressed; it is cut or damaged.')
         return plain

@@ -15,7 +15,7 @@ from urllib.parse import quote
 from teleop_eval.core.errors import RecordingError
 from teleop_eval.sources.qos_profiles import read_qos
 from teleop_eval.sources.sqlite_pages import SalvagedMessages
-from teleop_eval.sources.stored_file import Message, TopicInfo, add_note, definition_format
+from teleop_eval.sources.stored_file import Loss, Message, TopicInfo, add_note, definition_format
 
 _BATCH = 2000
 
@@ -57,7 +57,8 @@ class SqliteFile:
         except sqlite3.Error as error:
             if not self._names:
                 raise RecordingError(
-                    f'{path} cannot be read as a rosbag2 database: {error}.'
+                    f'{path} cannot be read as a rosbag2 database ({error}); it is cut too early '
+                    'or damaged.'
                 ) from error
             self._salvage()
 
@@ -113,8 +114,8 @@ class SqliteFile:
                 if 'immutable' in options:
                     add_note(
                         self.notes,
-                        f'{self.path.name} was left in the middle of a write and its log cannot '
-                        'be used here; messages of that write may be missing.',
+                        Loss(f'{self.path.name} was left in the middle of a write and its log '
+                             'cannot be used here; messages of that write may be missing.'),
                     )
                 return database
             except sqlite3.OperationalError:
@@ -174,8 +175,8 @@ class SqliteFile:
         stamps = [item for item in self._salvaged.stamps if item[1] in self._names]
         add_note(
             self.notes,
-            f'{self.path.name} ends early: the database is cut or damaged; the {len(stamps)} '
-            'messages still complete in it are used.',
+            Loss(f'{self.path.name} ends early: the database is cut or damaged; the '
+                 f'{len(stamps)} messages still complete in it are used.'),
         )
         self.message_count = len(stamps)
         self.start_ns = stamps[0][0] if stamps else None

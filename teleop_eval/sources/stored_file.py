@@ -9,6 +9,12 @@ from dataclasses import dataclass
 from typing import Any, NamedTuple, Protocol
 
 
+class Loss(str):
+    """A note on messages that are lost, so that all results are those of the rest."""
+
+    __slots__ = ()
+
+
 class Message(NamedTuple):
     """One serialized message and when it was logged, in nanoseconds since the epoch."""
 

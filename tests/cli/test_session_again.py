@@ -120,7 +120,7 @@ def test_inputs_give_the_numbers_of_the_live_run(tmp_path, disturb, simulated_ti
     live_rows = (tmp_path / 'session' / 'windows.csv').read_bytes()
     assert (tmp_path / 'again' / 'windows.csv').read_bytes() == live_rows
     if disturb:
-        assert any('1 of ' in note and 'left out' in note for note in again['notes'])
+        assert any('1 of ' in text and 'left out' in text for text in again['problems'])
         assert first['arms']['right']['segments'] == 2
     elif not simulated_time:
         assert metrics['latency_s']['value'] == pytest.approx(synthetic.DELAY_S, abs=0.002)

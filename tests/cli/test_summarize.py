@@ -156,8 +156,9 @@ def test_truncated_recording_is_evaluated_as_far_as_it_goes(made, tmp_path):
     (tmp_path / 'cut.mcap').write_bytes(data[:int(0.6 * len(data))])
     status, out, err = run('cut.mcap', '--config', made.config, '--no-progress', cwd=tmp_path)
     summary = json.loads((tmp_path / 'cut_summary' / 'summary.json').read_text('utf-8'))
-    assert any('cut.mcap' in note for note in summary['notes']), (summary['notes'], err)
-    assert 'cut.mcap' in out
+    assert (status, err.count('\n')) == (1, 1)
+    assert err.startswith('teleop_eval summarize: cut.mcap ends early: ')
+    assert summary['problems'] == [err.split(': ', 1)[1].rstrip('\n')]
     assert 0 < summary['arms']['right']['inputs']['robot_joints']['messages'] < 4000
 
 
@@ -167,9 +168,10 @@ def test_malformed_message_is_counted_and_noted(tmp_path):
     with sqlite3.connect(file) as database:
         database.execute("UPDATE messages SET data = x'00010000ffffffff' WHERE id = 500")
     status, out, err = run(made.path, '--config', made.config, '--no-progress', cwd=tmp_path)
-    assert (status, err) == (0, '')
+    assert (status, err.count('\n')) == (1, 1)
+    assert '1 of 1500 messages on ' in err and 'left out' in err
     summary = json.loads((tmp_path / 'recording_summary' / 'summary.json').read_text('utf-8'))
-    assert [note for note in summary['notes'] if '1 of 1500 messages on ' in note]
+    assert summary['problems'] == [err.split(': ', 1)[1].rstrip('\n')]
 
 
 def test_folder_with_results_is_not_overwritten(made, results):

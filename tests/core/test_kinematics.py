@@ -317,7 +317,7 @@ def test_a_wrong_shape_is_refused(q: np.ndarray) -> None:
     [
         ('trnk', 'a_4', "there is no link 'trnk': did you mean 'trunk'"),
         ('trunk', 'a4', "there is no link 'a4': did you mean 'a_4'"),
-        ('trunk', '%', "there is no link '%': check the spelling"),
+        ('trunk', '%', "there is no link '%': the links are "),
     ],
 )
 def test_an_unknown_link_is_named_with_its_neighbours(base: str, tip: str, words: str) -> None:

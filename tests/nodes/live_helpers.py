@@ -139,7 +139,7 @@ class FakeEvaluator:
                   for topic, routes in self.routes.items() for route in routes}
         return {'arms': {'right': {'inputs': inputs, 'mappings': {}}}}
 
-    def finish(self) -> dict[str, Any]:
+    def finish(self, *, explained: Any = ()) -> dict[str, Any]:
         return self.summary()
 
     def background(self, postures: int) -> bool:

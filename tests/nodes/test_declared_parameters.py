@@ -71,7 +71,7 @@ def test_thresholds_may_change_within_their_range() -> None:
     assert change('thresholds.latency_warn_s', 0.2) == (True, '')
     assert change('thresholds.latency_warn_s', 0.5) == (
         False, 'the parameters: thresholds.latency_error_s (0.3 s) is below '
-        'thresholds.latency_warn_s (0.5 s).')
+        'thresholds.latency_warn_s (0.5 s); exchange or change them.')
     refused, reason = change('time.window_s', 3.0)
     assert not refused and reason.startswith('time.window_s cannot change while the node runs')
     assert not change('use_sim_time', True)[0]
