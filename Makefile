@@ -2,34 +2,46 @@
 SHELL := /bin/bash
 VENV := .venv
 PYTHON := $(VENV)/bin/python
-STAMP := $(VENV)/.installed
 TESTS ?= tests
 WORKERS ?= 2
+RESULTS := .cache/results/pytest.xml
+
+# A ROS installation that is sourced would mix its libraries with those of the wheels.
+ifneq ($(AMENT_PREFIX_PATH),)
+unexport LD_LIBRARY_PATH
+endif
+unexport PYTHONPATH PYTHONHOME AMENT_PREFIX_PATH COLCON_PREFIX_PATH CMAKE_PREFIX_PATH
+unexport RMW_IMPLEMENTATION
 
 .PHONY: demo test venv lint bench colcon clean
 
-demo: $(STAMP)
+demo: $(VENV)/.run
 	@$(PYTHON) -m teleop_eval demo
 
-test: $(STAMP) lint
-	$(PYTHON) -m pytest $(TESTS) -n $(WORKERS) --dist loadgroup -q -rs --durations=10
+test: $(VENV)/.test lint
+	$(PYTHON) -m pytest $(TESTS) -n $(WORKERS) --dist loadgroup -q -rs --durations=10 \
+	    --junit-xml=$(RESULTS)
 
-venv: $(STAMP)
+venv: $(VENV)/.test
 
-# The interpreter is looked for, not assumed: 3.10 to 3.13 have ROS 2 wheels.
-$(STAMP): setup.py package.xml
-	@PYTHON_FOR_VENV="$(PYTHON_FOR_VENV)" bash .ci/make_venv $(VENV)
-	@touch $@
+# In stages, so that the demo need not wait for the test tools.
+$(VENV)/.run: setup.py .ci/make_venv
+	@PYTHON_FOR_VENV="$(PYTHON_FOR_VENV)" bash .ci/make_venv $(VENV) run
+$(VENV)/.test: $(VENV)/.run
+	@PYTHON_FOR_VENV="$(PYTHON_FOR_VENV)" bash .ci/make_venv $(VENV) test
+$(VENV)/.colcon: $(VENV)/.test
+	@PYTHON_FOR_VENV="$(PYTHON_FOR_VENV)" bash .ci/make_venv $(VENV) colcon
 
-lint: $(STAMP)
-	$(VENV)/bin/ruff check
-	$(VENV)/bin/mypy
+lint: $(VENV)/.test
+	$(PYTHON) -m ruff check
+	$(PYTHON) -m mypy
 
-bench: $(STAMP)
+bench: $(VENV)/.test
 	$(PYTHON) -m tests.benchmarks
 
-colcon: $(STAMP)
-	@bash .ci/colcon $(VENV)
+# Compares with the last `make test`.
+colcon: $(VENV)/.colcon
+	@WORKERS=$(WORKERS) bash .ci/colcon $(VENV) $(RESULTS)
 
 clean:
-	rm -rf $(VENV) build install log .cache .pytest_cache .mypy_cache .ruff_cache
+	rm -rf $(VENV) build install log .cache .pytest_cache .mypy_cache .ruff_cache .hypothesis

@@ -28,7 +28,6 @@ TEST_TOOLS = [
     'hypothesis',
     'ruff',
     'mypy',
-    'types-PyYAML',
     'pandas',
     'mcap-ros2-support',
     'pin>=3',
@@ -51,8 +50,8 @@ setup(
     ],
     python_requires='>=3.10',
     install_requires=[
-        'numpy>=1.21',
-        'scipy>=1.8',
+        'numpy>=1.26',
+        'scipy>=1.11',
         'PyYAML',
         'rich',
         'defusedxml',
