@@ -11,6 +11,7 @@ beyond what `Ideal` shows.
 from __future__ import annotations
 
 import difflib
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -85,7 +86,8 @@ def make_mapping(label: str, settings: MappingSettings, operator: OperatorGeomet
     from teleop_eval.core.mappings.joint_space import JointSpaceMapping
     from teleop_eval.core.mappings.task_space import TaskSpaceMapping
 
-    kinds = {'joint_space': JointSpaceMapping, 'task_space': TaskSpaceMapping}
+    kinds: dict[str, Callable[..., MappingModel]] = {
+        'joint_space': JointSpaceMapping, 'task_space': TaskSpaceMapping}
     if settings.kind not in kinds:
         near = difflib.get_close_matches(settings.kind, kinds, 1)
         hint = f'; did you mean {near[0]!r}?' if near else '.'
