@@ -68,8 +68,9 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
             ('tracking_error', accumulator.raw,
              {'reason': 'no engaged and settled sample'}, ''),
             ('tracking_error_compensated', accumulator.compensated, unknown, caveat)):
-        found |= one.metrics(prefix, '_norm', ARM_LENGTHS, **why, caveat=hint)
-        found |= one.metrics(prefix, '_m', 'm', factor=reach, **why, caveat=hint)
+        for suffix, unit, factor in (('_norm', ARM_LENGTHS, 1.0), ('_m', 'm', reach)):
+            found |= one.metrics(prefix, suffix, unit, factor=factor, caveat=hint,
+                                 status=why.get('status', INSUFFICIENT), reason=why['reason'])
     absorbed = model is not None and model.estimates_tool_rotation
     no_turn = ('orientation of hand and tool is not both known' if not absorbed or
                measured.tool_rotation is not None else

@@ -88,8 +88,9 @@ class WindowLatency:
         have = self._seen
         model = self._arm.setup.models.get(self._arm.boundaries.labels[label])
         chain = self._chain_columns
-        has_ideal = model is not None and model.needs in have and 'u_i' in have
-        joints_ideal = has_ideal and 'q_i' in have and model.needs == 'operator_joints'
+        needs = None if model is None else model.needs
+        has_ideal = needs in have and 'u_i' in have
+        joints_ideal = has_ideal and 'q_i' in have and needs == 'operator_joints'
         found: dict[str, Pair | None] = dict.fromkeys(LATENCIES)
         if joints_ideal and 'q_r' in have:
             found['latency_s'] = Pair('q_i', 'q_r', 'joints', (None, chain))
