@@ -76,7 +76,7 @@ class RecordedInputs:
     InputError
         When none of the topics that the recording has can serve.
     RecordingError
-        When the recording has none of the topics.
+        When the recording has none of the topics, or no message of them.
 
     """
 
@@ -97,6 +97,10 @@ class RecordedInputs:
         if not self.decoders:
             raise (InputError(' '.join(self.problems)) if self.problems
                    else RecordingError(_nothing(recording, routes)))
+        if not any(recording.topics[topic].message_count != 0 for topic in self.decoders):
+            raise RecordingError(
+                f'The recording {recording.path} holds no message of the configured topics '
+                f'({listed(self.decoders)}); record while they are published.')
         self._silent = routes.keys() - self.decoders
         if recording.losses and len(absent) > 1:
             self.problems.append(f'What is left of {recording.path.name} holds nothing of '
@@ -206,7 +210,7 @@ def _absence(topic: str, uses: Sequence[RouteLike], recording: Recording) -> str
 def _nothing(recording: Recording, routes: Mapping[str, Sequence[RouteLike]]) -> str:
     held = listed(sorted(recording.topics)) or 'no topic at all'
     return (f'The recording {recording.path} has none of the configured topics '
-            f'({listed(sorted(routes))}); it has {held}. Check the names and --namespace.')
+            f'({listed(sorted(routes))}); it has {held}; check the names and --namespace.')
 
 
 def _use(route: RouteLike) -> str:

@@ -114,21 +114,26 @@ def _locate(recording: Path, config: Path | None) -> tuple[Path, Path]:
     Raises
     ------
     RecordingError
-        For a session folder without inputs.
+        For a session folder without inputs, and where there is nothing to read.
     UsageError
         When a recording comes without --config.
 
     """
     own_config = recording / CONFIG_FILE
-    is_session = own_config.is_file() and (
-        (recording / SUMMARY_BAG).is_dir() or (recording / INPUTS_BAG).is_dir())
+    try:
+        exists = recording.exists()
+        is_session = own_config.is_file() and (
+            (recording / SUMMARY_BAG).is_dir() or (recording / INPUTS_BAG).is_dir())
+    except OSError as error:
+        raise RecordingError(
+            f'{recording} cannot be read: {error.strerror or error}; check the path.') from error
     if is_session:
         if not (recording / INPUTS_BAG).is_dir():
             raise RecordingError(
                 f'The session folder {recording} has no {INPUTS_BAG}/, so there is nothing to '
                 'evaluate again; record with session.record_inputs: true next time.')
         return recording / INPUTS_BAG, config or own_config
-    if not recording.exists():
+    if not exists:
         raise RecordingError(f'There is no recording {recording}; check the path.')
     if config is None:
         raise UsageError(

@@ -263,6 +263,7 @@ class ArmEvaluator:
 
     def new_segment(self, reason: str, receive_ns: int) -> None:
         """Begin a new segment from outside, as after a step of the receive clock."""
+        self._stepped_at_ns = receive_ns  # stamps of the same clock step too
         if self.time_base is not None:
             self._flush(receive_ns)
             self._new_segment(reason, keep=False)

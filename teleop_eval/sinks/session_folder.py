@@ -304,7 +304,8 @@ def make_empty(path: Path) -> None:
         raise OutputError(f'{path} is a file; give the name of a new folder.') from error
     except (OSError, ValueError) as error:
         reason = getattr(error, 'strerror', None) or error
-        raise OutputError(f'The folder {path} cannot be made: {reason}.') from error
+        raise OutputError(
+            f'The folder {path} cannot be made: {reason}; choose another one.') from error
     if held is not None:
         raise OutputError(f'The folder {path} already holds {held.name}; give the name of a new '
                           'or empty folder, so that no result is overwritten.')

@@ -12,6 +12,8 @@ from pathlib import Path
 from typing import BinaryIO
 
 from teleop_eval.sources import mcap_chunk as mc
+from teleop_eval.sources.clock_step import steps_back
+from teleop_eval.sources.feed_order import STEP_NS
 from teleop_eval.sources.mcap_layout import Block, Layout, damage_note, read_layout
 from teleop_eval.sources.qos_profiles import read_qos
 from teleop_eval.sources.stored_file import Loss, Message, TopicInfo, add_note, definition_format
@@ -43,16 +45,41 @@ class McapFile:
             self._add_channel(layout, channel_id)
 
     def batches(self, topics: Collection[str]) -> Iterator[list[Message]]:
-        """Yield the messages of these topics in log-time order, some at a time."""
+        """
+        Yield the messages of these topics in log-time order, some at a time.
+
+        If the recorder's clock was put back, they come in the order of the file instead.
+        """
         wanted = {key: name for key, name in self._topic_of.items() if name in topics}
         blocks = [
             block
             for block in self._blocks
             if not block.channels or not wanted.keys().isdisjoint(block.channels)
         ]
-        blocks.sort(key=lambda block: (block.start_ns, block.offset))
+        blocks.sort(key=lambda block: block.offset)
         with self.path.open('rb') as stream:
+            if self._clock_stepped(stream, blocks, wanted):
+                for block in blocks:
+                    if messages := self._load(stream, block, wanted, sort=False):
+                        yield messages
+                return
+            blocks.sort(key=lambda block: (block.start_ns, block.offset))
             yield from self._merge(stream, blocks, wanted)
+
+    def _clock_stepped(
+        self, stream: BinaryIO, blocks: list[Block], wanted: Mapping[int, str]
+    ) -> bool:
+        """Look for a step of the clock where the blocks' times leave room for one."""
+        for number, block in enumerate(blocks):
+            before = blocks[number - 1] if number else block
+            outermost = number in (0, len(blocks) - 1)
+            room = max(before.end_ns, block.end_ns if outermost else 0) - block.start_ns
+            if room > STEP_NS:
+                latest: dict[str, int] = {}
+                for one in (before, block)[not number :]:
+                    if steps_back(self._load(stream, one, wanted, sort=False), latest):
+                        return True
+        return False
 
     def _merge(
         self, stream: BinaryIO, blocks: list[Block], wanted: Mapping[int, str]
@@ -73,8 +100,10 @@ class McapFile:
             if batch:
                 yield batch
 
-    def _load(self, stream: BinaryIO, block: Block, wanted: Mapping[int, str]) -> list[Message]:
-        """Read a block's messages in log-time order."""
+    def _load(
+        self, stream: BinaryIO, block: Block, wanted: Mapping[int, str], *, sort: bool = True
+    ) -> list[Message]:
+        """Read a block's messages in log-time order, or as they are."""
         stream.seek(block.offset)
         data = stream.read(block.size)
         if len(data) < block.size:
@@ -100,7 +129,7 @@ class McapFile:
         else:
             messages = [message for walked in parts for message in walked.messages]
             in_order = False
-        if not in_order:
+        if sort and not in_order:
             messages.sort(key=_LOG_NS)
         return messages
 

@@ -155,6 +155,8 @@ class Recording:
         """
         Iterate over messages in log-time order, equal times in the order of the file.
 
+        Where the clock was put back within a file, the order of that file is kept.
+
         Parameters
         ----------
         topics

@@ -13,6 +13,7 @@ from pathlib import Path
 from urllib.parse import quote
 
 from teleop_eval.core.errors import RecordingError
+from teleop_eval.sources.clock_step import STEP_QUERIES
 from teleop_eval.sources.qos_profiles import read_qos
 from teleop_eval.sources.sqlite_pages import SalvagedMessages
 from teleop_eval.sources.stored_file import Loss, Message, TopicInfo, add_note, definition_format
@@ -63,7 +64,11 @@ class SqliteFile:
             self._salvage()
 
     def batches(self, topics: Collection[str]) -> Iterator[list[Message]]:
-        """Yield the messages of these topics in log-time order, some at a time."""
+        """
+        Yield the messages of these topics in log-time order, some at a time.
+
+        If the recorder's clock was put back, they come in the order of writing instead.
+        """
         wanted = {key: name for key, name in self._names.items() if name in topics}
         last = (-(2**63), -1)
         if self._salvaged is None:
@@ -81,10 +86,11 @@ class SqliteFile:
         self, database: sqlite3.Connection, wanted: dict[int, str]
     ) -> Iterator[list[tuple[int, int, int, bytes]]]:
         marks = ','.join(str(key) for key in wanted)
+        stepped = all(database.execute(query).fetchone() for query in STEP_QUERIES)
         # The unary plus keeps SQLite on the timestamp index, so that nothing is sorted.
         cursor = database.execute(
             'SELECT timestamp, id, topic_id, data FROM messages '
-            f'WHERE +topic_id IN ({marks}) ORDER BY timestamp, id'
+            f'WHERE +topic_id IN ({marks}) ORDER BY {"id" if stepped else "timestamp, id"}'
         )
         while rows := cursor.fetchmany(_BATCH):
             yield rows

@@ -65,8 +65,8 @@ def test_absent_topic_names_its_use_and_the_nearest(recording):
 
 def test_no_configured_topic_at_all_is_an_error_that_lists_what_there_is(recording):
     with pytest.raises(RecordingError, match=r'none of the configured topics \(/a, /b\); it has '
-                                             r'/cell/engaged, /cell/joint_states, /image\. '
-                                             'Check the names and --namespace'):
+                                             r'/cell/engaged, /cell/joint_states, /image; '
+                                             'check the names and --namespace'):
         inputs(recording, {'/a': (Route('right', 'engaged'),),
                            '/b': (Route('right', 'robot_joints'),)})
 
@@ -110,6 +110,7 @@ def test_events_are_read_where_they_were_recorded(tmp_path):
     with BagWriter(tmp_path / 'bag') as writer:
         writer.add_topic('/engaged', 'std_msgs/msg/Bool')
         writer.add_topic(EVENTS, 'std_msgs/msg/String')
+        writer.write('/engaged', 5, b'\x00\x01\x00\x00\x01')
     with open_recording(tmp_path / 'bag') as opened:
         made = inputs(opened, {'/engaged': (Route('right', 'engaged'),)})
     assert made.topics == ('/engaged', EVENTS)
