@@ -19,6 +19,11 @@ from teleop_eval.core.samples import (
 from teleop_eval.core.sentences import Sentences, listed, nearest, shown
 from teleop_eval.core.streams import Row, SampledStream
 
+_POSES, _JOINTS, _PLANS = 'poses', 'joints', 'joint trajectories'
+_KINDS = {PoseSample: _POSES, JointSample: _JOINTS, ArraySample: _JOINTS,
+          TrajectorySample: _PLANS}
+# No position in metres or radians; its square can still be summed.
+_LARGEST = 1e12
 RUN_ON = 'let the clocks of all publishers run on during a session'
 
 
@@ -30,8 +35,6 @@ class Intake:
     ----------
     problems
         Sentences about what could not be used.
-    posed
-        Whether poses come, not joints.
     foreign_messages
         Number of messages with none of the wanted joints, as of a gripper.
     foreign_names
@@ -44,7 +47,7 @@ class Intake:
         self.stream = stream
         self.matcher = matcher
         self.problems = Sentences()
-        self.posed = False
+        self._kind = ''
         self.foreign_messages = 0
         self.foreign_names: tuple[str, ...] = ()
         self._frame_id: str | None = None
@@ -55,32 +58,45 @@ class Intake:
             stream.width = 3
 
     @property
+    def posed(self) -> bool:
+        """Tell whether poses come, not joints."""
+        return self._kind == _POSES
+
+    @property
     def turning(self) -> np.ndarray:
         """Return the columns of joints that turn without limits."""
         return np.zeros(0, dtype=np.int64) if self.matcher is None else self.matcher.turning
 
     def rows(self, receive_ns: int, sample: Sample) -> list[Row]:
         """Return the rows of a sample, [] if it cannot be used."""
-        posed = isinstance(sample, PoseSample)
-        if self.stream.matched and posed != self.posed:
-            self.problem('poses and joints came on one topic; only the first kind is used')
+        kind = _KINDS.get(type(sample), '')
+        if not kind:
+            self.problem(f'{type(sample).__name__} is of no use here')
             return []
+        if self.stream.matched and kind != self._kind:
+            self.problem(f'{kind} came after {self._kind} on one topic; only the first kind is '
+                         'used')
+            return []
+        found = self._converted(receive_ns, sample)
+        if found:
+            self._kind = kind
+            self.stream.planned = kind == _PLANS
+        return found
+
+    def _converted(self, receive_ns: int, sample: Sample) -> list[Row]:
         if isinstance(sample, PoseSample):
             return self._pose(receive_ns, sample)
         if isinstance(sample, JointSample):
             return self._joints(receive_ns, sample)
         if isinstance(sample, TrajectorySample):
             return self._trajectory(receive_ns, sample)
-        if isinstance(sample, ArraySample):
-            return self._array(receive_ns, sample)
-        self.problem(f'{type(sample).__name__} is of no use here')
-        return []
+        assert isinstance(sample, ArraySample)  # the only kind left
+        return self._array(receive_ns, sample)
 
     def _pose(self, receive_ns: int, sample: PoseSample) -> list[Row]:
         if self.stream.role in ('robot_joints', 'operator_joints'):
             self.problem('poses came where joints are expected')
             return []
-        self.posed = True
         self.stream.width = 3
         if self._frame_id is None:
             self._frame_id = sample.frame_id
@@ -125,8 +141,8 @@ class Intake:
         return self._row(_finite(values), (receive_ns, 0, values, None, None))
 
     def _trajectory(self, receive_ns: int, sample: TrajectorySample) -> list[Row]:
-        if self.matcher is None:
-            self.problem('a joint trajectory came where a pose is expected')
+        if self.matcher is None or self.stream.role != 'command':
+            self.problem('joint trajectories can only be commands')
             return []
         if self.matcher.find(sample.names) is None:
             self._lacking(sample.names)
@@ -136,7 +152,6 @@ class Intake:
             return []
         points = self.matcher.points(sample)
         assert points is not None  # all joints are there
-        self.stream.planned = True
         rows: list[Row] = []
         for offset_ns, point in zip(sample.offsets_ns.tolist(), points, strict=True):
             # A zero stamp means that the plan starts on receipt.
@@ -195,7 +210,6 @@ class Intake:
 
 
 def _finite(values: np.ndarray) -> bool:
-    """Tell whether all values (n,) are finite; this is called for every message."""
-    # A sum of squares is finite only if every part is: numbers too large to square are not
-    # positions.
-    return math.isfinite(values.dot(values))
+    """Tell whether all values (n,) are usable numbers; this is called for every message."""
+    # For so few values a loop is several times quicker than numpy, and NaN fails both tests.
+    return all(-_LARGEST < value < _LARGEST for value in values.tolist())

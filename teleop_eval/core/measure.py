@@ -146,10 +146,11 @@ class ArmMeasurement:
                 if arm.robot is not None:
                     tracks |= tool_tracks('c', tracks['q_c'], self._columns, arm.robot)
                 command_items = self._with_earlier(command_items, span)
-            elif arm.robot is not None:
-                tracks |= pose_command_tracks(
-                    command_items, span, max_gap_ns=stream.max_gap_ns, hold=hold,
-                    robot=arm.robot, robot_joints=self._robot_joints(tracks, span.count))
+            else:
+                if arm.robot is not None:
+                    tracks |= pose_command_tracks(
+                        command_items, span, max_gap_ns=stream.max_gap_ns, hold=hold,
+                        robot=arm.robot, robot_joints=self._robot_joints(tracks, span.count))
                 command_items = None
         return tracks, robot_items, command_items
 
