@@ -11,21 +11,14 @@ share no topic, so that a fault of one must leave every number of the other as i
 from __future__ import annotations
 
 import functools
-import importlib.util
-import sys
+import struct
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
+import synthetic_recording as synthetic
 from rosbags.rosbag2 import StoragePlugin, Writer
-
-_SPEC = importlib.util.spec_from_file_location(
-    'synthetic_recording', Path(__file__).with_name('synthetic_recording.py'))
-synthetic = sys.modules.get(_SPEC.name) or importlib.util.module_from_spec(_SPEC)
-if _SPEC.name not in sys.modules:
-    sys.modules[_SPEC.name] = synthetic
-    _SPEC.loader.exec_module(synthetic)
 
 STORE, START_NS, URDF = synthetic.STORE, synthetic.START_NS, synthetic.URDF
 JOINTS = synthetic.JOINTS
@@ -112,6 +105,18 @@ def pose(time_s, position, xyzw=(0.0, 0.0, 0.0, 1.0)) -> bytes:
     return encode(types[POSE](header=header, pose=types['geometry_msgs/msg/Pose'](
         position=types['geometry_msgs/msg/Point'](*map(float, position)),
         orientation=types['geometry_msgs/msg/Quaternion'](*map(float, xyzw)))))
+
+
+def stamped(event: Event, stamp_ns: int) -> Event:
+    """Return a JointState or PoseStamped with another header stamp."""
+    data = bytearray(event.data)
+    struct.pack_into('<iI', data, 4, stamp_ns // 10**9, stamp_ns % 10**9)
+    return replace(event, data=bytes(data))
+
+
+def stamp_ns(event: Event) -> int:
+    """Return the header stamp of an event of the sound recording."""
+    return event.log_ns - TRANSPORT_NS[event.topic.rpartition('/')[2]]
 
 
 def array(values) -> bytes:
