@@ -40,10 +40,26 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
         },
         'grid': {'rate_hz': None if arm.period_ns is None else 1e9 / arm.period_ns},
         'segments': arm.segments,
+        'depends_on_receive_time': _receive_dependent(arm, mappings),
         'geometry': _geometry(arm),
         'inputs': _inputs(arm, simulated_time=simulated_time),
         'mappings': mappings,
     }
+
+
+def _receive_dependent(arm: ArmEvaluator, mappings: dict[str, Any]) -> list[str]:
+    """
+    Name the metrics that a recording by another process would give a little differently.
+
+    Transport ages are made of receive times. Clutch and mapping messages have no stamps:
+    where they switch is known by their arrival. On receive time everything depends on it.
+    """
+    names = {'transport_age_min_s', 'transport_age_s', 'transport_age_jitter_s'}
+    if arm.states:
+        names |= {'engaged_time_s', 'engagements', 'engagement_rate_per_min'}
+    if arm.chosen is not None and not arm.chosen.by_stamp:
+        names |= {name for mapping in mappings.values() for name in mapping['metrics']}
+    return sorted(names)
 
 
 def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
