@@ -89,7 +89,7 @@ def _ancestry(
     """Return the link and all links above it, up to the root."""
     if link not in description.links:
         links = sorted(description.links)
-        near = difflib.get_close_matches(link[:80], links, n=3, cutoff=0.4)
+        near = difflib.get_close_matches(link[:80], links, n=3)
         hint = (f'did you mean {" or ".join(map(shown, near))}?' if near
                 else f'the links are {listed(links)}')
         raise DescriptionError(

@@ -234,10 +234,10 @@ def _check_limits(described: Parameter, value: Any, key: str, where: str) -> Non
     unit = f' {described.unit}' if described.unit else ''
     if described.choices and value not in described.choices:
         near = difflib.get_close_matches(str(value)[:80], described.choices, 1)
-        hint = f' Did you mean {near[0]!r}?' if near else ''
+        hint = f'; did you mean {near[0]!r}?' if near else '.'
         listed = ', '.join(repr(choice) for choice in described.choices)
         raise ConfigError(
-            f'{where}: {key} is {shown(value)}, but must be one of {listed}.{hint}')
+            f'{where}: {key} is {shown(value)}, but must be one of {listed}{hint}')
     if described.size is not None and value and len(value) != described.size:
         raise ConfigError(
             f'{where}: {key} needs {described.size} numbers, but has {len(value)}; correct it.'

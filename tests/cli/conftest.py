@@ -22,7 +22,6 @@ import faulty_recording as faulty  # noqa: E402
 from teleop_eval.cli.main import main  # noqa: E402
 
 PREFIX = 'teleop_eval summarize: '
-SHORT_S = 8.0  # a recording that is long enough where only sentences and statuses count
 
 
 @dataclass(frozen=True)
@@ -127,12 +126,6 @@ def sound(tmp_path_factory: pytest.TempPathFactory) -> Done:
 @pytest.fixture(scope='session')
 def short_sound(tmp_path_factory: pytest.TempPathFactory) -> Done:
     """Return the run on the first seconds of the sound recording."""
-    done = Bench(tmp_path_factory.mktemp('short'), _Quiet()).run(short())
+    done = Bench(tmp_path_factory.mktemp('short'), _Quiet()).run(faulty.short())
     assert done.status == 0 and done.summary['problems'] == []
     return done
-
-
-def short(events: Iterable[faulty.Event] | None = None) -> list[faulty.Event]:
-    """Return the first seconds of a recording."""
-    return [event for event in (faulty.healthy() if events is None else events)
-            if event.time_s < SHORT_S]

@@ -22,7 +22,7 @@ from rosbags.rosbag2 import StoragePlugin, Writer
 
 STORE, START_NS, URDF = synthetic.STORE, synthetic.START_NS, synthetic.URDF
 JOINTS = synthetic.JOINTS
-SECONDS, RATE_HZ = 20.0, 50.0
+SECONDS, RATE_HZ, SHORT_S = 20.0, 50.0, 8.0
 COMMAND_LATE_S, ROBOT_LATE_S = 0.04, 0.12
 # Receive time minus stamp, by what is received.
 TRANSPORT_NS = {'hand': 1_000_000, 'operator': 1_300_000, 'command': 1_600_000,
@@ -165,6 +165,12 @@ def healthy() -> tuple[Event, ...]:
                 events.append(Event(stamp_ns + TRANSPORT_NS[topic], f'/{arm}/{topic}',
                                     type_name, data))
     return tuple(sorted(events, key=lambda event: event.log_ns))
+
+
+def short(events: Iterable[Event] | None = None) -> list[Event]:
+    """Return the first seconds, where only sentences and statuses count."""
+    return [event for event in (healthy() if events is None else events)
+            if event.time_s < SHORT_S]
 
 
 def change(topic: str, make: Callable[[Event], bytes | Event | None], *, start_s: float = 0.0,
