@@ -58,7 +58,7 @@ EXTRA = {'core.urdf': frozenset({'defusedxml'})}
 
 # In core even the standard library is named: nothing here opens a file or tells the time.
 CORE_STANDARD = frozenset("""
-    __future__ abc bisect collections contextlib copy dataclasses difflib enum fractions
+    __future__ abc array bisect collections contextlib copy dataclasses difflib enum fractions
     functools heapq itertools math numbers operator re statistics string struct sys textwrap
     types typing xml
 """.split())

@@ -22,8 +22,9 @@ DEFINITION = ast.FunctionDef | ast.AsyncFunctionDef | ast.ClassDef
 FORBIDDEN_NAMES = {'open', 'input', 'print', 'exec', 'eval', '__import__', 'breakpoint'}
 FORBIDDEN_NUMPY = {'load', 'save', 'savez', 'savez_compressed', 'savetxt', 'loadtxt',
                    'genfromtxt', 'fromfile', 'tofile', 'memmap', 'open_memmap', 'DataSource'}
-CLOCKS = {'now', 'utcnow', 'today', 'time_ns', 'monotonic', 'monotonic_ns', 'perf_counter',
-          'perf_counter_ns', 'process_time'}
+CLOCKS = {'utcnow', 'time_ns', 'monotonic', 'monotonic_ns', 'perf_counter', 'perf_counter_ns',
+          'process_time'}
+CLOCKS_OF_CLASSES = ('time.time', 'datetime.now', 'datetime.today', 'date.today')
 SEEDED = {'default_rng', 'SeedSequence', 'PCG64', 'Generator'}
 
 
@@ -83,7 +84,8 @@ def impure(text: str) -> list[str]:
             continue
         name = ast.unparse(node.func)
         last = name.rpartition('.')[2]
-        if (name in FORBIDDEN_NAMES or last in CLOCKS or name in ('time.time', 'time')
+        if (name in FORBIDDEN_NAMES or last in CLOCKS or name == 'time'
+                or name.endswith(CLOCKS_OF_CLASSES)
                 or ('.' in name and last in FORBIDDEN_NUMPY)
                 or last.startswith(('read_', 'write_')) and last.endswith(('text', 'bytes'))):
             found.append(f'{name} in line {node.lineno}')
@@ -110,4 +112,4 @@ def test_an_impure_call_is_found(line: str) -> None:
 
 
 def test_a_pure_call_is_not_found() -> None:
-    assert impure('np.random.default_rng(7).normal(); np.loads; a.load; self.now_ns(3)') == []
+    assert impure('np.random.default_rng(7).normal(); np.loads; a.load; self.now(3)') == []
