@@ -26,6 +26,7 @@ class ArmStatus:
         self._label = -1
         self._margin = MarginLevel()
         self.last_receive_ns: dict[str, int] = {}
+        self._met: list[str] = []
 
     def saw(self, role: str, receive_ns: int) -> None:
         """Note that a message of a role came."""
@@ -75,10 +76,17 @@ class ArmStatus:
             if warning := age_statistics.warning():
                 level = max(level, LEVEL_WARN) if level != LEVEL_STALE else level
                 words.append(f'{role}: {warning}')
+        met = [text for intake in arm.intakes.values() for text in intake.problems.texts()]
         problems = arm.all_problems()
         if problems:
-            level = LEVEL_ERROR
-            words = problems + words
+            # Faulty messages that came no more since the last time are worth a warning.
+            over = not arm.problems and met == self._met
+            if not over:
+                level = LEVEL_ERROR
+            elif level == LEVEL_OK:
+                level = LEVEL_WARN
+            words = [text.removesuffix('.') for text in problems] + words
+        self._met = met
         return StatusLine(self._name('inputs'), level, '; '.join(words) or 'all inputs arrive',
                           values)
 

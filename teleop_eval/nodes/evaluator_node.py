@@ -289,7 +289,10 @@ class EvaluatorNode(Node):
         for sentence in self._changes.new(problems):
             logger.warning(sentence)
         for line in self._changes.levels(lines):
-            text = f'{line.name}: {statuses.LEVEL_WORDS[line.level]}: {line.message}'
+            text = f'{line.name}: {statuses.LEVEL_WORDS[line.level]}'
+            # What has just been said as a sentence is not said again.
+            if not any(sentence.rstrip('.') in line.message for sentence in problems):
+                text += f': {line.message}'
             if line.level == LEVEL_OK:
                 logger.info(text)
             elif line.level == LEVEL_ERROR:
