@@ -15,8 +15,10 @@ from collections.abc import Callable, Collection
 
 import numpy as np
 
-from teleop_eval.core.arm_setup import ArmSetup, make_setup, silent_inputs, unknown_label
+from teleop_eval.core import arm_setup
+from teleop_eval.core.arm_setup import ArmSetup
 from teleop_eval.core.boundaries import Boundaries
+from teleop_eval.core.closing import deadline_ns, first_from, may_close, moved_clock
 from teleop_eval.core.errors import TeleopEvalError
 from teleop_eval.core.freezing import can_freeze, freeze
 from teleop_eval.core.geometry import RobotGeometry, operator_geometry, robot_geometry
@@ -32,7 +34,6 @@ from teleop_eval.core.tracking import JointErrors
 from teleop_eval.core.transport_age import TransportAge
 from teleop_eval.core.window import Span
 
-UNMODELLED = 'unmodelled'
 # An arm whose description does not come is evaluated without it after this time.
 DESCRIPTION_WAIT_NS = 30_000_000_000
 NEVER_NS = 2 ** 63 - 1
@@ -78,9 +79,8 @@ class ArmEvaluator:
                 ('engaged', self.arm.engaged.topic),
                 ('active_mapping', self.arm.active_mapping.topic)) if topic}
         self.boundaries = Boundaries(
-            self.states.get('engaged'), self.states.get('active_mapping'), self._fixed_label())
-        for label in self.arm.mappings:
-            self.boundaries.index(label)
+            self.states.get('engaged'), self.states.get('active_mapping'),
+            arm_setup.fixed_label(self.arm), labels=self.arm.mappings)
         self.measurement: ArmMeasurement | None = None
         self.observe_joint_errors: Callable[[str, JointErrors], None] | None = None
         self.described: str | None = None
@@ -88,10 +88,12 @@ class ArmEvaluator:
         self.next_check_ns = NEVER_NS
         self._waiting: list[tuple[str, int, Sample]] = []
         self._ready = False
+        self._lateness_ns = round(settings.time.lateness_s * 1e9)
         self._warm_from_ns: int | None = None
         self._stepped_at_ns = -NEVER_NS
         self._origin_ns = 0
         self._next_cell = 0
+        self._close_at_ns = 0
         if urdf is not None:
             self._describe(urdf)
         if urdf is not None or not self.arm.robot.description_topic:
@@ -99,19 +101,18 @@ class ArmEvaluator:
 
     def add(self, role: str, receive_ns: int, sample: Sample) -> None:
         """Take one sample of a role; what cannot be used becomes a problem sentence."""
-        if role in self.states:
+        intake = self.intakes.get(role)
+        if intake is not None:
+            self._add_sampled(intake, receive_ns, sample)
+        elif role in self.states:
             self._add_state(self.states[role], receive_ns, sample)
         elif role == 'description':
             self._add_description(receive_ns, sample)
         elif not self._ready:
             self._waiting.append((role, receive_ns, sample))
             if receive_ns - self._waiting[0][1] > DESCRIPTION_WAIT_NS:
-                self.problems.say(f'{self.name}: no robot description came on '
-                                  f'{self.arm.robot.description_topic} within '
-                                  f'{DESCRIPTION_WAIT_NS // 10 ** 9} s; evaluated without it.')
+                self._say_undescribed(f' within {DESCRIPTION_WAIT_NS // 10 ** 9} s')
                 self._make_ready()
-        elif role in self.intakes:
-            self._add_sampled(self.intakes[role], receive_ns, sample)
 
     def _add_state(self, state: HeldState, receive_ns: int, sample: Sample) -> None:
         wanted = BoolSample if state.role == 'engaged' else TextSample
@@ -121,10 +122,9 @@ class ArmEvaluator:
             return
         state.counts.messages += 1
         value = sample.value if isinstance(sample, BoolSample) else sample.text
-        if sentence := unknown_label(self.name, self.arm, value):
+        if sentence := arm_setup.unknown_label(self.name, self.arm, value):
             self.problems.say(sentence)
-        state.add(receive_ns, value,
-                  self._closed_until_ns if self.time_base is not None else None)
+        state.add(receive_ns, value, None if self.time_base is None else self._closed_until_ns)
 
     def _add_sampled(self, intake: Intake, receive_ns: int, sample: Sample) -> None:
         stream = intake.stream
@@ -132,19 +132,11 @@ class ArmEvaluator:
         if not isinstance(sample, TrajectorySample):
             # A plan is stamped with its start, not with its sending.
             self.ages[stream.role].add(receive_ns, sample.stamp_ns)
-        rows = intake.rows(receive_ns, sample)
-        if not rows:
+        if not (rows := intake.rows(receive_ns, sample)):
             return
-        if back_ns := stream.stepped_back(sample.stamp_ns):
-            if self.time_base is None:
-                stream.drop_raw()
-            elif stream.by_stamp:
-                self._flush(receive_ns)
-                self._new_segment(f'{stream.role}: header stamps stepped back', keep=False)
-            # One clock often stamps several streams, and they step together.
-            if receive_ns - self._stepped_at_ns > self.settings.time.warm_up_s * 1e9:
-                intake.stepped_back(back_ns)
-            self._stepped_at_ns = receive_ns
+        back_ns = stream.stepped_back(sample.stamp_ns)
+        if back_ns and (stream.by_stamp or self.time_base is None):
+            self._step_back(intake, receive_ns, back_ns)
         if self.time_base is not None and not stream.frozen:
             self._new_segment(f'{stream.role} appeared', keep=True)
         if stream.by_stamp and not sample.stamp_ns and stream.closes_windows:
@@ -160,6 +152,18 @@ class ArmEvaluator:
                 self._plan_next()
             if stream.last_ns is not None and stream.last_ns >= self._close_at_ns:
                 self._close_ready(receive_ns)
+
+    def _step_back(self, intake: Intake, receive_ns: int, back_ns: int) -> None:
+        """Begin anew after stamps fell back, and say so."""
+        if self.time_base is None:
+            intake.stream.drop_raw()
+        else:
+            self._flush(receive_ns)
+            self._new_segment(f'{intake.stream.role}: header stamps stepped back', keep=False)
+        # One clock often stamps several streams, and they step together.
+        if receive_ns - self._stepped_at_ns > self.settings.time.warm_up_s * 1e9:
+            intake.stepped_back(back_ns)
+        self._stepped_at_ns = receive_ns
 
     def advance(self, receive_ns: int) -> None:
         """Let time pass: freeze after the warm-up, close windows that waited long enough."""
@@ -207,7 +211,7 @@ class ArmEvaluator:
     def _make_ready(self) -> None:
         """Make models and inputs, now that the robot is known or known to stay unknown."""
         before = self.intakes
-        self.setup = make_setup(self.name, self.arm, self.operator, self.robot)
+        self.setup = arm_setup.make_setup(self.name, self.arm, self.operator, self.robot)
         for problem in self.setup.problems:
             self.problems.say(problem)
         self.intakes = self.setup.intakes
@@ -224,16 +228,9 @@ class ArmEvaluator:
         """Give the estimated rotation (4,) x, y, z, w to every mapping that lacks one."""
         for model in self.setup.models.values():
             model.take_tool_rotation(hand_to_tool)
-        x, y, z, w = hand_to_tool
-        self.notes.say(f'{self.name}: hand-to-tool rotation estimated from motion: x {x:.4f}, '
-                       f'y {y:.4f}, z {z:.4f}, w {w:.4f}.')
-
-    def _fixed_label(self) -> str | None:
-        if self.arm.active_mapping.topic:
-            return None
-        if self.arm.active_mapping.fixed:
-            return self.arm.active_mapping.fixed
-        return next(iter(self.arm.mappings)) if len(self.arm.mappings) == 1 else UNMODELLED
+        shown = ', '.join(f'{part:.4f}' for part in hand_to_tool)
+        self.notes.say(f'{self.name}: hand-to-tool rotation estimated from motion: x, y, z, w = '
+                       f'{shown}.')
 
     def _warm_up_from(self, receive_ns: int | None) -> None:
         self._warm_from_ns = receive_ns
@@ -242,8 +239,7 @@ class ArmEvaluator:
 
     def _freeze(self, present: dict[str, SampledStream], receive_ns: int) -> None:
         """Choose time base, gap lengths and grid, and put what has come on them."""
-        frozen = freeze(present, self.settings.time)
-        self.frozen_streams = list(present.values())
+        frozen, self.frozen_streams = freeze(present, self.settings.time), [*present.values()]
         self.time_base = self.chosen = frozen.time_base
         if self.time_base.reason:
             self.ever_by_receive = True
@@ -296,8 +292,7 @@ class ArmEvaluator:
 
     @property
     def _window_cells(self) -> int:
-        assert self.period_ns is not None  # windows exist only after the freeze
-        return max(1, round(self.settings.time.window_s * 1e9 / self.period_ns))
+        return max(1, round(self.settings.time.window_s * 1e9 / (self.period_ns or 1)))
 
     @property
     def _closed_until_ns(self) -> int:
@@ -305,20 +300,20 @@ class ArmEvaluator:
 
     def _plan_next(self) -> None:
         """Note when the next window ends, and from when it may close without a stream."""
-        assert self.period_ns is not None  # set at the freeze
-        self._close_at_ns = self._closed_until_ns + self._window_cells * self.period_ns
-        self.next_check_ns = min(self._deadline_ns(stream) for stream in self._closing())
+        cells = self._next_cell + self._window_cells
+        self._close_at_ns = self._origin_ns + cells * (self.period_ns or 0)
+        self.next_check_ns = min(
+            deadline_ns(stream, self._close_at_ns, self._lateness_ns)
+            for stream in self._closing())
 
     def _closing(self) -> list[SampledStream]:
         return [stream for stream in self.frozen_streams if stream.closes_windows]
 
-    def _deadline_ns(self, stream: SampledStream) -> int:
-        lateness_ns = round(self.settings.time.lateness_s * 1e9)
-        return self._close_at_ns - stream.offset_ns + lateness_ns
-
     def _close_ready(self, receive_ns: int) -> None:
         """Close every window whose samples are all there or no longer waited for."""
-        while self.time_base is not None and self._may_close(receive_ns):
+        while self.time_base is not None and may_close(
+                self._closing(), self._close_at_ns, receive_ns=receive_ns,
+                lateness_ns=self._lateness_ns):
             silent = self._silent_windows()
             if silent is None:
                 # Nothing to evaluate: look again when a sample comes.
@@ -327,28 +322,18 @@ class ArmEvaluator:
             if silent:
                 self._skip(silent)
                 continue
-            moved = self._moved_clock()
+            moved = moved_clock(self._closing(), self._closed_until_ns,
+                                self.settings.time.clock_tolerance_s)
             self._close(self._window_cells, receive_ns)
             if moved:
                 self.problems.say(f'{self.name}: {moved}, so a new segment began; {RUN_ON}.')
                 self._new_segment(moved, keep=True)
 
-    def _may_close(self, receive_ns: int) -> bool:
-        for stream in self._closing():
-            there = stream.last_ns is not None and stream.last_ns >= self._close_at_ns
-            if not there and receive_ns <= self._deadline_ns(stream):
-                return False
-        return True
-
     def _silent_windows(self) -> int | None:
         """Return the number of windows before the next sample, None if there is no sample."""
-        assert self.period_ns is not None  # set at the freeze
-        until_ns = self._closed_until_ns
-        starts = [start for stream in self._closing()
-                  if (start := stream.next_from(until_ns)) is not None]
-        if not starts:
-            return None
-        return int((min(starts) - until_ns) // (self._window_cells * self.period_ns))
+        first_ns = first_from(self._closing(), self._closed_until_ns)
+        length_ns = self._close_at_ns - self._closed_until_ns
+        return None if first_ns is None else (first_ns - self._closed_until_ns) // length_ns
 
     def _skip(self, windows: int) -> None:
         """
@@ -377,20 +362,6 @@ class ArmEvaluator:
             age.close_window(receive_ns)
         self._plan_next()
 
-    def _moved_clock(self) -> str:
-        """Return which stream's stamps have left the frozen offset in this window, or ''."""
-        tolerance_ns = self.settings.time.clock_tolerance_s * 1e9
-        moved = {stream.role: offset - stream.offset_ns for stream in self._closing()
-                 if stream.by_stamp
-                 and (offset := stream.offset_from(self._closed_until_ns)) is not None}
-        if not moved:
-            return ''
-        role = max(moved, key=lambda one: abs(moved[one]))
-        spread = max(moved.values()) - min(moved.values())
-        if max(abs(moved[role]), spread) <= tolerance_ns:
-            return ''
-        return f'the clock of {role} moved by {moved[role] / 1e9:+.3f} s'
-
     def _flush(self, receive_ns: int) -> None:
         """Close what is there, the last window as far as it goes."""
         while self.time_base is not None and (silent := self._silent_windows()) is not None:
@@ -408,16 +379,20 @@ class ArmEvaluator:
         """Close everything; the silence of the `explained` roles needs no sentence."""
         if not self._ready:
             if 'description' not in explained:
-                self.problems.say(f'{self.name}: no robot description came on '
-                                  f'{self.arm.robot.description_topic}; evaluated without it.')
+                self._say_undescribed('')
             self._make_ready()
         self.advance(receive_ns)
         self._flush(receive_ns)
         for age in self.ages.values():
             age.close_window(receive_ns)
-        for role, sentence in silent_inputs(self.name, self.intakes, self.states).items():
+        silent = arm_setup.silent_inputs(self.name, self.intakes, self.states)
+        for role, sentence in silent.items():
             if role not in explained:
                 self.problems.say(sentence)
+
+    def _say_undescribed(self, within: str) -> None:
+        self.problems.say(f'{self.name}: no robot description came on '
+                          f'{self.arm.robot.description_topic}{within}; evaluated without it.')
 
     def all_problems(self) -> list[str]:
         """Return every problem sentence, each with how often it was met if more than once."""

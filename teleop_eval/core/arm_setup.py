@@ -19,6 +19,7 @@ from teleop_eval.core.streams import HeldState, SampledStream
 
 # Without a description nobody knows which joints turn and which slide.
 UNKNOWN_UNIT = 'rad or m'
+UNMODELLED = 'unmodelled'
 _WITHOUT = {'engaged': 'no time counts as engaged',
             'active_mapping': 'no time counts for any mapping'}
 
@@ -93,6 +94,15 @@ def _evaluated_joints(name: str, arm: ArmSettings, robot: RobotGeometry | None,
             f'{arm.robot.tip_link}{has}; the joints that move it are evaluated instead '
             f'({listed(moving)}), so correct joint_names or remove it.')
     return moving if lacking else given
+
+
+def fixed_label(arm: ArmSettings) -> str | None:
+    """Return the mapping that holds all the time, None if a topic tells it."""
+    if arm.active_mapping.topic:
+        return None
+    if arm.active_mapping.fixed:
+        return arm.active_mapping.fixed
+    return next(iter(arm.mappings)) if len(arm.mappings) == 1 else UNMODELLED
 
 
 def unknown_label(name: str, arm: ArmSettings, label: object) -> str:

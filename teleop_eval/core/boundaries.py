@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -34,10 +35,10 @@ class Boundaries:
     """Follows clutch and active mapping from window to window."""
 
     def __init__(self, engaged: HeldState | None, mapping: HeldState | None,
-                 fixed_label: str | None) -> None:
+                 fixed_label: str | None, *, labels: Iterable[str] = ()) -> None:
         self.engaged = engaged
         self.mapping = mapping
-        self.labels: list[str] = []
+        self.labels: list[str] = list(labels)
         self._fixed = None if fixed_label is None else self.index(fixed_label)
         self._settled_ns: int | None = None
         self._run = 0

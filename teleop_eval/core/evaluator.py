@@ -96,8 +96,9 @@ class SessionEvaluator:
                         Route(name, role, enabled))
         self.routes = {topic: tuple(found) for topic, found in routes.items()}
         self._targets = {
-            topic: tuple((self.arms[route.arm], self._status[route.arm], route.role)
-                         for route in found) for topic, found in self.routes.items()}
+            topic: tuple(
+                (self.arms[route.arm], self._status[route.arm].last_receive_ns, route.role)
+                for route in found) for topic, found in self.routes.items()}
 
     def add(self, receive_ns: int, topic: str, sample: Sample) -> None:
         """
@@ -120,8 +121,8 @@ class SessionEvaluator:
         if topic == EVENT_TOPIC:
             self._event(sample)
             return
-        for arm, status, role in self._targets.get(topic, ()):
-            status.saw(role, receive_ns)
+        for arm, last_receive_ns, role in self._targets.get(topic, ()):
+            last_receive_ns[role] = receive_ns
             arm.add(role, receive_ns, sample)
 
     def _event(self, sample: Sample) -> None:

@@ -5,6 +5,8 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
+from typing import Any
 
 import numpy as np
 
@@ -20,8 +22,6 @@ from teleop_eval.core.sentences import Sentences, listed, nearest, shown
 from teleop_eval.core.streams import Row, SampledStream
 
 _POSES, _JOINTS, _PLANS = 'poses', 'joints', 'joint trajectories'
-_KINDS = {PoseSample: _POSES, JointSample: _JOINTS, ArraySample: _JOINTS,
-          TrajectorySample: _PLANS}
 # No position in metres or radians; its square can still be summed.
 _LARGEST = 1e12
 RUN_ON = 'let the clocks of all publishers run on during a session'
@@ -48,6 +48,9 @@ class Intake:
         self.matcher = matcher
         self.problems = Sentences()
         self._kind = ''
+        self._kinds: dict[type, tuple[str, Callable[[int, Any], list[Row]]]] = {
+            PoseSample: (_POSES, self._pose), JointSample: (_JOINTS, self._joints),
+            ArraySample: (_JOINTS, self._array), TrajectorySample: (_PLANS, self._trajectory)}
         self.foreign_messages = 0
         self.foreign_names: tuple[str, ...] = ()
         self._frame_id: str | None = None
@@ -69,29 +72,20 @@ class Intake:
 
     def rows(self, receive_ns: int, sample: Sample) -> list[Row]:
         """Return the rows of a sample, [] if it cannot be used."""
-        kind = _KINDS.get(type(sample), '')
-        if not kind:
+        known = self._kinds.get(type(sample))
+        if known is None:
             self.problem(f'{type(sample).__name__} is of no use here')
             return []
-        if self.stream.matched and kind != self._kind:
+        kind, convert = known
+        if kind != self._kind and self.stream.matched:
             self.problem(f'{kind} came after {self._kind} on one topic; only the first kind is '
                          'used')
             return []
-        found = self._converted(receive_ns, sample)
-        if found:
+        found = convert(receive_ns, sample)
+        if found and kind != self._kind:
             self._kind = kind
             self.stream.planned = kind == _PLANS
         return found
-
-    def _converted(self, receive_ns: int, sample: Sample) -> list[Row]:
-        if isinstance(sample, PoseSample):
-            return self._pose(receive_ns, sample)
-        if isinstance(sample, JointSample):
-            return self._joints(receive_ns, sample)
-        if isinstance(sample, TrajectorySample):
-            return self._trajectory(receive_ns, sample)
-        assert isinstance(sample, ArraySample)  # the only kind left
-        return self._array(receive_ns, sample)
 
     def _pose(self, receive_ns: int, sample: PoseSample) -> list[Row]:
         if self.stream.role in ('robot_joints', 'operator_joints'):
@@ -117,7 +111,8 @@ class Intake:
         if self.matcher is None:
             self.problem('joints came where a pose is expected')
             return []
-        if self.matcher.find(sample.names) is None:
+        columns = self.matcher.find(sample.names)
+        if columns is None:
             self._lacking(sample.names)
             return []
         if len(sample.positions) != len(sample.names) or (
@@ -125,9 +120,8 @@ class Intake:
             self.problem(f'a message has {len(sample.names)} names but '
                          f'{len(sample.positions)} positions')
             return []
-        found = self.matcher.values(sample)
-        assert found is not None  # all joints are there
-        values, enabled = found
+        values = self.matcher.values(sample, columns)
+        enabled = None if sample.enabled is None else sample.enabled[columns]
         return self._row(
             _finite(values), (receive_ns, sample.stamp_ns, values, None, enabled))
 
@@ -144,14 +138,14 @@ class Intake:
         if self.matcher is None or self.stream.role != 'command':
             self.problem('joint trajectories can only be commands')
             return []
-        if self.matcher.find(sample.names) is None:
+        columns = self.matcher.find(sample.names)
+        if columns is None:
             self._lacking(sample.names)
             return []
         if sample.positions.shape != (len(sample.offsets_ns), len(sample.names)):
             self.problem('a joint trajectory came whose points do not have its joints')
             return []
-        points = self.matcher.points(sample)
-        assert points is not None  # all joints are there
+        points = self.matcher.points(sample, columns)
         rows: list[Row] = []
         for offset_ns, point in zip(sample.offsets_ns.tolist(), points, strict=True):
             # A zero stamp means that the plan starts on receipt.
@@ -211,5 +205,5 @@ class Intake:
 
 def _finite(values: np.ndarray) -> bool:
     """Tell whether all values (n,) are usable numbers; this is called for every message."""
-    # For so few values a loop is several times quicker than numpy, and NaN fails both tests.
-    return all(-_LARGEST < value < _LARGEST for value in values.tolist())
+    # For so few values this is several times quicker than numpy; NaN fails the comparison.
+    return sum(map(abs, values.tolist())) < _LARGEST

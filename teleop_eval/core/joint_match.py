@@ -33,6 +33,7 @@ class JointMatcher:
                  turning: frozenset[str] = frozenset()) -> None:
         self.names = names
         self.turning = np.flatnonzero([name in turning for name in names])
+        self._turns = bool(len(self.turning))
         self._last = np.full(len(self.turning), np.nan)
         self.scale = np.array([units[name].scale if name in units else 1.0 for name in names])
         self._scaled = bool(np.any(self.scale != 1.0))
@@ -57,18 +58,16 @@ class JointMatcher:
         self._known = names
         return None if self.missing else self._columns
 
-    def values(self, sample: JointSample) -> tuple[np.ndarray, np.ndarray | None] | None:
-        """Return (positions (n,) in rad or m, enabled (n,) or None), None if joints miss."""
-        columns = self.find(sample.names)
-        if columns is None:
-            return None
+    def values(self, sample: JointSample, columns: np.ndarray) -> np.ndarray:
+        """Return positions (n,) in rad or m of the columns found."""
         values = sample.positions[columns]
-        enabled = None if sample.enabled is None else sample.enabled[columns]
-        return self.continued(values * self.scale if self._scaled else values), enabled
+        if self._scaled:
+            values = values * self.scale
+        return self.continued(values) if self._turns else values
 
     def continued(self, values: np.ndarray) -> np.ndarray:
         """Return positions (n,) in rad or m, whole turns away from the ones before."""
-        if not len(self.turning):
+        if not self._turns:
             return values
         angles = values[self.turning]
         turns = np.round((self._last - angles) / TURN)
@@ -78,10 +77,7 @@ class JointMatcher:
         values[self.turning] = angles
         return values
 
-    def points(self, sample: TrajectorySample) -> np.ndarray | None:
-        """Return a trajectory's positions (k, n) in rad or m, None if joints miss."""
-        columns = self.find(sample.names)
-        if columns is None:
-            return None
+    def points(self, sample: TrajectorySample, columns: np.ndarray) -> np.ndarray:
+        """Return a trajectory's positions (k, n) in rad or m of the columns found."""
         points = sample.positions[:, columns] * self.scale
         return np.array([self.continued(point) for point in points]).reshape(points.shape)

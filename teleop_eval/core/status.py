@@ -18,7 +18,11 @@ from teleop_eval.core.settings import ThresholdSettings
 
 
 class ArmStatus:
-    """Makes the status lines of one arm; its only memory is the hysteresis of the levels."""
+    """
+    Makes the status lines of one arm; its only memory is the hysteresis of the levels.
+
+    `last_receive_ns` by role is filled in by whoever takes the messages.
+    """
 
     def __init__(self, arm: ArmEvaluator) -> None:
         self._arm = arm
@@ -27,10 +31,6 @@ class ArmStatus:
         self._margin = MarginLevel()
         self.last_receive_ns: dict[str, int] = {}
         self._met: list[str] = []
-
-    def saw(self, role: str, receive_ns: int) -> None:
-        """Note that a message of a role came."""
-        self.last_receive_ns[role] = receive_ns
 
     def lines(self, now_ns: int, thresholds: ThresholdSettings) -> list[StatusLine]:
         """Return the four lines at a receive time."""

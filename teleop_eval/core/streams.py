@@ -195,13 +195,12 @@ class SampledStream:
             if self.watermark_ns is not None and time_ns < self.watermark_ns:
                 self.counts.late += 1
                 continue
-            if last is not None:
-                if time_ns <= last:
-                    self.counts.out_of_order += 1
-                    continue
-                if time_ns - last > self.max_gap_ns:
-                    self.counts.gaps += 1
-                    self.counts.gap_ns += time_ns - last
+            if last is not None and time_ns - last > self.max_gap_ns:
+                self.counts.gaps += 1
+                self.counts.gap_ns += time_ns - last
+            elif last is not None and time_ns <= last:
+                self.counts.out_of_order += 1
+                continue
             self._append(time_ns, row)
 
     def _hold(self, rows: list[Row]) -> None:

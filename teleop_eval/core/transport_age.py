@@ -34,7 +34,7 @@ class TransportAge:
         self._negative = StreamingHistogram(floor=1e-6)
         self._minimum = math.inf
         self._first: float | None = None
-        self._pending: list[float] = []
+        self._pending: list[int] = []
         self._zero_stamps = 0
         # Count and sums of t, y, tt, ty, yy of the windows' minima: a line in constant memory.
         self._sums = np.zeros(6)
@@ -47,7 +47,7 @@ class TransportAge:
         else:
             if self._origin_ns is None:
                 self._origin_ns = receive_ns
-            self._pending.append((receive_ns - stamp_ns) / 1e9)
+            self._pending.append(receive_ns - stamp_ns)
             if len(self._pending) >= MOST_PENDING:
                 self.close_window(receive_ns)
 
@@ -55,7 +55,7 @@ class TransportAge:
         """Put the pending messages into the statistics."""
         if not self._pending:
             return
-        ages = np.array(self._pending)
+        ages = np.array(self._pending) / 1e9
         self._pending.clear()
         if self._first is None:
             self._first = float(ages[0])
