@@ -14,7 +14,7 @@ from collections import Counter
 from dataclasses import dataclass
 from pathlib import Path
 
-PREFIX = 'teleop_eval.'
+PREFIX = 'teleop_eval'
 
 
 @dataclass(frozen=True)
@@ -35,18 +35,24 @@ def read(name: str, path: Path) -> Run:
     """Return the run that a file in JUnit's format tells of."""
     outcomes, reasons = {}, {}
     for case in ET.parse(path).getroot().iter('testcase'):
-        test = f'{case.get("classname", "")}::{case.get("name", "")}'
-        # colcon puts the package's name before each.
-        test = test.removeprefix(PREFIX) if name == 'colcon test' else test
+        # colcon puts the package's name before each class; a skipped file has none.
+        group = case.get('classname', '').removeprefix(PREFIX).removeprefix('.')
+        test = f'{group}::{case.get("name", "")}'
         skipped = case.find('skipped')
         if case.find('failure') is not None or case.find('error') is not None:
             outcomes[test] = 'failed'
         elif skipped is not None:
             outcomes[test] = 'skipped'
-            reasons[test] = skipped.get('message', '')
+            reasons[test] = _reason(skipped)
         else:
             outcomes.setdefault(test, 'passed')
     return Run(name, outcomes, reasons)
+
+
+def _reason(skipped: ET.Element) -> str:
+    """Return why; of a whole file the reason stands at the end of the text only."""
+    message, _, rest = (skipped.text or '').partition('Skipped: ')
+    return rest.rstrip("')\"") or skipped.get('message', '') or message
 
 
 def main() -> int:
