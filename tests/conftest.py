@@ -4,14 +4,29 @@
 
 from __future__ import annotations
 
+import fcntl
+import importlib
+import importlib.util
 import os
 import subprocess
 import sys
 import tarfile
 import tempfile
+import warnings
+from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
+
+if importlib.util.find_spec('rclpy') is not None:
+    with warnings.catch_warnings():
+        # A library that rclpy loads with the first message type uses a deprecated module.
+        warnings.simplefilter('ignore', DeprecationWarning)
+        importlib.import_module('rosidl_generator_py')
+
+# Domains up to 101 leave the operating system's own ports alone on Linux (ROS 2
+# documentation, "The ROS_DOMAIN_ID"); the low ones are people's.
+FIRST_DOMAIN, LAST_DOMAIN = 20, 101
 
 _CACHE = Path(__file__).parents[1] / '.cache'
 _REAL = 'mcap_bag_parser-0.3.1'
@@ -59,3 +74,20 @@ def real_recordings() -> Path:
         if problem:
             pytest.skip(f'the real recordings cannot be fetched: {problem}')
     return folder
+
+
+@pytest.fixture
+def free_domain() -> Iterator[int]:
+    """Give a ROS domain that no other test, worker or test run of this machine uses now."""
+    span = LAST_DOMAIN - FIRST_DOMAIN + 1
+    for attempt in range(span):
+        number = FIRST_DOMAIN + (os.getpid() + attempt) % span
+        path = Path(tempfile.gettempdir()) / f'teleop_eval_test_domain_{number}.lock'
+        with path.open('w') as lock:
+            try:
+                fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            except OSError:
+                continue
+            yield number
+            return
+    pytest.skip('every ROS domain for tests is in use')

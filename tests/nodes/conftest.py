@@ -4,13 +4,8 @@
 
 from __future__ import annotations
 
-import fcntl
 import importlib.util
-import os
 import sys
-import tempfile
-import warnings
-from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
@@ -20,31 +15,11 @@ sys.path.insert(0, str(Path(__file__).parent))
 
 if importlib.util.find_spec('rclpy') is None:
     collect_ignore_glob = ['test_*.py']  # the live node needs ROS, the rest does not
-else:
-    with warnings.catch_warnings():
-        # A library that rclpy loads with the first message type uses a deprecated module.
-        warnings.simplefilter('ignore', DeprecationWarning)
-        importlib.import_module('rosidl_generator_py')
-
-# Domains up to 101 leave the operating system's own ports alone on Linux (ROS 2
-# documentation, "The ROS_DOMAIN_ID"); the low ones are people's.
-FIRST_DOMAIN, LAST_DOMAIN = 20, 101
 
 
 @pytest.fixture
-def domain(monkeypatch: pytest.MonkeyPatch) -> Iterator[int]:
-    """Give a ROS domain that no other test, worker or test run of this machine uses now."""
+def domain(free_domain: int, monkeypatch: pytest.MonkeyPatch) -> int:
+    """Give a ROS domain of this test alone, to itself and to the processes it starts."""
     monkeypatch.setenv('ROS_AUTOMATIC_DISCOVERY_RANGE', 'LOCALHOST')
-    span = LAST_DOMAIN - FIRST_DOMAIN + 1
-    for attempt in range(span):
-        number = FIRST_DOMAIN + (os.getpid() + attempt) % span
-        path = Path(tempfile.gettempdir()) / f'teleop_eval_test_domain_{number}.lock'
-        with path.open('w') as lock:
-            try:
-                fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
-            except OSError:
-                continue
-            monkeypatch.setenv('ROS_DOMAIN_ID', str(number))
-            yield number
-            return
-    pytest.skip('every ROS domain for tests is in use')
+    monkeypatch.setenv('ROS_DOMAIN_ID', str(free_domain))
+    return free_domain
