@@ -21,6 +21,10 @@ if TYPE_CHECKING:
     from teleop_eval.core.arm import ArmEvaluator
 
 
+# Share of a window that must have valid pairs: what lags and filters take is a quarter of 10 s.
+MIN_SHARE = 0.4
+
+
 @dataclass(frozen=True)
 class Pair:
     """Two sides of one latency: names of tracks, columns of each, and the space they are in."""
@@ -50,10 +54,14 @@ class WindowLatency:
         self._period_s = period_s
         self._chain_columns = chain_columns
         latency = arm.settings.latency
-        self._settings = DelaySettings(min_s=latency.min_s, max_s=latency.max_s)
+        self._settings = DelaySettings(
+            min_s=latency.min_s, max_s=latency.max_s,
+            min_duration_s=MIN_SHARE * latency.window_s)
         self.cells = round(latency.window_s / period_s)
-        keep_s = latency.window_s + self._settings.context_s + latency.max_s
-        self.keep_cells = round(keep_s / period_s) + 2
+        # The filters run in inside the window: nothing from before it reaches the estimate,
+        # so that a window after a step of the delay knows only the new one.
+        self._run_in_cells = round(self._settings.context_s / period_s)
+        self.keep_cells = self.cells + 2
         self.hop_windows = round(latency.hop_s / arm.settings.time.window_s)
         self._now: dict[int, dict[str, DelayNow]] = {}
         self._spaces = dict.fromkeys(LATENCIES, '')
@@ -139,7 +147,7 @@ class WindowLatency:
             sides[0], sides[1], 1.0 / self._period_s,
             valid_reference=reference.valid & (history.label == label),
             valid_response=response.valid, runs=history.run,
-            window=(stop - self.cells, stop), settings=self._settings)
+            window=(stop - self.cells + self._run_in_cells, stop), settings=self._settings)
 
     def _joint_weights(self, columns: np.ndarray | None) -> np.ndarray:
         """Return weights (n,) that put sliding joints (m) on a scale with angles."""

@@ -11,6 +11,7 @@ import numpy as np
 from teleop_eval.core.kinematics import SerialChain
 from teleop_eval.core.latency import DelaySettings, estimate_delay
 from teleop_eval.core.metric import OK
+from teleop_eval.core.window_latency import MIN_SHARE
 from teleop_eval.teardown_cell.arm import HOME, SimulatedArm
 from teleop_eval.teardown_cell.commander import Commander
 from teleop_eval.teardown_cell.mappings import Mirror, Reach
@@ -138,11 +139,14 @@ def _correlation_delay(reference: Array, response: Array, plan: Plan, name: str,
     # Both sides pass the same difference, so it adds no delay.
     before, after = (np.gradient(side[part], 1.0 / rate, axis=0)
                      for side in (reference, response))
+    # As the evaluator does it: the filters run in inside the window.
+    settings = DelaySettings(min_duration_s=MIN_SHARE * window_s)
     size, hop = round(window_s * rate), round(HOP_S * rate)
+    run_in = round(settings.context_s * rate)
     found = []
     for start in range(0, max(len(before) - size, 0) + 1, hop):
-        estimate = estimate_delay(before, after, rate, window=(start, start + size),
-                                  settings=DelaySettings())
+        estimate = estimate_delay(before, after, rate, window=(start + run_in, start + size),
+                                  settings=settings)
         if estimate.status == OK and estimate.delay_s is not None:
             found.append(estimate.delay_s)
     return float(np.median(found)) if found else None
