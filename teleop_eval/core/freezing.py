@@ -54,6 +54,14 @@ def freeze(streams: Mapping[str, SampledStream], settings: TimeSettings) -> Froz
     base = choose_time_base(
         {role: clocks[role] for role in streams if streams[role].closes_windows},
         tolerance_ns=tolerance_ns)
+    # A held or planned command whose stamps do not serve goes by its receive time. That places
+    # it well only while the other streams' clock is near the receive clock.
+    astray = {role for role, stream in streams.items()
+              if not stream.closes_windows and not _agrees(clocks[role], base, tolerance_ns)}
+    if base.by_stamp and astray and abs(base.common_offset_ns) > tolerance_ns:
+        base = choose_time_base(
+            {role: clock for role, clock in clocks.items()
+             if streams[role].closes_windows or role in astray}, tolerance_ns=tolerance_ns)
     rates, firsts = [], []
     for role, stream in streams.items():
         by_stamp = base.by_stamp and (

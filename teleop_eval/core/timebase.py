@@ -77,8 +77,8 @@ def choose_time_base(clocks: Mapping[str, StreamClock], *, tolerance_ns: int) ->
     Parameters
     ----------
     clocks
-        By role, every sampled stream of the arm. Held and planned ones have no say: they
-        have no regular stamps.
+        By role, every stream of the arm that has a say: the sampled ones, and a held or
+        planned command that no stamps place near them.
     tolerance_ns
         Largest difference between the offsets of two streams.
 
