@@ -227,11 +227,16 @@ def test_trajectories_are_interpolated_and_replaced(stamped, robot_stamped):
     assert base['base'] == ('stamp' if robot_stamped else 'receive')
 
 
-def test_held_command_with_zero_stamps_keeps_the_header_stamps():
-    """A held stream has no say in the time base; its receipt is placed on the stamps' axis."""
+@pytest.mark.parametrize('ahead', [0.0, 0.3, 46.0])
+def test_held_command_with_zero_stamps_goes_by_its_receipt(ahead):
+    """
+    Its receipt is placed on the stamps' axis, as long as that clock is near the receive clock.
+
+    A clock further off than clock_tolerance_s (0.5 s) leads to receive time for all.
+    """
     t = syn.clock(0.0, 12.0, 100.0)
     made = syn.Feed()
-    made.joints('/joints', t, np.column_stack([t, -t]), NAMES, transport=0.004, ahead=46.0)
+    made.joints('/joints', t, np.column_stack([t, -t]), NAMES, transport=0.004, ahead=ahead)
     steps = np.arange(0.5, 12.0, 1.0)
     made.joints('/command', steps, np.column_stack([steps, -steps]), NAMES, transport=0.004,
                 stamped=False)
@@ -239,7 +244,10 @@ def test_held_command_with_zero_stamps_keeps_the_header_stamps():
     syn.feed(target, made.messages())
     found, metrics = joint_errors(target)
     base = target.summary()['arms']['right']['time_base']
-    assert base['base'] == 'stamp' and base['reason'] == ''
+    if ahead < 0.5:
+        assert base['base'] == 'stamp' and base['reason'] == ''
+    else:
+        assert base['base'] == 'receive' and 'command: all header stamps' in base['reason']
     inside = t[t >= 0.5]
     held = np.floor(inside - 0.5) + 0.5
     assert metrics['joint_error_rms.a']['samples'] == len(inside)

@@ -74,14 +74,15 @@ def test_correlation_is_told_of_boundaries_and_states(monkeypatch):
     last = seen[-1]
     window = slice(*last['window'])
     reference, runs = last['valid_reference'][window], last['runs'][window]
-    # From 12.003 to 22.003 s: direct to 15.003 s, then mirror, settled from 16.003 s, open
-    # from 18.003 to 19.003 s, settled from 20.003 s. A velocity needs two cells.
+    # From 12.003 to 22.003 s, of which the filters take 1.5 s to run in: direct to 15.003 s,
+    # then mirror, settled from 16.003 s, open from 18.003 to 19.003 s, settled from 20.003 s.
+    # A velocity needs two cells.
     wanted = np.zeros(1000, dtype=bool)
     wanted[401:600] = wanted[801:1000] = True
-    assert reference.tolist() == wanted.tolist()
-    assert np.flatnonzero(np.diff(runs)).tolist() == [299, 599, 699]
+    assert reference.tolist() == wanted[150:].tolist()
+    assert np.flatnonzero(np.diff(runs)).tolist() == [149, 449, 549]
     response = last['valid_response'][window]
-    assert np.flatnonzero(~response).tolist() == [300, 600, 700]
+    assert np.flatnonzero(~response).tolist() == [150, 450, 550]
 
 
 def test_no_cell_is_compensated_for_two_mappings():
