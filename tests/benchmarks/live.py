@@ -11,6 +11,7 @@ from /proc, counted after the warm-up.
 
 from __future__ import annotations
 
+import json
 import os
 import signal
 import statistics
@@ -87,10 +88,10 @@ def cpu_s(pid: int) -> float:
     return (int(fields[11]) + int(fields[12])) / os.sysconf('SC_CLK_TCK')
 
 
-def measure(command: list[str], environment: dict[str, str]) -> float:
-    """Return the share of a core that a process needs after its warm-up."""
-    process = subprocess.Popen(command, env=environment, stdout=subprocess.DEVNULL,
-                               stderr=subprocess.DEVNULL)
+def measure(command: list[str], environment: dict[str, str]) -> tuple[float, str]:
+    """Return the share of a core that a process needs after its warm-up, and its output."""
+    process = subprocess.Popen(command, env=environment, stdout=subprocess.PIPE,
+                               stderr=subprocess.DEVNULL, text=True)
     try:
         time.sleep(WARM_UP_S)
         before, begin = cpu_s(process.pid), time.monotonic()
@@ -99,10 +100,22 @@ def measure(command: list[str], environment: dict[str, str]) -> float:
     finally:
         process.send_signal(signal.SIGINT)
         try:
-            process.wait(30)
+            output, _ = process.communicate(timeout=60)
         except subprocess.TimeoutExpired:
             process.kill()
-    return share
+            output, _ = process.communicate()
+    return share, output
+
+
+def received(output: str, sessions: Path | None) -> str:
+    """Return how many messages the process got, and how many the node knows it lost."""
+    if sessions is None:
+        return f'{output.rsplit("COUNT", 1)[-1].strip()} messages'
+    newest = max(sessions.iterdir(), key=lambda path: path.stat().st_mtime)
+    summary = json.loads((newest / 'summary.json').read_text())
+    inputs = [one for arm in summary['arms'].values() for one in arm['inputs'].values()]
+    return (f'{sum(one["messages"] for one in inputs)} messages, '
+            f'{sum(one.get("lost") or 0 for one in inputs)} lost')
 
 
 def main() -> None:
@@ -122,10 +135,14 @@ def main() -> None:
                 config = parameters(folder, PREFIXES, record=record)
                 commands[name] = [sys.executable, '-m', 'teleop_eval', 'evaluate', '--ros-args',
                                   '--params-file', str(config)]
+            folders = {'node': Path(scratch) / 'False' / 'sessions',
+                       'node, recording inputs': Path(scratch) / 'True' / 'sessions'}
             for _ in range(ROUNDS):
                 for name, command in commands.items():
-                    shares[name].append(measure(command, environment))
-                    print(f'  {name}: {shares[name][-1]:.3f} of a core', flush=True)
+                    share, output = measure(command, environment)
+                    shares[name].append(share)
+                    print(f'  {name}: {share:.3f} of a core, '
+                          f'{received(output, folders.get(name))}', flush=True)
     finally:
         source.kill()
         source.wait()
