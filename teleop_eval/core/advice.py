@@ -1,0 +1,137 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The error budget in plain words: which term is largest, and what to mend first."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+from teleop_eval.core.budget import LEAST_DISCREPANCY, TERMS
+from teleop_eval.core.metric import Metric
+
+# How a term is called in a sentence.
+WORDS = {
+    'mapping': 'mapping',
+    'processing_delay': 'processing delay',
+    'command': 'command',
+    'response_delay': 'response delay',
+    'residual': 'residual',
+}
+_UNITS = {'arm lengths': 'arm lengths', 'arm lengths/s': 'arm lengths/s'}
+# A static part above this share of the power is called an offset.
+_OFFSET_SHARE = 0.5
+
+
+def largest_term(metrics: Mapping[str, Metric], suffix: str = '_norm') -> str:
+    """Return the name of the term of largest RMS, '' if none has a value."""
+    known = {name: metrics[key].number for name in TERMS
+             if (key := f'budget_{name}_rms{suffix}') in metrics
+             and metrics[key].value is not None}
+    return max(known, key=lambda name: known[name], default='')
+
+
+def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float | None],
+                cancels: str = '', suffix: str = '_norm') -> str:
+    """
+    Return the largest term in plain words, '' if there is none.
+
+    Parameters
+    ----------
+    metrics
+        With the budget's RMS by name, of a window or a run.
+    delays_s
+        Seconds by 'processing_delay' and 'response_delay', None where not known.
+    cancels
+        Term that the largest one partly cancels, '' if its share is positive.
+
+    """
+    name = largest_term(metrics, suffix)
+    if not name:
+        return ''
+    metric = metrics[f'budget_{name}_rms{suffix}']
+    text = f'{WORDS[name]}: {metric.number:.3f} {_UNITS.get(metric.unit, metric.unit)}'
+    delay = delays_s.get(name)
+    if delay is not None:
+        behind = 'the command' if name == 'response_delay' else 'the ideal command'
+        text += f', {delay * 1e3:.0f} ms behind {behind}'
+    if cancels:
+        text += f'; partly cancels {WORDS[cancels]}'
+    return text
+
+
+def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm') -> str:
+    """
+    Return one sentence on a mapping: what to fix first, and how sure that is.
+
+    Parameters
+    ----------
+    label
+        Of the mapping.
+    metrics
+        Of the whole run under that mapping.
+
+    """
+    total = metrics.get(f'discrepancy_rms{suffix}')
+    name = largest_term(metrics, suffix)
+    if not name:
+        reason = next((metric.reason for key, metric in metrics.items()
+                       if key.startswith('budget_residual_rms')), 'nothing was measured')
+        return f'{label}: cannot say what to fix first: {reason}.'
+    if total is not None and total.value is not None and total.value < LEAST_DISCREPANCY:
+        return (f'{label}: nothing to fix first: hand and tool differ by {total.value:.4f} '
+                f'{total.unit} RMS only.')
+    metric = metrics[f'budget_{name}_rms{suffix}']
+    share = metrics.get(f'budget_{name}_share')
+    part = ''
+    if share is not None and share.value is not None:
+        part = f', {share.value:.0%} of the discrepancy'
+        if share.value < 0.0:
+            other = WORDS.get(str(share.details.get('partly_cancels', '')), 'other terms')
+            part = f', which partly cancels {other}'
+    return (f'{label}: fix first {_what(name, metrics, suffix)} ({metric.number:.3f} '
+            f'{metric.unit} RMS{part}); {_how_sure(name, metrics, suffix)}.')
+
+
+def _what(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
+    """Return the term as something that can be mended."""
+    if name == 'mapping':
+        whole = metrics[f'budget_mapping_rms{suffix}'].number
+        static = metrics[f'budget_mapping_static{suffix}'].number
+        if suffix != '_norm':
+            return 'dead band and cap of the mapping'
+        return ("the mapping's centre or offset" if static ** 2 > _OFFSET_SHARE * whole ** 2
+                else "the mapping's scale, axes or joint assignment")
+    if name == 'processing_delay':
+        return f'the time the mapping takes{_milliseconds(metrics, "latency_command_s")}'
+    if name == 'command':
+        return 'what the stack does to the command beside the mapping (filter, limits, offsets)'
+    if name == 'response_delay':
+        has_command = metrics['latency_response_s'].value is not None
+        return ('the time the robot takes to follow'
+                + _milliseconds(metrics, 'latency_response_s' if has_command else 'latency_s'))
+    return "the robot's following beside its delay (servo lag, limits, noise)"
+
+
+def _milliseconds(metrics: Mapping[str, Metric], name: str) -> str:
+    metric = metrics.get(name)
+    return '' if metric is None or metric.value is None else f', {metric.value * 1e3:.0f} ms'
+
+
+def _how_sure(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
+    """Return how sure it is that this term is the largest."""
+    first = metrics[f'budget_{name}_rms{suffix}']
+    others = {other: metrics[key] for other in TERMS
+              if other != name and (key := f'budget_{other}_rms{suffix}') in metrics
+              and metrics[key].value is not None}
+    if not others:
+        return 'no other term could be formed beside it'
+    second = max(others, key=lambda other: others[other].number)
+    if first.ci95 is None or others[second].ci95 is None:
+        return (f'not sure: {first.n} windows are too few for an interval, and {WORDS[second]} '
+                f'has {others[second].number:.3f}')
+    low, high = first.ci95
+    if low > others[second].ci95[1]:
+        return (f'sure: its 95 % interval {low:.3f} to {high:.3f} lies above that of the next, '
+                f'{WORDS[second]}')
+    return (f'not sure: its 95 % interval {low:.3f} to {high:.3f} overlaps that of '
+            f'{WORDS[second]} ({others[second].ci95[0]:.3f} to {others[second].ci95[1]:.3f})')
