@@ -21,7 +21,9 @@ class CellStates:
     `engaged`: engaged during the whole cell; `usable`: engaged, settled and under a known
     mapping; `run`: number of the stretch between two boundaries; `label`: index into the
     arm's mapping labels, -1 for none. `engagements`: labels under which one began; engaged
-    at the very start counts as one.
+    at the very start counts as one. `stretch`: number of the engagement or mapping a cell lies
+    in, which a gap of the data does not change, -1 outside of any; `began_ns`: when each of
+    them began, None if it was so from the start.
     """
 
     engaged: np.ndarray
@@ -29,6 +31,8 @@ class CellStates:
     run: np.ndarray
     label: np.ndarray
     engagements: tuple[int, ...]
+    stretch: np.ndarray
+    began_ns: dict[int, int | None]
 
 
 class Boundaries:
@@ -85,8 +89,28 @@ class Boundaries:
         known = label[label >= 0]
         if begins_engaged:
             begun.insert(0, int(label[0]))
+        stretch = np.where(engaged & (label >= 0), self._stretch_at(starts), -1)
         return CellStates(engaged, usable, run, label,
-                          self._labelled(begun, int(known[0]) if len(known) else -1))
+                          self._labelled(begun, int(known[0]) if len(known) else -1),
+                          stretch, self._began(stretch, starts))
+
+    def _stretch_at(self, times_ns: np.ndarray) -> np.ndarray:
+        total = np.zeros(len(times_ns), dtype=np.int64)
+        for state in (self.engaged, self.mapping):
+            if state is not None:
+                total += state.changed_before(times_ns)
+        return total
+
+    def _began(self, stretch: np.ndarray, starts: np.ndarray) -> dict[int, int | None]:
+        """Return when each stretch of the cells (m,) began."""
+        found: dict[int, int | None] = {}
+        states = [state for state in (self.engaged, self.mapping) if state is not None]
+        for number in np.unique(stretch[stretch >= 0]):
+            inside = int(starts[int(np.argmax(stretch == number))])
+            times = [time for state in states
+                     if (time := state.last_change(inside)) is not None]
+            found[int(number)] = max(times, default=None)
+        return found
 
     def skip(self, start_ns: int, end_ns: int, *, settling_ns: int) -> tuple[int, ...]:
         """

@@ -300,6 +300,7 @@ class HeldState:
     offset_ns: int = 0
     _times: list[int] = field(default_factory=list)
     _values: list[object] = field(default_factory=list)
+    _dropped: int = 0
 
     def add(self, receive_ns: int, value: object, watermark_ns: int | None) -> None:
         """Take a new value; a late one holds from the watermark on."""
@@ -328,6 +329,15 @@ class HeldState:
         """Return how many kept values (n,) began at or before each time."""
         return np.searchsorted(np.array(self._times, dtype=np.int64), times_ns, side='right')
 
+    def changed_before(self, times_ns: np.ndarray) -> np.ndarray:
+        """Return how often the value changed (n,) at or before each time since the start."""
+        return self._dropped + self.place(times_ns)
+
+    def last_change(self, time_ns: int) -> int | None:
+        """Return the last time at or before a time at which the value changed."""
+        place = bisect.bisect_right(self._times, time_ns)
+        return self._times[place - 1] if place else None
+
     def changes(self, start_ns: int, end_ns: int) -> list[int]:
         """Return the times in [start, end) at which the value changed."""
         return [time_ns for time_ns in self._times if start_ns <= time_ns < end_ns]
@@ -341,5 +351,6 @@ class HeldState:
         """Let go of values that no later window needs."""
         # The value before the boundary stays: a change on it is judged against that.
         drop = max(bisect.bisect_left(self._times, end_ns) - 1, 0)
+        self._dropped += drop
         del self._times[:drop]
         del self._values[:drop]

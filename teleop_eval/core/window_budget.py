@@ -1,0 +1,119 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The error budget of one window: which tracks, at which delays, on which cells."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from teleop_eval.core.budget import Positions, Terms, split, window_metrics
+from teleop_eval.core.delays import Observed
+from teleop_eval.core.history import History, Track
+from teleop_eval.core.metric import Metric
+from teleop_eval.core.tracking import ARM_LENGTHS
+from teleop_eval.core.window import Span
+from teleop_eval.core.window_latency import WindowLatency
+
+
+@dataclass(frozen=True)
+class Space:
+    """Where a budget lives: names of its tracks, end of the metrics' names, unit."""
+
+    operator: str
+    ideal: str
+    command: str
+    robot: str
+    suffix: str
+    unit: str
+
+
+POSITION = Space('u_o', 'u_i', 'u_c', 'u_r', '_norm', ARM_LENGTHS)
+VELOCITY = Space('w_o', 'w_i', 'w_c', 'w_r', '_norm_s', f'{ARM_LENGTHS}/s')
+# Seconds by term, for the sentence on it.
+Delays = dict[str, 'float | None']
+
+
+@dataclass(frozen=True)
+class WindowBudget:
+    """Terms of one window, their RMS as metrics, the delays they were formed at."""
+
+    terms: Terms
+    metrics: dict[str, Metric]
+    delays_s: Delays = field(default_factory=dict)
+
+
+def window_budget(history: History, latency: WindowLatency, span: Span, label: int,
+                  here: np.ndarray, space: Space, period_s: float) -> WindowBudget | None:
+    """
+    Split one window's discrepancy.
+
+    Parameters
+    ----------
+    history
+        Tracks up to the window's end.
+    latency
+        Knows the delays in use.
+    span, label, here
+        The window, the mapping's index, its usable cells (count,).
+    space
+        Positions or velocities.
+    period_s
+        The grid's period.
+
+    Returns
+    -------
+    None if nothing drives the robot here; without an observed delay the RMS are missing, with
+    the reason.
+
+    """
+    robot = history.last(space.robot, span.count)
+    ideal, command = (history.last(name, span.count) for name in (space.ideal, space.command))
+    driver = ideal if command is None else command
+    if robot is None or driver is None:
+        return None
+    stages = {'response_delay': 'latency_s' if command is None else 'latency_response_s'}
+    if command is not None and ideal is not None:
+        stages['processing_delay'] = 'latency_command_s'
+    seen: dict[str, Observed] = {}
+    for term, name in stages.items():
+        known = latency.in_use(span.end_ns, label, (name,))
+        if known is None:
+            why = latency.why_none(label, space.unit, (name,))
+            return WindowBudget(Terms({}, None), {
+                f'budget_{one}_rms{space.suffix}': why for one in stages})
+        seen[term] = known
+    kept = here.copy()
+
+    def late(name: str, term: str) -> Track | None:
+        delay = seen.get(term)
+        if delay is None:
+            return None
+        shift = delay.delay_s / period_s
+        return _same_run(history, history.delayed(name, span.count, shift), span.count, shift)
+
+    operator = history.last(space.operator, span.count)
+    ideal_late = None if command is None else late(space.ideal, 'processing_delay')
+    driver_late = late(space.ideal if command is None else space.command, 'response_delay')
+    for track in (operator, ideal, ideal_late, command, driver_late, robot):
+        if track is not None:
+            kept &= track.valid
+
+    def at(track: Track | None) -> np.ndarray | None:
+        return None if track is None else track.values[kept]
+
+    terms = split(Positions(at(operator), at(ideal), at(ideal_late), at(command),
+                            at(driver_late), robot.values[kept]))
+    return WindowBudget(
+        terms, window_metrics(terms, suffix=space.suffix, unit=space.unit),
+        {term: one.delay_s for term, one in seen.items()})
+
+
+def _same_run(history: History, track: Track | None, count: int, shift: float) -> Track | None:
+    """Return a delayed track, valid only where no boundary lies between then and now."""
+    if track is None:
+        return None
+    now = np.arange(len(history) - count, len(history))
+    then = np.maximum(now - int(np.ceil(shift)), 0)
+    return Track(track.values, track.valid & (history.run[then] == history.run[now]))
