@@ -18,7 +18,6 @@ import numpy as np
 from teleop_eval.core import arm_setup
 from teleop_eval.core.arm_setup import ArmSetup
 from teleop_eval.core.boundaries import Boundaries
-from teleop_eval.core.closing import deadline_ns, first_from, may_close, moved_clock
 from teleop_eval.core.errors import TeleopEvalError
 from teleop_eval.core.freezing import can_freeze, freeze
 from teleop_eval.core.geometry import RobotGeometry, operator_geometry, robot_geometry
@@ -26,17 +25,16 @@ from teleop_eval.core.intake import RUN_ON, Intake
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.results import WindowResult
 from teleop_eval.core.samples import BoolSample, Sample, TextSample, TrajectorySample
+from teleop_eval.core.segment import NEVER_NS, Segment, SegmentInputs
 from teleop_eval.core.sentences import Sentences
 from teleop_eval.core.settings import ArmSettings, Settings
 from teleop_eval.core.streams import HeldState, SampledStream
 from teleop_eval.core.timebase import TimeBase
 from teleop_eval.core.tracking import JointErrors
 from teleop_eval.core.transport_age import TransportAge
-from teleop_eval.core.window import Span
 
 # An arm whose description does not come is evaluated without it after this time.
 DESCRIPTION_WAIT_NS = 30_000_000_000
-NEVER_NS = 2 ** 63 - 1
 
 
 class ArmEvaluator:
@@ -88,12 +86,9 @@ class ArmEvaluator:
         self.next_check_ns = NEVER_NS
         self._waiting: list[tuple[str, int, Sample]] = []
         self._ready = False
-        self._lateness_ns = round(settings.time.lateness_s * 1e9)
         self._warm_from_ns: int | None = None
         self._stepped_at_ns = -NEVER_NS
-        self._origin_ns = 0
-        self._next_cell = 0
-        self._close_at_ns = 0
+        self._segment: Segment | None = None
         if urdf is not None:
             self._describe(urdf)
         if urdf is not None or not self.arm.robot.description_topic:
@@ -124,7 +119,8 @@ class ArmEvaluator:
         value = sample.value if isinstance(sample, BoolSample) else sample.text
         if sentence := arm_setup.unknown_label(self.name, self.arm, value):
             self.problems.say(sentence)
-        state.add(receive_ns, value, None if self.time_base is None else self._closed_until_ns)
+        segment = self._segment
+        state.add(receive_ns, value, None if segment is None else segment.closed_until_ns)
 
     def _add_sampled(self, intake: Intake, receive_ns: int, sample: Sample) -> None:
         stream = intake.stream
@@ -144,13 +140,14 @@ class ArmEvaluator:
                            'chosen as time base; it is not used')
             return
         stream.add(rows)
-        if self.time_base is None:
+        if self._segment is None:
             if self._warm_from_ns is None:
                 self._warm_up_from(receive_ns)
         elif stream.closes_windows:
             if self.next_check_ns == NEVER_NS:
-                self._plan_next()
-            if stream.last_ns is not None and stream.last_ns >= self._close_at_ns:
+                self._segment.plan_next()
+                self.next_check_ns = self._segment.next_check_ns
+            if stream.last_ns is not None and stream.last_ns >= self._segment.end_ns:
                 self._close_ready(receive_ns)
 
     def _step_back(self, intake: Intake, receive_ns: int, back_ns: int) -> None:
@@ -248,13 +245,15 @@ class ArmEvaluator:
         self.segments += 1
         if self.period_ns is None:
             self.period_ns = round(1e9 / frozen.rate_hz)
-        self._origin_ns, self._next_cell = frozen.origin_ns, 0
         for state in self.states.values():
             state.shift(self.time_base.common_offset_ns)
         if self.measurement is None:
             self.measurement = ArmMeasurement(self)
         self.measurement.restart()
-        self._plan_next()
+        self._segment = Segment(
+            frozen.origin_ns, self.period_ns, self.settings.time,
+            SegmentInputs(self.frozen_streams, self.states.values(), self.ages.values()),
+            self.measurement)
         self._close_ready(receive_ns)
 
     def new_segment(self, reason: str, receive_ns: int) -> None:
@@ -271,7 +270,7 @@ class ArmEvaluator:
     def _new_segment(self, reason: str, *, keep: bool) -> None:
         """Warm up anew; with `keep`, samples no window has used come along."""
         self.notes.say(f'{self.name}: a new segment began: {reason}.')
-        self.time_base = None
+        self.time_base = self._segment = None
         self.boundaries.restart()
         for state in self.states.values():
             state.shift(0)
@@ -290,90 +289,20 @@ class ArmEvaluator:
                 firsts.append(kept[0][0][0])
         self._warm_up_from(min(firsts, default=None))
 
-    @property
-    def _window_cells(self) -> int:
-        return max(1, round(self.settings.time.window_s * 1e9 / (self.period_ns or 1)))
-
-    @property
-    def _closed_until_ns(self) -> int:
-        return self._origin_ns + self._next_cell * (self.period_ns or 0)
-
-    def _plan_next(self) -> None:
-        """Note when the next window ends, and from when it may close without a stream."""
-        cells = self._next_cell + self._window_cells
-        self._close_at_ns = self._origin_ns + cells * (self.period_ns or 0)
-        self.next_check_ns = min(
-            deadline_ns(stream, self._close_at_ns, self._lateness_ns)
-            for stream in self._closing())
-
-    def _closing(self) -> list[SampledStream]:
-        return [stream for stream in self.frozen_streams if stream.closes_windows]
-
     def _close_ready(self, receive_ns: int) -> None:
-        """Close every window whose samples are all there or no longer waited for."""
-        while self.time_base is not None and may_close(
-                self._closing(), self._close_at_ns, receive_ns=receive_ns,
-                lateness_ns=self._lateness_ns):
-            silent = self._silent_windows()
-            if silent is None:
-                # Nothing to evaluate: look again when a sample comes.
-                self.next_check_ns = NEVER_NS
-                return
-            if silent:
-                self._skip(silent)
-                continue
-            moved = moved_clock(self._closing(), self._closed_until_ns,
-                                self.settings.time.clock_tolerance_s)
-            self._close(self._window_cells, receive_ns)
-            if moved:
-                self.problems.say(f'{self.name}: {moved}, so a new segment began; {RUN_ON}.')
-                self._new_segment(moved, keep=True)
-
-    def _silent_windows(self) -> int | None:
-        """Return the number of windows before the next sample, None if there is no sample."""
-        first_ns = first_from(self._closing(), self._closed_until_ns)
-        length_ns = self._close_at_ns - self._closed_until_ns
-        return None if first_ns is None else (first_ns - self._closed_until_ns) // length_ns
-
-    def _skip(self, windows: int) -> None:
-        """
-        Leave out windows without any sample.
-
-        A clock that steps ahead by hours must not cost an empty window every two seconds.
-        """
-        assert self.measurement is not None  # made at the freeze
-        start_ns = self._closed_until_ns
-        self._next_cell += windows * self._window_cells
-        self.measurement.skip(start_ns, self._closed_until_ns)
-        self._plan_next()
-
-    def _close(self, cells: int, receive_ns: int) -> None:
-        assert self.measurement is not None and self.period_ns is not None
-        span = Span(self._origin_ns, self.period_ns, self._next_cell, cells)
-        result = self.measurement.window(span, receive_ns)
-        if result is not None:
-            self.results.append(result)
-        self._next_cell += cells
-        for stream in self.frozen_streams:
-            stream.close(span.end_ns)
-        for state in self.states.values():
-            state.close(span.end_ns)
-        for age in self.ages.values():
-            age.close_window(receive_ns)
-        self._plan_next()
+        """Close the windows that may close; where a clock moved away, begin a new segment."""
+        assert self._segment is not None  # made at the freeze
+        moved = self._segment.close_ready(receive_ns, self.results)
+        self.next_check_ns = self._segment.next_check_ns
+        if moved:
+            self.problems.say(f'{self.name}: {moved}, so a new segment began; {RUN_ON}.')
+            self._new_segment(moved, keep=True)
 
     def _flush(self, receive_ns: int) -> None:
         """Close what is there, the last window as far as it goes."""
-        while self.time_base is not None and (silent := self._silent_windows()) is not None:
-            if silent:
-                self._skip(silent)
-                continue
-            assert self.period_ns is not None  # set at the freeze
-            last_ns = max(stream.last_ns or 0 for stream in self._closing())
-            # The last cell may end beyond the last sample: the grid masks it, but the joint
-            # error, which is not gridded, still sees that sample.
-            cells = (last_ns - self._closed_until_ns) // self.period_ns + 1
-            self._close(min(int(cells), self._window_cells), receive_ns)
+        if self._segment is not None:
+            self._segment.flush(receive_ns, self.results)
+            self.next_check_ns = self._segment.next_check_ns
 
     def finish(self, receive_ns: int, *, explained: Collection[str] = ()) -> None:
         """Close everything; the silence of the `explained` roles needs no sentence."""
