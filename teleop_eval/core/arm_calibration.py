@@ -154,8 +154,8 @@ def _why_not(found: ArmCalibration) -> str:
                        f'{MIN_SPREAD_DEG:.0f} deg are needed: sweep further')
     if not found.depth > MIN_DEPTH:
         reasons.append(
-            f'the sweeps lie nearly on one circle (depth {found.depth:.3f}, more than {MIN_DEPTH} is '
-            'needed), which has no definite centre: sweep up and down as well as sideways')
+            f'the sweeps lie nearly on one circle (depth {found.depth:.3f}, more than {MIN_DEPTH} '
+            'is needed), which has no definite centre: sweep up and down as well as sideways')
     if found.outliers > MAX_OUTLIERS * found.samples:
         reasons.append(f'{found.outliers} of {found.samples} positions lie far off the sphere of '
                        f'the others, but at most {MAX_OUTLIERS:.0%} may')
