@@ -13,13 +13,15 @@ from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.intake import Intake
 from teleop_eval.core.joint_match import JointMatcher
 from teleop_eval.core.mappings import MappingModel, make_mapping
+from teleop_eval.core.mappings.guarded import checked_operator_joints
+from teleop_eval.core.mappings.registry import is_modelled
+from teleop_eval.core.mappings.unmodelled import UNMODELLED
 from teleop_eval.core.sentences import listed, nearest, shown
 from teleop_eval.core.settings import ArmSettings
 from teleop_eval.core.streams import HeldState, SampledStream
 
 # Without a description nobody knows which joints turn and which slide.
 UNKNOWN_UNIT = 'rad or m'
-UNMODELLED = 'unmodelled'
 _WITHOUT = {'engaged': 'no time counts as engaged',
             'active_mapping': 'no time counts for any mapping'}
 
@@ -49,6 +51,8 @@ def make_setup(name: str, arm: ArmSettings, operator: OperatorGeometry,
     setup = ArmSetup()
     if robot is not None:
         for label, mapping in arm.mappings.items():
+            if not is_modelled(mapping.kind):
+                continue
             try:
                 setup.models[label] = make_mapping(label, mapping, operator, robot)
             except TeleopEvalError as error:
@@ -63,8 +67,8 @@ def make_setup(name: str, arm: ArmSettings, operator: OperatorGeometry,
     setup.joint_units = tuple(
         UNKNOWN_UNIT if robot is None else robot.unit_of(joint) for joint in setup.joint_names)
     setup.operator_joint_names = tuple(sorted({
-        source.source for mapping in arm.mappings.values()
-        if mapping.kind == 'joint_space' for source in mapping.joints.values()}))
+        joint for mapping in arm.mappings.values()
+        for joint in checked_operator_joints(mapping)}))
     setup.turning = frozenset() if robot is None else frozenset(
         joint for joint, kind in zip(robot.chain.joint_names, robot.chain.kinds, strict=True)
         if kind == CONTINUOUS)

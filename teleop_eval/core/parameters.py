@@ -13,12 +13,12 @@ import dataclasses
 import difflib
 import math
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 from teleop_eval.core.errors import ConfigError
-from teleop_eval.core.sentences import cut, shown
+from teleop_eval.core.sentences import cut, listed, nearest, shown
 
 NAME_PATTERN = re.compile(r'[a-z][a-z0-9_]*')
 
@@ -52,12 +52,15 @@ class NamedMap:
     """
     A map from names that the user chooses to settings of one class.
 
-    Joint names are the robot's; all other names match [a-z][a-z0-9_]*.
+    Joint names are the robot's; all other names match [a-z][a-z0-9_]*. With `kinds` the class
+    of an entry is chosen by its parameter `kind`; a kind whose class is None cannot be loaded,
+    and its entry is an `of` that knows nothing but the kind.
     """
 
     of: type
     text: str
     free_names: bool = False
+    kinds: Callable[[], Mapping[str, type | None]] | None = None
 
 
 def parameter(kind: str, default: Any, text: str, **limits: Any) -> Any:
@@ -73,9 +76,10 @@ def group(of: type) -> Any:
     return dataclasses.field(default_factory=of, metadata={'group': of})
 
 
-def named_map(of: type, text: str, *, free_names: bool = False) -> Any:
+def named_map(of: type, text: str, *, free_names: bool = False,
+              kinds: Callable[[], Mapping[str, type | None]] | None = None) -> Any:
     """Return a dataclass field that is a map from names to groups."""
-    described = NamedMap(of, text, free_names)
+    described = NamedMap(of, text, free_names, kinds)
     return dataclasses.field(default_factory=dict, metadata={'map': described})
 
 
@@ -126,10 +130,52 @@ def _build(cls: type, flat: Mapping[str, Any], prefix: str, used: set[str], wher
         else:
             described: NamedMap = field.metadata['map']
             values[field.name] = {
-                name: _build(described.of, flat, f'{key}.{name}.', used, where)
+                name: _build_entry(described, flat, f'{key}.{name}.', used, where)
                 for name in _names(flat, key + '.', described, where)
             }
     return cls(**values)
+
+
+def _build_entry(described: NamedMap, flat: Mapping[str, Any], prefix: str, used: set[str],
+                 where: str) -> Any:
+    """Build one entry of a named map, of the class that its kind asks for."""
+    if described.kinds is None:
+        return _build(described.of, flat, prefix, used, where)
+    kinds, key, entry = described.kinds(), prefix + 'kind', prefix.removesuffix('.')
+    if flat.get(key, '') == '':
+        raise ConfigError(f'{where}: {key} is missing; give one of {listed(kinds)}.')
+    kind = convert(Parameter(STRING, '', ''), flat[key], key, where)
+    if kind not in kinds:
+        near = nearest(kind, kinds)
+        hint = f'did you mean {near!r}?' if near else 'correct it.'
+        raise ConfigError(f'{where}: {key} is {shown(kind)}, but the known kinds are '
+                          f'{listed(kinds)}; {hint}')
+    cls = kinds[kind]
+    if cls is None:
+        used.update(name for name in flat if name.startswith(prefix))
+        return described.of(kind=kind)
+    own = {field.name for field in dataclasses.fields(cls)}
+    for name in flat:
+        word = name[len(prefix):].partition('.')[0] if name.startswith(prefix) else ''
+        if word and word not in own and (others := _having(kinds, word)):
+            raise ConfigError(
+                f'{where}: {prefix}{word} is a parameter of the kind {others}, but {entry} is of '
+                f'the kind {kind}; remove it or change the kind.')
+    try:
+        return _build(cls, flat, prefix, used, where)
+    except ConfigError:
+        raise
+    except Exception as error:  # a class of another package may check its values itself
+        text = cut(' '.join(str(error).split()))
+        raise ConfigError(f'{where}: {entry} cannot be used as {kind}, since its settings refuse '
+                          f'it ({type(error).__name__}: {text}); correct its values.') from error
+
+
+def _having(kinds: Mapping[str, type | None], word: str) -> str:
+    """Return the kinds that have a parameter, '' if none has."""
+    return ' or '.join(
+        kind for kind, cls in kinds.items() if cls is not None
+        and any(field.name == word for field in dataclasses.fields(cls)))
 
 
 def _describe(cls: type, flat: Mapping[str, Any], prefix: str) -> Iterator[tuple[str, Parameter]]:
@@ -142,7 +188,16 @@ def _describe(cls: type, flat: Mapping[str, Any], prefix: str) -> Iterator[tuple
         else:
             described: NamedMap = field.metadata['map']
             for name in _names(flat, key + '.', described, ''):
-                yield from _describe(described.of, flat, f'{key}.{name}.')
+                yield from _describe(_class_in_use(described, flat, f'{key}.{name}.kind'), flat,
+                                     f'{key}.{name}.')
+
+
+def _class_in_use(described: NamedMap, flat: Mapping[str, Any], key: str) -> type:
+    """Return the class of an entry, the common one where its kind is not known."""
+    kind = flat.get(key)
+    found = None if described.kinds is None or not isinstance(kind, str) else (
+        described.kinds().get(kind))
+    return described.of if found is None else found
 
 
 def _names(flat: Mapping[str, Any], prefix: str, described: NamedMap, where: str) -> list[str]:

@@ -11,6 +11,9 @@ from dataclasses import dataclass
 from typing import Any
 
 from teleop_eval.core.errors import ConfigError
+from teleop_eval.core.mappings.guarded import checked_fault
+from teleop_eval.core.mappings.registry import kind_settings
+from teleop_eval.core.mappings.settings import MappingSettings, quaternion_fault
 from teleop_eval.core.parameters import (
     BOOL,
     DOUBLE,
@@ -194,43 +197,6 @@ class ActiveMappingSettings:
 
 
 @dataclass(frozen=True)
-class SourceJointSettings:
-    """How one robot joint follows one operator joint."""
-
-    source: str = parameter(STRING, '', 'Operator joint that drives this robot joint.')
-    sign: float = parameter(DOUBLE, 1.0, 'Direction, 1 or -1.', low=-1.0, high=1.0)
-    scale: float = parameter(DOUBLE, 1.0, 'Robot angle per operator angle.')
-    offset: float = parameter(DOUBLE, 0.0, 'Robot angle at operator angle 0.', unit='rad')
-
-
-@dataclass(frozen=True)
-class MappingSettings:
-    """
-    One mapping the operator can be given.
-
-    Which of the settings a kind uses is that kind's affair; see core/mappings.
-    """
-
-    kind: str = parameter(STRING, '', 'Kind of mapping: joint_space, task_space.')
-    joints: dict[str, SourceJointSettings] = named_map(
-        SourceJointSettings, 'joint_space: by robot joint.', free_names=True)
-    scaling: str = parameter(
-        STRING, 'normalized', 'task_space: "normalized" scales by the arm lengths, "metric" '
-        'by scale alone.', choices=('normalized', 'metric'))
-    scale: float = parameter(
-        DOUBLE, 1.0, 'task_space: factor on the motion, m/m after the scaling above.',
-        low=1e-3, high=1e3)
-    operator_center_m: tuple[float, ...] | None = parameter(
-        DOUBLES, None, 'task_space: operator point that maps to robot_center_m; not given: '
-        'the shoulder.', unit='m', size=3)
-    robot_center_m: tuple[float, ...] | None = parameter(
-        DOUBLES, None, 'task_space: robot point; not given: the shoulder.', unit='m', size=3)
-    hand_to_tool_xyzw: tuple[float, ...] | None = parameter(
-        DOUBLES, None, 'task_space: rotation from hand to tool, quaternion x, y, z, w; not '
-        'given: estimated from the first engaged 10 s.', size=4)
-
-
-@dataclass(frozen=True)
 class ArmSettings:
     """One pair of operator arm and robot arm."""
 
@@ -239,7 +205,8 @@ class ArmSettings:
     command: CommandSettings = group(CommandSettings)
     engaged: TopicSettings = group(TopicSettings)
     active_mapping: ActiveMappingSettings = group(ActiveMappingSettings)
-    mappings: dict[str, MappingSettings] = named_map(MappingSettings, 'Mappings by label.')
+    mappings: dict[str, MappingSettings] = named_map(
+        MappingSettings, 'Mappings by label.', kinds=kind_settings)
 
 
 @dataclass(frozen=True)
@@ -317,27 +284,15 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
         raise ConfigError(f'{where}: {key}.active_mapping.fixed is {shown(fixed)}, which is not '
                           f'among the mappings {listed(arm.mappings)}; {hint}')
     for label, mapping in arm.mappings.items():
-        if not mapping.kind:
-            raise ConfigError(f'{where}: {key}.mappings.{label}.kind is missing; give '
-                              'joint_space or task_space.')
-        for joint, source in mapping.joints.items():
-            if not source.source:
-                raise ConfigError(f'{where}: {key}.mappings.{label}.joints.{joint}.source is '
-                                  'missing; name the operator joint.')
-            if abs(source.sign) != 1.0:
-                raise ConfigError(f'{where}: {key}.mappings.{label}.joints.{joint}.sign is '
-                                  f'{source.sign:g}, but must be 1 or -1; use scale for '
-                                  'factors.')
+        if fault := checked_fault(mapping, f'{key}.mappings.{label}'):
+            raise ConfigError(f'{where}: {fault}')
     for field, topic in _topics(key, arm):
         if topic and not _TOPIC.fullmatch(topic):
             raise ConfigError(f'{where}: {field} is {shown(topic)}, which is no topic name: '
                               'between slashes it may hold letters, digits and _, and must not '
                               'begin with a digit.')
-    for field, quaternion in _quaternions(key, arm):
-        norm = sum(part * part for part in quaternion) ** 0.5
-        if abs(norm - 1.0) > 1e-3:
-            raise ConfigError(f'{where}: {field} has norm {norm:.4g}, but a rotation has 1 '
-                              '(order x, y, z, w).')
+    if fault := quaternion_fault(f'{key}.operator.axes_xyzw', arm.operator.axes_xyzw):
+        raise ConfigError(f'{where}: {fault}')
 
 
 def _topics(key: str, arm: ArmSettings) -> list[tuple[str, str | None]]:
@@ -348,12 +303,3 @@ def _topics(key: str, arm: ArmSettings) -> list[tuple[str, str | None]]:
             (f'{key}.command.topic', arm.command.topic),
             (f'{key}.engaged.topic', arm.engaged.topic),
             (f'{key}.active_mapping.topic', arm.active_mapping.topic)]
-
-
-def _quaternions(key: str, arm: ArmSettings) -> list[tuple[str, tuple[float, ...]]]:
-    found = [(f'{key}.operator.axes_xyzw', arm.operator.axes_xyzw)]
-    for label, mapping in arm.mappings.items():
-        if mapping.hand_to_tool_xyzw is not None:
-            found.append((f'{key}.mappings.{label}.hand_to_tool_xyzw',
-                          mapping.hand_to_tool_xyzw))
-    return found

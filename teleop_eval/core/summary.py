@@ -99,7 +99,7 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
         found = {name: missing(NOT_CONFIGURED, metric.unit, no_ideal)
                  if name.startswith(('tracking_error', 'orientation_error')) else metric
                  for name, metric in found.items()}
-    elif model is not None and 'normalized' in arm.arm.mappings[label].scaling:
+    elif model is not None and model.scales_by_arm_lengths:
         uncertainty = arm.operator.scale_uncertainty
         if uncertainty is not None and model.needs == 'hand':
             for name, metric in found.items():

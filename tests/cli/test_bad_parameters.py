@@ -112,6 +112,28 @@ TRAPS = {
                      ('arms.right.robot.base_link and tip_link are needed',)),
     'thresholds': (with_line('thresholds: {latency_warn_s: 0.5}'),
                    ('latency_error_s (0.3 s) is below', 'latency_warn_s (0.5 s)', 'change')),
+    'mapping kind': (put('kind: joint_space', 'kind: joint_spce'),
+                     ("arms.right.mappings.direct.kind is 'joint_spce'",
+                      'the known kinds are joint_space, task_space', "mean 'joint_space'?")),
+    'no mapping kind': (put('            kind: joint_space\n', ''),
+                        ('arms.right.mappings.direct.kind is missing', 'joint_space, task_space')),
+    'mapping kind no text': (put('kind: joint_space', 'kind: 3'),
+                             ('mappings.direct.kind must be a text', 'the number 3')),
+    "another kind's parameter": (
+        put('            kind: joint_space\n', '            kind: joint_space\n'
+            '            operator_center_m: [0.0, 0.0, 0.0]\n'),
+        ('arms.right.mappings.direct.operator_center_m is a parameter of the kind task_space',
+         'arms.right.mappings.direct is of the kind joint_space', 'remove it or change the kind')),
+    'misspelt parameter of a kind': (
+        put('scaling: metric', 'scalng: metric'),
+        ('there is no parameter arms.right.mappings.reach.scalng',
+         'did you mean arms.right.mappings.reach.scaling?')),
+    'scale given twice': (
+        put('scale: 1.0\n', 'scale: 2.0\n            scale_xyz: [1.0, 2.0, 3.0]\n'),
+        ('arms.right.mappings.reach has both scale and scale_xyz', 'keep one')),
+    'no tool rotation': (
+        put('scaling: metric', 'hand_to_tool_xyzw: [1.0, 0.0, 0.0, 1.0]'),
+        ('arms.right.mappings.reach.hand_to_tool_xyzw has norm 1.414',)),
     'hostile name': (put('arm_length_m: 0.7', f'"{HOSTILE}": 0.7'),
                      ('there is no parameter arms.right.operator', '...')),
     'hostile value': (put('arm_length_m: 0.7', f'arm_length_m: "{HOSTILE}{"x" * 10_000}"'),

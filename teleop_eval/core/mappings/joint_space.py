@@ -4,17 +4,33 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from teleop_eval.core import rotations
 from teleop_eval.core.errors import ConfigError
-from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
-from teleop_eval.core.mappings.base import Ideal, OperatorCells
+from teleop_eval.core.mappings.base import OPERATOR_JOINTS, Ideal, MappingModel, OperatorCells
+from teleop_eval.core.mappings.settings import MappingSettings
+from teleop_eval.core.parameters import DOUBLE, STRING, named_map, parameter
 from teleop_eval.core.sentences import listed, nearest, shown
-from teleop_eval.core.settings import MappingSettings
+
+if TYPE_CHECKING:
+    from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 
 
-class JointSpaceMapping:
+@dataclass(frozen=True)
+class SourceJointSettings:
+    """How one robot joint follows one operator joint."""
+
+    source: str = parameter(STRING, '', 'Operator joint that drives this robot joint.')
+    sign: float = parameter(DOUBLE, 1.0, 'Direction, 1 or -1.', low=-1.0, high=1.0)
+    scale: float = parameter(DOUBLE, 1.0, 'Robot angle per operator angle.')
+    offset: float = parameter(DOUBLE, 0.0, 'Robot angle at operator angle 0.', unit='rad')
+
+
+class JointSpaceMapping(MappingModel):
     """
     Robot angle = offset + sign x scale x operator angle, joint by joint.
 
@@ -22,10 +38,30 @@ class JointSpaceMapping:
     shows as tracking error.
     """
 
-    needs = 'operator_joints'
-    estimates_tool_rotation = False
+    @dataclass(frozen=True)
+    class Settings(MappingSettings):
+        """The robot's joints with their sources."""
 
-    def __init__(self, label: str, settings: MappingSettings, operator: OperatorGeometry,
+        joints: dict[str, SourceJointSettings] = named_map(
+            SourceJointSettings, 'By robot joint.', free_names=True)
+
+        def fault(self, key: str) -> str:
+            """Return the sentence on a joint without source or with an odd sign, else ''."""
+            for joint, source in self.joints.items():
+                if not source.source:
+                    return f'{key}.joints.{joint}.source is missing; name the operator joint.'
+                if abs(source.sign) != 1.0:
+                    return (f'{key}.joints.{joint}.sign is {source.sign:g}, but must be 1 or '
+                            '-1; use scale for factors.')
+            return ''
+
+        def operator_joints(self) -> tuple[str, ...]:
+            """Return the sources."""
+            return tuple(source.source for source in self.joints.values())
+
+    needs = OPERATOR_JOINTS
+
+    def __init__(self, label: str, settings: Settings, operator: OperatorGeometry,
                  robot: RobotGeometry) -> None:
         del operator  # the link lengths of the operator's arm play no part here
         names = robot.chain.joint_names
@@ -45,9 +81,6 @@ class JointSpaceMapping:
         self.sources = tuple(source.source for source in sources)
         self._gain = np.array([source.sign * source.scale for source in sources])
         self._offset = np.array([source.offset for source in sources])
-
-    def take_tool_rotation(self, hand_to_tool: np.ndarray) -> None:
-        """Do nothing: the tool's orientation follows from the joints."""
 
     def ideal(self, cells: OperatorCells) -> Ideal:
         """Return joints (m, n), and the tool pose they would give."""

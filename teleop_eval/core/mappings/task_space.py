@@ -4,26 +4,50 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from teleop_eval.core import rotations
 from teleop_eval.core.errors import ConfigError
-from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
-from teleop_eval.core.mappings.base import Ideal, OperatorCells
-from teleop_eval.core.settings import MappingSettings
+from teleop_eval.core.mappings.base import Ideal, MappingModel, OperatorCells
+from teleop_eval.core.mappings.scaling import ScaleSettings, scale_of
+from teleop_eval.core.mappings.settings import quaternion_fault
+from teleop_eval.core.parameters import DOUBLES, parameter
+
+if TYPE_CHECKING:
+    from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 
 
-class TaskSpaceMapping:
+class TaskSpaceMapping(MappingModel):
     """
     p_i = c_r + S R (p_o - c_o) and R_i = R R_o Q.
 
-    S is `scale`, times L_r / L_o if normalized; the centres are the shoulders unless given;
-    Q is the fixed rotation from hand to tool, given or estimated by the arm evaluator.
+    S is `scale` or `scale_xyz`, times L_r / L_o if normalized; the centres are the shoulders
+    unless given; Q is the fixed rotation from hand to tool, given or estimated by the arm
+    evaluator.
     """
 
-    needs = 'hand'
+    @dataclass(frozen=True)
+    class Settings(ScaleSettings):
+        """Scale, centres and the rotation from hand to tool."""
 
-    def __init__(self, label: str, settings: MappingSettings, operator: OperatorGeometry,
+        operator_center_m: tuple[float, ...] | None = parameter(
+            DOUBLES, None, 'Operator point that maps to robot_center_m; not given: the shoulder.',
+            unit='m', size=3)
+        robot_center_m: tuple[float, ...] | None = parameter(
+            DOUBLES, None, 'Robot point; not given: the shoulder.', unit='m', size=3)
+        hand_to_tool_xyzw: tuple[float, ...] | None = parameter(
+            DOUBLES, None, 'Rotation from hand to tool, quaternion x, y, z, w; not given: '
+            'estimated from the first engaged 10 s.', size=4)
+
+        def fault(self, key: str) -> str:
+            """Return the sentence on a scale given twice or a rotation that is none, else ''."""
+            return super().fault(key) or quaternion_fault(
+                f'{key}.hand_to_tool_xyzw', self.hand_to_tool_xyzw)
+
+    def __init__(self, label: str, settings: Settings, operator: OperatorGeometry,
                  robot: RobotGeometry) -> None:
         self._robot = robot
         self._axes = operator.axes
@@ -35,13 +59,8 @@ class TaskSpaceMapping:
         self._operator_center = operator.shoulder_m if center is None else np.array(center)
         self._robot_center = (None if settings.robot_center_m is None
                               else np.array(settings.robot_center_m))
-        self._scale = settings.scale
-        if settings.scaling == 'normalized':
-            if operator.length_m is None:
-                raise ConfigError(
-                    f'mapping {label!r} scales by the arm lengths, but the operator has none; '
-                    'give operator.arm_length_m or stature_m, or scaling: metric.')
-            self._scale *= robot.reach.length_m / operator.length_m
+        self._scale = scale_of(label, settings, operator, robot)
+        self.scales_by_arm_lengths = settings.normalized
         given = settings.hand_to_tool_xyzw
         self.hand_to_tool = None if given is None else rotations.normalize(np.array(given))
         self.estimates_tool_rotation = given is None

@@ -1,0 +1,133 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""
+Use of mapping kinds whose authors are not known.
+
+What a kind does wrong becomes one sentence about this mapping; it must cost neither the run
+nor the numbers of other mappings.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from teleop_eval.core.errors import ConfigError, TeleopEvalError
+from teleop_eval.core.mappings.base import (
+    GIVES,
+    NEEDS,
+    VELOCITY,
+    Ideal,
+    MappingModel,
+    OperatorCells,
+)
+from teleop_eval.core.mappings.registry import BrokenKind, known_kinds
+from teleop_eval.core.mappings.settings import MappingSettings
+from teleop_eval.core.sentences import cut, listed, nearest, shown
+
+if TYPE_CHECKING:
+    from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
+
+
+def make_mapping(label: str, settings: MappingSettings, operator: OperatorGeometry,
+                 robot: RobotGeometry) -> MappingModel:
+    """
+    Return the model of one configured mapping.
+
+    Raises
+    ------
+    ConfigError
+        If the kind is not known, its settings do not fit the arms, or its class fails.
+
+    """
+    kinds = known_kinds()
+    kind = kinds.get(settings.kind)
+    if kind is None:
+        near = nearest(settings.kind, kinds)
+        hint = f'did you mean {near!r}?' if near else 'correct it.'
+        raise ConfigError(f'mapping {label!r} has kind {shown(settings.kind)}, but there are '
+                          f'only {listed(kinds)}; {hint}')
+    if isinstance(kind, BrokenKind):
+        raise ConfigError(f'mapping {label!r} cannot be modelled: {kind.why}')
+    try:
+        settings.fault(label)
+        settings.operator_joints()
+        model = kind(label, settings, operator, robot)
+    except TeleopEvalError:
+        raise
+    except Exception as error:
+        raise ConfigError(f'mapping {label!r} of kind {settings.kind} cannot be modelled, since '
+                          f'{kind.__name__} failed: {_said(error)}; correct it or its '
+                          'settings.') from error
+    for name, value, choices in (('needs', model.needs, NEEDS), ('gives', model.gives, GIVES)):
+        if value not in choices:
+            raise ConfigError(f'mapping {label!r} of kind {settings.kind} cannot be modelled, '
+                              f'since its {name} is {shown(value)}, not one of '
+                              f'{", ".join(map(repr, choices))}; correct {kind.__name__}.')
+    return model
+
+
+def checked_fault(settings: MappingSettings, key: str) -> str:
+    """Return the sentence of a kind's own check of its settings; its failure is told later."""
+    try:
+        return str(settings.fault(key) or '')
+    except Exception:
+        # make_mapping meets it again and makes a problem of it, which costs this mapping only.
+        return ''
+
+
+def checked_operator_joints(settings: MappingSettings) -> tuple[str, ...]:
+    """Return the operator joints that a mapping needs, none if its kind fails to tell."""
+    try:
+        names = settings.operator_joints()
+        return tuple(names) if all(isinstance(name, str) for name in names) else ()
+    except Exception:
+        return ()  # make_mapping meets it again
+
+
+def checked_ideal(model: MappingModel, cells: OperatorCells) -> Ideal | str:
+    """
+    Return what a model makes of the cells, or what is wrong with that.
+
+    Returns
+    -------
+    Ideal or str
+        An ideal command of numbers in the shapes that `Ideal` names; else a clause without
+        full stop, such as 'ideal() raised ValueError: no hand'.
+
+    """
+    try:
+        ideal = model.ideal(cells)
+    except Exception as error:
+        return f'ideal() raised {_said(error)}'
+    if not isinstance(ideal, Ideal):
+        return f'ideal() returned {type(ideal).__name__} where Ideal is expected'
+    count, joints = len(cells), cells.robot_joints.shape[1]
+    for name, width in (('positions_m', 3), ('orientations', 4), ('joints', joints),
+                        ('velocities_mps', 3), ('turn_rates_rad_s', 3),
+                        ('raw_velocities_mps', 3)):
+        value = getattr(ideal, name)
+        if value is None and name != 'positions_m':
+            continue
+        if fault := _array_fault(value, (count, width)):
+            return f'ideal() returned {name} {fault}'
+    if model.gives == VELOCITY and ideal.velocities_mps is None:
+        return 'ideal() returned no velocities_mps, although the kind gives velocities'
+    return ideal
+
+
+def _array_fault(value: Any, shape: tuple[int, int]) -> str:
+    if not isinstance(value, np.ndarray):
+        return f'as {type(value).__name__} where an array of shape {shape} is expected'
+    if value.shape != shape:
+        return f'of shape {value.shape} where {shape} is expected'
+    if value.dtype != np.float64:
+        return f'of type {value.dtype} where float64 is expected'
+    return ''
+
+
+def _said(error: Exception) -> str:
+    """Return an exception of foreign code on one line."""
+    text = ' '.join(str(error).split())
+    return f'{type(error).__name__}: {cut(text)}' if text else type(error).__name__
