@@ -7,6 +7,7 @@ from __future__ import annotations
 import numpy as np
 
 from teleop_eval.core import workspace
+from teleop_eval.core.budget import BudgetStatistics
 from teleop_eval.core.cell_grid import VisitedCells
 from teleop_eval.core.delays import DelayStatistics
 from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
@@ -56,13 +57,16 @@ class MappingAccumulator:
     """Sums, histograms and visited cells of one arm under one mapping."""
 
     def __init__(self, robot: RobotGeometry | None, joint_names: tuple[str, ...],
-                 joint_units: tuple[str, ...], period_s: float) -> None:
+                 joint_units: tuple[str, ...], period_s: float, *, suffix: str = '_norm',
+                 unit: str = ARM_LENGTHS) -> None:
         self._robot = robot
         self._period_s = period_s
         self.engaged_cells = 0
         self.engagements = 0
         self.raw = MagnitudeStatistics()
         self.compensated = MagnitudeStatistics()
+        self.spin = MagnitudeStatistics()
+        self.budget = BudgetStatistics(suffix=suffix, unit=unit)
         self.turn_raw = OrientationStatistics()
         self.turn_compensated = OrientationStatistics()
         self.joints_raw = JointErrorStatistics(joint_names, joint_units)

@@ -70,6 +70,11 @@ class History:
         """Return a track over the kept cells, None if the quantity was never there."""
         return self._tracks.get(name)
 
+    def usable_track(self, name: str) -> Track | None:
+        """Return a track over the kept cells, valid only where they are usable."""
+        track = self._tracks.get(name)
+        return None if track is None else Track(track.values, track.valid & self.usable)
+
     def last(self, name: str, count: int) -> Track | None:
         """Return the last `count` cells of a track."""
         track = self._tracks.get(name)

@@ -14,18 +14,21 @@ from teleop_eval.core.accumulator import MappingAccumulator
 from teleop_eval.core.boundaries import CellStates
 from teleop_eval.core.delays import Observed
 from teleop_eval.core.history import History, Track
+from teleop_eval.core.ideal_command import IdealCommand
+from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
 from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
 from teleop_eval.core.results import WindowResult
 from teleop_eval.core.streams import Items
-from teleop_eval.core.tracking import ARM_LENGTHS, JointErrors, joint_errors
+from teleop_eval.core.tracking import JointErrors, joint_errors
+from teleop_eval.core.velocity import velocity_tracks
 from teleop_eval.core.window import (
     Span,
-    ideal_tracks,
     on_grid,
     operator_tracks,
     pose_command_tracks,
     tool_tracks,
 )
+from teleop_eval.core.window_budget import POSITION, VELOCITY, Delays, Space, window_budget
 from teleop_eval.core.window_latency import WindowLatency
 
 if TYPE_CHECKING:
@@ -56,7 +59,11 @@ class ArmMeasurement:
         self._columns = self._chain_columns()
         self.latency = WindowLatency(
             arm, self._period_s, None if arm.robot is None else self._columns)
+        self.ideal = IdealCommand(arm, self._period_s)
+        self._has_velocities = any(
+            model.gives == GIVES_VELOCITY for model in arm.setup.models.values())
         self.accumulators: dict[int, MappingAccumulator] = {}
+        self.delays_s: Delays = {}
         self.limits = LimitState()
         self.label = -1
         self.tool_rotation: np.ndarray | None = None
@@ -82,6 +89,7 @@ class ArmMeasurement:
 
     def _interrupt(self) -> None:
         self.history = History(self.latency.keep_cells)
+        self.ideal.interrupt()
         self.latency.interrupt()
         self._earlier: Items | None = None
         self._windows = 0
@@ -96,7 +104,9 @@ class ArmMeasurement:
         arm = self._arm
         tracks, robot_items, command_items = self._tracks(span)
         states = arm.boundaries.states(span, settling_ns=self._settling_ns(span.start_ns))
-        tracks |= self._ideal(tracks, states)
+        if arm.robot is not None:
+            tracks |= self.ideal.tracks(
+                span, states, tracks, self._robot_joints(tracks, span.count))
         self.latency.saw(set(tracks))
         self.history.extend(tracks, states.usable, states.run, states.label)
         self._windows += 1
@@ -152,6 +162,10 @@ class ArmMeasurement:
                         command_items, span, max_gap_ns=stream.max_gap_ns, hold=hold,
                         robot=arm.robot, robot_joints=self._robot_joints(tracks, span.count))
                 command_items = None
+        if self._has_velocities and arm.robot is not None:
+            tracks |= velocity_tracks(
+                {role: intake for role, intake in arm.intakes.items() if role in streams}, span,
+                arm.robot, hold=arm.arm.command.hold)
         return tracks, robot_items, command_items
 
     def _with_earlier(self, command: Items, span: Span) -> Items:
@@ -183,27 +197,6 @@ class ArmMeasurement:
             return np.zeros((count, len(self._arm.robot.chain.joint_names)))
         return np.where(track.valid[:, None], track.values, 0.0)[:, self._columns]
 
-    def _ideal(self, tracks: dict[str, Track], states: CellStates) -> dict[str, Track]:
-        """Return the ideal command of each cell under its own active mapping."""
-        arm, count = self._arm, len(states.label)
-        joined: dict[str, Track] = {}
-        if arm.robot is None:
-            return joined
-        names = arm.setup.operator_joint_names
-        robot_joints = self._robot_joints(tracks, count)
-        for index in np.unique(states.label[states.label >= 0]):
-            model = arm.setup.models.get(arm.boundaries.labels[index])
-            if model is None:
-                continue
-            here = states.label == index
-            for name, track in ideal_tracks(
-                    model, tracks, names, robot_joints, arm.robot).items():
-                old = joined.get(name) or Track(
-                    np.full(track.values.shape, np.nan), np.zeros(count, dtype=bool))
-                joined[name] = Track(np.where(here[:, None], track.values, old.values),
-                                     np.where(here, track.valid, old.valid))
-        return joined
-
     def _count_engaged(self, states: CellStates) -> None:
         for index in np.unique(states.label[states.label >= 0]):
             self._accumulator(int(index)).engaged_cells += int(
@@ -214,9 +207,16 @@ class ArmMeasurement:
     def _accumulator(self, index: int) -> MappingAccumulator:
         if index not in self.accumulators:
             setup = self._arm.setup
+            space = self.space(index)
             self.accumulators[index] = MappingAccumulator(
-                self._arm.robot, setup.joint_names, setup.joint_units, self._period_s)
+                self._arm.robot, setup.joint_names, setup.joint_units, self._period_s,
+                suffix=space.suffix, unit=space.unit)
         return self.accumulators[index]
+
+    def space(self, index: int) -> Space:
+        """Return whether a mapping is judged by positions or, as a rate, by velocities."""
+        model = self._arm.setup.models.get(self._arm.boundaries.labels[index])
+        return VELOCITY if model is not None and model.gives == GIVES_VELOCITY else POSITION
 
     def _measure(self, span: Span, index: int, states: CellStates, robot_items: Items | None,
                  command_items: Items | None) -> dict[str, Metric]:
@@ -224,6 +224,13 @@ class ArmMeasurement:
         accumulator = self._accumulator(index)
         here = states.usable & (states.label == index)
         found = self._track_tool(span, index, here, accumulator)
+        budget = window_budget(
+            self.history, self.latency, span, index, here, self.space(index), self._period_s)
+        if budget is not None:
+            accumulator.budget.add(budget.terms)
+            found |= budget.metrics
+            if index == self.label:
+                self.delays_s = budget.delays_s
         if robot_items is not None and command_items is not None:
             found |= self._track_joints(span, index, here, (robot_items, command_items))
         for which, name in (('operator', 'u_o'), ('ideal', 'u_i'), ('robot', 'u_r')):
@@ -240,32 +247,35 @@ class ArmMeasurement:
 
     def _track_tool(self, span: Span, index: int, here: np.ndarray,
                     accumulator: MappingAccumulator) -> dict[str, Metric]:
-        robot = self.history.last('u_r', span.count)
-        ideal = self.history.last('u_i', span.count)
+        space = self.space(index)
+        robot = self.history.last(space.robot, span.count)
+        ideal = self.history.last(space.ideal, span.count)
         found: dict[str, Metric] = {}
         if robot is None or ideal is None:
             return found
         raw = _norms(robot, ideal, here)
         accumulator.raw.add(raw)
-        found['tracking_error_rms_norm'] = _rms(raw, ARM_LENGTHS)
-        turn_robot = self.history.last('turn_r', span.count)
-        turn_ideal = self.history.last('turn_i', span.count)
-        if turn_robot is not None and turn_ideal is not None:
+        found[f'tracking_error_rms{space.suffix}'] = _rms(raw, space.unit)
+        turns = {name: self.history.last(name, span.count)
+                 for name in ('turn_r', 'turn_i', 'spin_r', 'spin_i')}
+        if (turn_robot := turns['turn_r']) and (turn_ideal := turns['turn_i']):
             both = here & turn_robot.valid & turn_ideal.valid
             accumulator.turn_raw.add(turn_ideal.values[both], turn_robot.values[both])
+        if space is VELOCITY and (spin := turns['spin_r']) and (spin_ideal := turns['spin_i']):
+            accumulator.spin.add(_norms(spin, spin_ideal, here))
         seen = self.latency.in_use(span.end_ns, index)
-        name = 'tracking_error_compensated_rms_norm'
+        name = f'tracking_error_compensated_rms{space.suffix}'
         if seen is None:
-            found[name] = self.latency.why_none(index, ARM_LENGTHS)
+            found[name] = self.latency.why_none(index, space.unit)
             return found
         shift = seen.delay_s / self._period_s
         earlier = self._label_earlier(span.count, shift) == index
-        delayed = self.history.delayed('u_i', span.count, shift)
-        assert delayed is not None  # u_i is there
+        delayed = self.history.delayed(space.ideal, span.count, shift)
+        assert delayed is not None  # the ideal command is there
         compensated = _norms(robot, delayed, earlier)
         accumulator.compensated.add(compensated)
-        found[name] = _rms(compensated, ARM_LENGTHS, seen)
-        if turn_robot is not None:
+        found[name] = _rms(compensated, space.unit, seen)
+        if turn_robot is not None and space is POSITION:
             self._turn(span, index, shift, turn_robot, earlier, accumulator)
         return found
 

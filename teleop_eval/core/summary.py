@@ -7,14 +7,18 @@ from __future__ import annotations
 from typing import Any
 
 from teleop_eval.core.accumulator import MappingAccumulator
+from teleop_eval.core.advice import what_first
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT
+from teleop_eval.core.budget_summary import budget_metrics
+from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
-from teleop_eval.core.tracking import ARM_LENGTHS
+from teleop_eval.core.window_budget import VELOCITY
 
 CONDITION = 'teleoperated'
+_RATE = 'a rate mapping commands velocities: positions and orientations follow from no input'
 
 
 def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
@@ -25,8 +29,10 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
     if measured is not None:
         for index in sorted(measured.accumulators, key=lambda i: arm.boundaries.labels[i]):
             metrics = mapping_metrics(arm, measured, index, reachable)
-            mappings[arm.boundaries.labels[index]] = {
+            label = arm.boundaries.labels[index]
+            mappings[label] = {
                 'condition': CONDITION,
+                'advice': what_first(label, metrics, measured.space(index).suffix),
                 'metrics': {name: metrics[name].to_dict() for name in metrics},
             }
     base = arm.chosen
@@ -68,7 +74,7 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
     accumulator = measured.accumulators[index]
     label = arm.boundaries.labels[index]
     model = arm.setup.models.get(label)
-    no_ideal = _why_no_ideal(arm, label)
+    no_ideal = _why_no_ideal(arm, measured, label)
     caveat = _clock_caveat(arm)
     found: dict[str, Metric] = {}
     pairs = measured.latency.pairs(index)
@@ -80,11 +86,13 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
                 caveat=caveat, reason='the run is shorter than a latency window')
     unknown = _why_no_delay(accumulator)
     reach = 1.0 if arm.robot is None else arm.robot.reach.length_m
+    space = measured.space(index)
+    in_metres = ('_m_s', 'm/s', reach) if space is VELOCITY else ('_m', 'm', reach)
     for prefix, one, why, hint in (
             ('tracking_error', accumulator.raw,
              {'reason': 'no engaged and settled sample'}, ''),
             ('tracking_error_compensated', accumulator.compensated, unknown, caveat)):
-        for suffix, unit, factor in (('_norm', ARM_LENGTHS, 1.0), ('_m', 'm', reach)):
+        for suffix, unit, factor in ((space.suffix, space.unit, 1.0), in_metres):
             found |= one.metrics(prefix, suffix, unit, factor=factor, caveat=hint,
                                  status=why.get('status', INSUFFICIENT), reason=why['reason'])
     absorbed = model is not None and model.estimates_tool_rotation
@@ -95,6 +103,13 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
         'orientation_error', absorbed=absorbed, reason=no_turn)
     found |= accumulator.turn_compensated.metrics(
         'orientation_error_compensated', absorbed=absorbed, reason=no_turn, caveat=caveat)
+    if space is VELOCITY:
+        found = {name: missing(NOT_CONFIGURED, metric.unit, _RATE)
+                 if name.startswith('orientation_error') else metric
+                 for name, metric in found.items()}
+        found |= accumulator.spin.metrics(
+            'turn_rate_error', '_rad_s', 'rad/s',
+            reason='turn rates of input and tool are not both known')
     if no_ideal:
         found = {name: missing(NOT_CONFIGURED, metric.unit, no_ideal)
                  if name.startswith(('tracking_error', 'orientation_error')) else metric
@@ -105,10 +120,11 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
             for name, metric in found.items():
                 if name.startswith('tracking_error') and metric.value is not None:
                     metric.details['scale_uncertainty'] = uncertainty
+    found |= budget_metrics(arm, measured, index, no_ideal=no_ideal, caveat=caveat)
     found |= _joint_metrics(arm, accumulator, caveat)
     found |= accumulator.workspace_metrics(
         arm.operator, reachable, has_operator=not arm.operator.missing and 'hand' in arm.intakes,
-        has_ideal=no_ideal)
+        has_ideal=no_ideal or (_RATE if space is VELOCITY else ''))
     return found | _engagement(arm, accumulator)
 
 
@@ -146,16 +162,20 @@ def _engagement(arm: ArmEvaluator, accumulator: MappingAccumulator) -> dict[str,
             'engagement_rate_per_min': rate}
 
 
-def _why_no_ideal(arm: ArmEvaluator, label: str) -> str:
+def _why_no_ideal(arm: ArmEvaluator, measured: ArmMeasurement, label: str) -> str:
     """Return why there is no ideal command under a mapping, '' if there is one."""
     if label not in arm.arm.mappings:
         listed = ', '.join(arm.arm.mappings) or 'none'
         return f'mapping {label!r} is not configured (configured: {listed})'
     if arm.robot is None:
         return 'this arm has no usable robot description'
+    if arm.arm.mappings[label].kind == UNMODELLED:
+        return NOT_MODELLED
     model = arm.setup.models.get(label)
     if model is None:
         return f'mapping {label!r} cannot be modelled; see problems'
+    if measured.ideal.faults.get(label) and label not in measured.ideal.made:
+        return f'mapping {label!r} failed: {measured.ideal.faults[label]}'
     if model.needs not in arm.intakes:
         topic = 'operator.hand_topic' if model.needs == 'hand' else 'operator.joints_topic'
         return f'mapping {label!r} needs {topic}'

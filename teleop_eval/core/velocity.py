@@ -10,13 +10,16 @@ position is.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 
 from teleop_eval.core import rotations
 from teleop_eval.core.geometry import RobotGeometry
 from teleop_eval.core.history import Track
+from teleop_eval.core.intake import Intake
 from teleop_eval.core.streams import Items
-from teleop_eval.core.window import Span
+from teleop_eval.core.window import Span, on_grid
 
 
 def at_edges(items: Items, span: Span, *, max_gap_ns: int, hold: bool = False) -> Track:
@@ -73,3 +76,36 @@ def tool_velocity_tracks(prefix: str, joints: Track, columns: np.ndarray, robot:
     return {f'w_{prefix}': mean_velocity(tool, period_s),
             f'spin_{prefix}': mean_turn_rate(
                 rotations.from_matrix(pose.rotations), joints.valid, period_s)}
+
+
+def velocity_tracks(inputs: Mapping[str, Intake], span: Span, robot: RobotGeometry,
+                    *, hold: bool) -> dict[str, Track]:
+    """
+    Return w_r, w_c and spin_r, spin_c of one window, as far as the inputs tell them.
+
+    `hold` is the command's.
+    """
+    tracks: dict[str, Track] = {}
+    for role, prefix, held in (('robot_joints', 'r', False), ('command', 'c', hold)):
+        intake = inputs.get(role)
+        if intake is None:
+            continue
+        stream, period_s = intake.stream, span.period_ns / 1e9
+        items = stream.items(span.end_ns)
+        if intake.velocities:
+            # Velocities as they are commanded: nothing to differentiate.
+            mean = on_grid(items, span, max_gap_ns=stream.max_gap_ns, hold=held)
+            tracks[f'w_{prefix}'] = Track.computed(
+                mean.values[:, :3] / robot.reach.length_m, mean.valid)
+            tracks[f'spin_{prefix}'] = Track.computed(mean.values[:, 3:], mean.valid)
+            continue
+        edges = at_edges(items, span, max_gap_ns=stream.max_gap_ns, hold=held)
+        if intake.posed:
+            tracks[f'w_{prefix}'] = mean_velocity(
+                Track.computed(edges.values / robot.reach.length_m, edges.valid), period_s)
+            continue
+        assert intake.matcher is not None  # joints always have one
+        order = [intake.matcher.names.index(name) for name in robot.chain.joint_names]
+        tracks |= tool_velocity_tracks(prefix, edges, np.array(order, dtype=np.int64), robot,
+                                       period_s)
+    return tracks

@@ -14,6 +14,7 @@ from teleop_eval.core.accumulator import LATENCIES, MappingAccumulator
 from teleop_eval.core.delays import DelayNow, Observed, window_metric
 from teleop_eval.core.history import History
 from teleop_eval.core.latency import DelayEstimate, DelaySettings, estimate_delay
+from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
 from teleop_eval.core.window import Span
 
@@ -21,13 +22,19 @@ if TYPE_CHECKING:
     from teleop_eval.core.arm import ArmEvaluator
 
 
+_RATE_SIDES = {'latency_s': ('w_i', 'w_r'), 'latency_command_s': ('w_i', 'w_c'),
+               'latency_response_s': ('w_c', 'w_r')}
 # Share of a window that must have valid pairs: what lags and filters take is a quarter of 10 s.
 MIN_SHARE = 0.4
 
 
 @dataclass(frozen=True)
 class Pair:
-    """Two sides of one latency: names of tracks, columns of each, and the space they are in."""
+    """
+    Two sides of one latency: names of tracks, columns of each, and the space they are in.
+
+    In the space 'velocity' the tracks are velocities already.
+    """
 
     reference: str
     response: str
@@ -91,11 +98,18 @@ class WindowLatency:
         """Note which tracks there are."""
         self._seen |= names
 
+    def has(self, name: str) -> bool:
+        """Tell whether a track was ever there."""
+        return name in self._seen
+
     def pairs(self, label: int) -> dict[str, Pair | None]:
         """Return the two sides of each latency under a mapping, None where there are none."""
         have = self._seen
         model = self._arm.setup.models.get(self._arm.boundaries.labels[label])
         chain = self._chain_columns
+        if model is not None and model.gives == GIVES_VELOCITY:
+            return {name: Pair(*sides, 'velocity') if have.issuperset(sides) else None
+                    for name, sides in _RATE_SIDES.items()}
         needs = None if model is None else model.needs
         has_ideal = needs in have and 'u_i' in have
         joints_ideal = has_ideal and 'q_i' in have and needs == 'operator_joints'
@@ -133,8 +147,12 @@ class WindowLatency:
             accumulator.delays[name].add(estimate, start_ns, span.end_ns, pair.space)
 
     def _estimate(self, history: History, pair: Pair, label: int) -> DelayEstimate:
-        reference = history.velocity(pair.reference, self._period_s, usable_only=True)
-        response = history.velocity(pair.response, self._period_s, usable_only=False)
+        if pair.space == 'velocity':
+            reference = history.usable_track(pair.reference)
+            response = history.get(pair.response)
+        else:
+            reference = history.velocity(pair.reference, self._period_s, usable_only=True)
+            response = history.velocity(pair.response, self._period_s, usable_only=False)
         if reference is None or response is None:
             return _none('one of the two sides has not come since the last interruption')
         sides = []

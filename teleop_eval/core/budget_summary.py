@@ -1,0 +1,75 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The error budget of a run as metrics, with the reason for each term that is not there."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from teleop_eval.core.budget import TERMS
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric
+from teleop_eval.core.window_budget import POSITION, Space
+
+if TYPE_CHECKING:
+    from teleop_eval.core.arm import ArmEvaluator
+    from teleop_eval.core.measure import ArmMeasurement
+
+# Terms that need the ideal command.
+_OF_MODEL = ('mapping', 'processing_delay', 'command')
+
+
+def budget_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int, *, no_ideal: str,
+                   caveat: str) -> dict[str, Metric]:
+    """
+    Return discrepancy and terms of one mapping's run.
+
+    `no_ideal` says why there is no ideal command, '' if there is one; `caveat` goes with
+    every value, since the terms depend on the delays.
+    """
+    accumulator, space = measured.accumulators[index], measured.space(index)
+    why = _reasons(arm, measured, index, space, no_ideal)
+    found = accumulator.budget.metrics(why=why)
+    uncertainty = arm.operator.scale_uncertainty
+    for name, metric in found.items():
+        if metric.value is None:
+            continue
+        if uncertainty is not None and space is POSITION and name.startswith(
+                ('discrepancy_', 'budget_mapping_')):
+            metric.details['scale_uncertainty'] = uncertainty
+        if caveat:
+            found[name] = Metric(metric.value, metric.unit, metric.ci95, metric.n,
+                                 metric.samples, reason=caveat, details=metric.details)
+    return found
+
+
+def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Space,
+             no_ideal: str) -> dict[str, tuple[str, str]]:
+    """Return status and reason of what could not be formed, by term and for the whole."""
+    delay = _no_delay(measured, index)
+    why = dict.fromkeys((*TERMS, 'discrepancy'), delay)
+    if arm.robot is None:
+        return dict.fromkeys(why, (NOT_CONFIGURED, 'this arm has no usable robot description'))
+    has_command = measured.latency.has(space.command)
+    if not has_command:
+        reason = ('command.topic is not configured' if arm.arm.command.topic is None
+                  else f'{arm.arm.command.topic} gives no tool '
+                  f'{"position" if space is POSITION else "velocity"}')
+        why |= dict.fromkeys(('processing_delay', 'command'), (NOT_CONFIGURED, reason))
+    if no_ideal:
+        # Without a command either there is nothing that drives the robot.
+        lost = (*_OF_MODEL, 'discrepancy') if has_command else (*TERMS, 'discrepancy')
+        why |= dict.fromkeys(lost, (NOT_CONFIGURED, no_ideal))
+    elif space is POSITION and not measured.latency.has('u_o'):
+        lacking = arm.operator.missing or 'operator.hand_topic'
+        why |= dict.fromkeys(('mapping', 'discrepancy'),
+                             (NOT_CONFIGURED, f'needs {lacking}'))
+    return why
+
+
+def _no_delay(measured: ArmMeasurement, index: int) -> tuple[str, str]:
+    delays = measured.accumulators[index].delays.values()
+    if any(delay.unobservable for delay in delays):
+        return UNOBSERVABLE, 'no delay could be observed to split the discrepancy by'
+    if any(delay.windows for delay in delays):
+        return INSUFFICIENT, 'no engaged and settled sample with an observed delay'
+    return INSUFFICIENT, 'no delay was observed to split the discrepancy by'
