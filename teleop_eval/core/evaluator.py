@@ -70,6 +70,7 @@ class SessionEvaluator:
         self._notes = Sentences()
         self._problems = Sentences()
         self._results: list[WindowResult] = []
+        self._told = 0
         self._thresholds = settings.thresholds
         self._reachable: dict[str, ReachableCells] = {}
         self._make_arms()
@@ -97,7 +98,7 @@ class SessionEvaluator:
         self.routes = {topic: tuple(found) for topic, found in routes.items()}
         self._targets = {
             topic: tuple(
-                (self.arms[route.arm], self._status[route.arm].last_receive_ns, route.role)
+                (self.arms[route.arm], self._status[route.arm].phase, route.role)
                 for route in found) for topic, found in self.routes.items()}
 
     def add(self, receive_ns: int, topic: str, sample: Sample) -> None:
@@ -120,10 +121,21 @@ class SessionEvaluator:
                 arm.advance(receive_ns)
         if topic == EVENT_TOPIC:
             self._event(sample)
-            return
-        for arm, last_receive_ns, role in self._targets.get(topic, ()):
-            last_receive_ns[role] = receive_ns
+        for arm, phase, role in self._targets.get(topic, ()):
+            phase.last_receive_ns[role] = receive_ns
             arm.add(role, receive_ns, sample)
+            if role in arm.states:
+                phase.state_came(role, receive_ns)
+        if len(self._results) > self._told:
+            self._tell_status()
+
+    def _tell_status(self) -> None:
+        """Tell of the windows that the message just taken has closed."""
+        # Levels follow windows, not questions: so they are the same however often one asks.
+        closed = dict.fromkeys(result.arm for result in self._results[self._told:])
+        self._told = len(self._results)
+        for name in closed:
+            self._status[name].window_closed(self._receive_ns, self._thresholds)
 
     def _event(self, sample: Sample) -> None:
         text = sample.text if isinstance(sample, TextSample) else ''
@@ -141,8 +153,11 @@ class SessionEvaluator:
             if arm.described is not None:
                 self._descriptions[name] = arm.described
         held = {name: arm.states for name, arm in self.arms.items()}
+        before = self._status
         self._make_arms()
+        self._told = len(self._results)
         for name, arm in self.arms.items():
+            self._status[name].phase.carry_on(before[name].phase)
             for role, state in arm.states.items():
                 latest = held[name][role].latest
                 if latest is not None:
@@ -153,6 +168,7 @@ class SessionEvaluator:
         """Return the windows closed since the last call, in order of closing."""
         found = self._results[:]
         self._results.clear()
+        self._told = 0
         return found
 
     def background(self, postures: int = 20_000) -> bool:
@@ -177,6 +193,8 @@ class SessionEvaluator:
         """Judge by other thresholds from now on; no metric depends on them."""
         self._thresholds = thresholds
         self.settings = dataclasses.replace(self.settings, thresholds=thresholds)
+        for status in self._status.values():
+            status.judge(thresholds)
 
     def diagnostics(self, now_ns: int) -> list[StatusLine]:
         """Return the status lines of all arms at a receive time."""
@@ -218,6 +236,7 @@ class SessionEvaluator:
             arm.finish(self._receive_ns, explained={
                 route.role for topic in explained for route in self.routes.get(topic, ())
                 if route.arm == name})
+        self._tell_status()
         while self.background(100_000):
             pass
         return self.summary()

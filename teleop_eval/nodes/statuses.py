@@ -8,6 +8,7 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
+from teleop_eval.core.inputs_status import ALL_ARRIVE
 from teleop_eval.core.results import LEVEL_ERROR, LEVEL_OK, LEVEL_STALE, LEVEL_WARN, StatusLine
 from teleop_eval.nodes.live_session import LiveSession
 
@@ -21,7 +22,10 @@ def with_inputs(line: StatusLine, values: Mapping[str, str],
     merged = replace(line, values={**line.values, **values})
     if not problems:
         return merged
-    return replace(merged, level=LEVEL_ERROR, message=' '.join([*problems, line.message]))
+    words = [problem.removesuffix('.') for problem in problems]
+    if line.message != ALL_ARRIVE:
+        words.append(line.message)
+    return replace(merged, level=LEVEL_ERROR, message='; '.join(words))
 
 
 def waiting_inputs(arm: str, values: Mapping[str, str], problems: Sequence[str]) -> StatusLine:
@@ -44,8 +48,9 @@ def session_line(session: LiveSession | None, *, recording: bool) -> StatusLine:
         return StatusLine('session', LEVEL_ERROR, session.write_problem, values)
     if malformed:
         topics = ', '.join(sorted(session.malformed))
+        what = 'message' if malformed == 1 else 'messages'
         return StatusLine('session', LEVEL_WARN,
-                          f'{malformed} messages could not be decoded ({topics}).', values)
+                          f'{malformed} {what} could not be decoded ({topics}).', values)
     return StatusLine('session', LEVEL_OK, f'Session in {session.folder.path}.', values)
 
 

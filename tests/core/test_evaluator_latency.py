@@ -181,7 +181,7 @@ def test_level_needs_three_windows_in_a_row():
     assert levels[8] == levels[10] == levels[12] == LEVEL_OK
     assert levels[14] == LEVEL_ERROR
     message = {end: text for end, _, text in seen}
-    assert message[8].startswith('insufficient: ') and '8 s' in message[8]
+    assert message[8].startswith('no latency yet: ') and '8 s' in message[8]
     assert '300 ms' in message[14] and '400.' in message[14]
 
 

@@ -118,7 +118,8 @@ def test_margin_is_that_of_the_mapping_in_use():
             said[round((window.end_ns - syn.BASE_NS) / 1e9)] = target.diagnostics(
                 message[0])[3].message
     assert 'of its span from a limit' in said[26]
-    assert said[28] == 'no engaged sample in the last window'
+    assert said[28] == (
+        'no limit margin: no engaged and settled sample in the last window')
 
 
 def test_joint_error_at_a_delay_leaves_disengaged_commands_out():

@@ -236,7 +236,7 @@ def test_a_malformed_message_is_counted_and_shown(
         (status for array in statuses for status in array.status if status.level == b'\x01'),
         None), bench.step)
     assert (line.name, line.message) == (
-        'teleop_eval: session', '1 messages could not be decoded (/mapping).')
+        'teleop_eval: session', '1 message could not be decoded (/mapping).')
 
 
 def test_thresholds_can_be_set_and_nothing_else(make_bench: Any) -> None:
