@@ -25,6 +25,7 @@ def _load(name):
 
 
 _load('synthetic_session')
+_load('mapping_cells')
 
 
 @pytest.fixture(scope='session')

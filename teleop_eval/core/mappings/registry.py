@@ -10,6 +10,8 @@ from dataclasses import dataclass
 from teleop_eval.core.errors import ConfigError
 from teleop_eval.core.mappings.base import GIVES, NEEDS, MappingModel
 from teleop_eval.core.mappings.joint_space import JointSpaceMapping
+from teleop_eval.core.mappings.rate import RateMapping
+from teleop_eval.core.mappings.relative import RelativeMapping
 from teleop_eval.core.mappings.settings import MappingSettings
 from teleop_eval.core.mappings.task_space import TaskSpaceMapping
 from teleop_eval.core.mappings.unmodelled import UNMODELLED, UnmodelledMapping
@@ -19,6 +21,8 @@ from teleop_eval.core.sentences import shown
 BUILT_IN: dict[str, type[MappingModel]] = {
     'joint_space': JointSpaceMapping,
     'task_space': TaskSpaceMapping,
+    'relative': RelativeMapping,
+    'rate': RateMapping,
     UNMODELLED: UnmodelledMapping,
 }
 

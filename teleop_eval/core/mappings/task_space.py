@@ -52,11 +52,12 @@ class TaskSpaceMapping(MappingModel):
         self._robot = robot
         self._axes = operator.axes
         center = settings.operator_center_m
-        if center is None and operator.shoulder_m is None:
+        if center is None and operator.shoulder_m is None and not operator.shoulder_moves:
             raise ConfigError(
                 f'mapping {label!r} needs a centre; give operator.shoulder_m or '
                 f'mappings.{label}.operator_center_m.')
-        self._operator_center = operator.shoulder_m if center is None else np.array(center)
+        self._operator_center = None if center is None else np.array(center)
+        self._shoulder = operator.shoulder_m
         self._robot_center = (None if settings.robot_center_m is None
                               else np.array(settings.robot_center_m))
         self._scale = scale_of(label, settings, operator, robot)
@@ -79,8 +80,15 @@ class TaskSpaceMapping(MappingModel):
         assert cells.hand_m is not None  # the arm evaluator asks only if it is there
         center = (self._robot.shoulder.positions(cells.robot_joints)
                   if self._robot_center is None else self._robot_center)
-        offset = rotations.rotate(self._axes, cells.hand_m - self._operator_center)
+        offset = rotations.rotate(self._axes, cells.hand_m - self._center(cells))
         orientations = None
         if cells.hand_xyzw is not None and self.hand_to_tool is not None:
             orientations = rotations.multiply(self.turned(cells.hand_xyzw), self.hand_to_tool)
         return Ideal(center + self._scale * offset, orientations, None)
+
+    def _center(self, cells: OperatorCells) -> np.ndarray:
+        """Return the operator's centre (3,) or (m, 3), NaN where the shoulder is not known."""
+        for center in (self._operator_center, cells.shoulder_m, self._shoulder):
+            if center is not None:
+                return center
+        return np.full(3, np.nan)
