@@ -118,8 +118,10 @@ def received(output: str, sessions: Path | None) -> str:
             f'{sum(one.get("lost") or 0 for one in inputs)} lost')
 
 
-def main() -> None:
-    """Print the node's CPU over the bare subscriber's, without and with recording."""
+def main(*, full: bool = False) -> None:
+    """Print the node's CPU over the bare subscriber's; there is one size, the target's."""
+    print(f'two arms of three 1 kHz streams, {ROUNDS} rounds of {SECONDS:g} s each, alternating '
+          '(target: 5 rounds)', flush=True)
     environment = {**os.environ, 'ROS_DOMAIN_ID': DOMAIN, 'OMP_NUM_THREADS': '1',
                    'ROS_AUTOMATIC_DISCOVERY_RANGE': 'LOCALHOST',
                    'PYTHONPATH': str(Path(__file__).parents[2])}

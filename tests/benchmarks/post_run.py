@@ -6,7 +6,6 @@ from __future__ import annotations
 
 import contextlib
 import io
-import os
 import statistics
 import tempfile
 import time
@@ -17,7 +16,7 @@ from teleop_eval.sinks.bag_writer import BagWriter
 from teleop_eval.sources.recording import open_recording
 from tests.benchmarks.streams import TYPES, arm_messages, parameters
 
-MINUTES = float(os.environ.get('BENCH_MINUTES', '5'))
+SHORT_MINUTES, FULL_MINUTES = 5.0, 60.0
 RATE_HZ = 500.0
 ROUNDS = 3
 
@@ -36,11 +35,14 @@ def write_recording(folder: Path, minutes: float, rate_hz: float) -> int:
     return count
 
 
-def main() -> None:
+def main(*, full: bool = False) -> None:
     """Print time of summarize over time of raw iteration."""
+    minutes = FULL_MINUTES if full else SHORT_MINUTES
+    print(f'{"full" if full else "short"}: {minutes:g} min of three {RATE_HZ:g} Hz streams '
+          f'(target: {FULL_MINUTES:g} min), {ROUNDS} rounds', flush=True)
     with tempfile.TemporaryDirectory() as scratch:
         folder = Path(scratch)
-        count = write_recording(folder / 'bag', MINUTES, RATE_HZ)
+        count = write_recording(folder / 'bag', minutes, RATE_HZ)
         config = parameters(folder, ('',))
         raw, own = [], []
         for number in range(ROUNDS):
@@ -54,7 +56,7 @@ def main() -> None:
                 teleop_eval(['summarize', str(folder / 'bag'), '--config', str(config), '--out',
                              str(folder / f'out{number}'), '--no-progress'])
             own.append(time.perf_counter() - begin)
+            print(f'  raw iteration {raw[-1]:.2f} s, summarize {own[-1]:.2f} s', flush=True)
         ratio = statistics.median(a / b for a, b in zip(own, raw, strict=True))
-        print(f'{count} messages, {MINUTES:g} min of three {RATE_HZ:g} Hz streams')
-        print(f'raw iteration {statistics.median(raw):.2f} s, summarize '
-              f'{statistics.median(own):.2f} s, ratio {ratio:.1f} (target 3)')
+        print(f'{count} messages: raw iteration {statistics.median(raw):.2f} s, '
+              f'summarize {statistics.median(own):.2f} s, ratio {ratio:.1f} (target 3)')
