@@ -10,6 +10,7 @@ from teleop_eval.core import workspace
 from teleop_eval.core.budget import BudgetStatistics
 from teleop_eval.core.cell_grid import VisitedCells
 from teleop_eval.core.delays import DelayStatistics
+from teleop_eval.core.frequency_response import FrequencyResponse
 from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.histogram import StreamingHistogram
 from teleop_eval.core.joint_range import JointRangeUse
@@ -72,6 +73,8 @@ class MappingAccumulator:
         self.joints_raw = JointErrorStatistics(joint_names, joint_units)
         self.joints_compensated = JointErrorStatistics(joint_names, joint_units)
         self.delays = {name: DelayStatistics() for name in LATENCIES}
+        self.responses = {name: FrequencyResponse(1.0 / period_s)
+                          for name in ('latency_s', 'latency_response_s')}
         self._reach = {'': StreamingHistogram(), '_operator': StreamingHistogram()}
         self._visited = {which: VisitedCells(period_s=period_s)
                          for which in ('robot', 'operator', 'ideal')}
@@ -168,5 +171,7 @@ class MappingAccumulator:
 
 
 def _no_operator(unit: str, operator: OperatorGeometry) -> Metric:
+    if operator.lacking:
+        return missing(INSUFFICIENT, unit, operator.lacking)
     lacking = operator.missing or 'operator.hand_topic'
     return missing(NOT_CONFIGURED, unit, f'needs {lacking}')

@@ -18,11 +18,13 @@ import numpy as np
 from teleop_eval.core import arm_setup
 from teleop_eval.core.arm_setup import ArmSetup
 from teleop_eval.core.boundaries import Boundaries
+from teleop_eval.core.calibration_interval import CalibrationInterval
 from teleop_eval.core.errors import TeleopEvalError
 from teleop_eval.core.freezing import can_freeze, freeze
-from teleop_eval.core.geometry import RobotGeometry, operator_geometry, robot_geometry
+from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry, robot_geometry
 from teleop_eval.core.intake import RUN_ON, Intake
 from teleop_eval.core.measure import ArmMeasurement
+from teleop_eval.core.operator_side import OperatorSide
 from teleop_eval.core.results import WindowResult
 from teleop_eval.core.samples import BoolSample, Sample, TextSample, TrajectorySample
 from teleop_eval.core.segment import NEVER_NS, Segment, SegmentInputs
@@ -35,6 +37,8 @@ from teleop_eval.core.transport_age import TransportAge
 
 # An arm whose description does not come is evaluated without it after this time.
 DESCRIPTION_WAIT_NS = 30_000_000_000
+DESCRIPTION, OPERATOR_DESCRIPTION = 'description', 'operator_description'
+_WHOSE = {DESCRIPTION: 'robot', OPERATOR_DESCRIPTION: 'operator'}
 
 
 class ArmEvaluator:
@@ -47,19 +51,23 @@ class ArmEvaluator:
         The arm's name in the settings.
     settings
         Of the whole evaluation.
-    urdf
-        Robot description, None if it comes on a topic or not at all.
+    urdf, operator_urdf
+        Descriptions of the robot and of the operator's arm, None if they come on a topic or
+        not at all.
+    calibration
+        One that began before, as when the evaluation is reset.
     results
         Where closed windows go, shared by all arms so that they keep the order of closing.
 
     """
 
     def __init__(self, name: str, settings: Settings, *, urdf: str | None = None,
+                 operator_urdf: str | None = None, calibration: CalibrationInterval | None = None,
                  results: list[WindowResult] | None = None) -> None:
         self.name = name
         self.settings = settings
         self.arm: ArmSettings = settings.arms[name]
-        self.operator = operator_geometry(self.arm.operator)
+        self.operator_side = OperatorSide(self.arm.operator, calibration)
         self.robot: RobotGeometry | None = None
         self.setup = ArmSetup()
         self.intakes: dict[str, Intake] = {}
@@ -81,7 +89,7 @@ class ArmEvaluator:
             arm_setup.fixed_label(self.arm), labels=self.arm.mappings)
         self.measurement: ArmMeasurement | None = None
         self.observe_joint_errors: Callable[[str, JointErrors], None] | None = None
-        self.described: str | None = None
+        self.described: dict[str, str] = {}
         self.frozen_streams: list[SampledStream] = []
         self.next_check_ns = NEVER_NS
         self._waiting: list[tuple[str, int, Sample]] = []
@@ -89,20 +97,24 @@ class ArmEvaluator:
         self._warm_from_ns: int | None = None
         self._stepped_at_ns = -NEVER_NS
         self._segment: Segment | None = None
-        if urdf is not None:
-            self._describe(urdf)
-        if urdf is not None or not self.arm.robot.description_topic:
+        for role, text in ((DESCRIPTION, urdf), (OPERATOR_DESCRIPTION, operator_urdf)):
+            if text is not None:
+                self._describe(role, text)
+        if not self._undescribed():
             self._make_ready()
 
     def add(self, role: str, receive_ns: int, sample: Sample) -> None:
         """Take one sample of a role; what cannot be used becomes a problem sentence."""
         intake = self.intakes.get(role)
         if intake is not None:
+            if self.operator_side.over(role, receive_ns):
+                self._calibrate(receive_ns)
+                intake = self.intakes[role]
             self._add_sampled(intake, receive_ns, sample)
         elif role in self.states:
             self._add_state(self.states[role], receive_ns, sample)
-        elif role == 'description':
-            self._add_description(receive_ns, sample)
+        elif role in (DESCRIPTION, OPERATOR_DESCRIPTION):
+            self._add_description(role, receive_ns, sample)
         elif not self._ready:
             self._waiting.append((role, receive_ns, sample))
             if receive_ns - self._waiting[0][1] > DESCRIPTION_WAIT_NS:
@@ -130,6 +142,8 @@ class ArmEvaluator:
             self.ages[stream.role].add(receive_ns, sample.stamp_ns)
         if not (rows := intake.rows(receive_ns, sample)):
             return
+        if self.operator_side.uncalibrated:
+            self.operator_side.take(stream.role, receive_ns, rows)
         back_ns = stream.stepped_back(sample.stamp_ns)
         if back_ns and (stream.by_stamp or self.time_base is None):
             self._step_back(intake, receive_ns, back_ns)
@@ -177,45 +191,86 @@ class ArmEvaluator:
                     stream.drop_raw(keep=1)
                 self._warm_up_from(None)
 
-    def _add_description(self, receive_ns: int, sample: Sample) -> None:
-        if not isinstance(sample, TextSample) or sample.text == self.described:
+    def _add_description(self, role: str, receive_ns: int, sample: Sample) -> None:
+        if not isinstance(sample, TextSample) or sample.text == self.described.get(role):
             return
-        if self.described is not None:
-            self.notes.say(f'{self.name}: another robot description came during the run; the '
+        whose = _WHOSE[role]
+        if role in self.described:
+            self.notes.say(f'{self.name}: another {whose} description came during the run; the '
                            'first one is kept.')
             return
-        began = self._ready
-        if began:
+        if self._ready:
             self._flush(receive_ns)
-        self._describe(sample.text)
-        if began:
-            # Nothing measured without the robot fits to what is measured with it.
-            self._new_segment('the robot description came; the metrics begin here', keep=False)
-            self.measurement = None
-        self._make_ready()
+        self._describe(role, sample.text)
+        if self._ready:
+            self._begin_anew(f'the {whose} description came')
+        elif not self._undescribed():
+            self._make_ready()
 
-    def _describe(self, urdf: str) -> None:
-        self.described = urdf
-        robot = self.arm.robot
-        source = robot.description_file or robot.description_topic or 'the description'
+    def _describe(self, role: str, urdf: str) -> None:
+        self.described[role] = urdf
+        side = self.arm.robot if role == DESCRIPTION else self.arm.operator
+        source = side.description_file or side.description_topic or 'the description'
         try:
-            self.robot = robot_geometry(self.arm, urdf, source=source)
+            if role == DESCRIPTION:
+                self.robot = robot_geometry(self.arm, urdf, source=source)
+            else:
+                self.operator_side.describe(urdf, source=source)
         except TeleopEvalError as error:
             text = str(error)
             end = '' if text.endswith(('.', '?')) else '.'
             self.problems.say(f'{self.name}: {text}{end}')
 
+    def _undescribed(self) -> dict[str, str]:
+        """Return by role the topics on which a description has not come yet."""
+        topics = {DESCRIPTION: self.arm.robot.description_topic,
+                  OPERATOR_DESCRIPTION: self.arm.operator.description_topic}
+        return {role: topic for role, topic in topics.items()
+                if topic and role not in self.described}
+
+    def _begin_anew(self, reason: str) -> None:
+        """Drop the metrics: nothing measured before fits to what is measured from now on."""
+        self._new_segment(f'{reason}; the metrics begin here', keep=False)
+        self.measurement = None
+        self._make_ready()
+
+    @property
+    def operator(self) -> OperatorGeometry:
+        """Return the operator's geometry as known by now."""
+        return self.operator_side.geometry
+
+    def _calibrate(self, receive_ns: int) -> None:
+        """Fit the sweeps, whose interval is over; with a new geometry the metrics begin."""
+        found = self.operator_side.fit(self.intakes, self.setup.operator_joint_names)
+        if not found.accepted:
+            self.operator_side.apply()
+            self._say_uncalibrated()
+            return
+        self._flush(receive_ns)
+        self.operator_side.apply()
+        self.notes.say(f'{self.name}: {self.operator.note}.')
+        self._begin_anew('the operator was calibrated')
+
+    def _say_uncalibrated(self) -> None:
+        """Say why a calibration gave nothing, and what was not said while it might have."""
+        self.problems.say(f'{self.name}: {self.operator_side.calibration_sentence()}')
+        if self.operator.missing:
+            for problem in self.setup.problems:
+                self.problems.say(problem)
+
     def _make_ready(self) -> None:
         """Make models and inputs, now that the robot is known or known to stay unknown."""
         before = self.intakes
         self.setup = arm_setup.make_setup(self.name, self.arm, self.operator, self.robot)
-        for problem in self.setup.problems:
-            self.problems.say(problem)
+        if not self.operator_side.pending:
+            for problem in self.setup.problems:
+                self.problems.say(problem)
         self.intakes = self.setup.intakes
         for role, intake in self.intakes.items():
             self.ages.setdefault(role, TransportAge())
             if role in before:
                 intake.stream.counts = before[role].stream.counts
+                intake.problems = before[role].problems
         self._ready = True
         waiting, self._waiting = self._waiting, []
         for role, receive_ns, sample in waiting:
@@ -307,11 +362,12 @@ class ArmEvaluator:
     def finish(self, receive_ns: int, *, explained: Collection[str] = ()) -> None:
         """Close everything; the silence of the `explained` roles needs no sentence."""
         if not self._ready:
-            if 'description' not in explained:
-                self._say_undescribed('')
+            self._say_undescribed('', explained)
             self._make_ready()
         self.advance(receive_ns)
         self._flush(receive_ns)
+        if self.operator_side.uncalibrated:
+            self._say_uncalibrated()
         for age in self.ages.values():
             age.close_window(receive_ns)
         silent = arm_setup.silent_inputs(self.name, self.intakes, self.states)
@@ -319,9 +375,11 @@ class ArmEvaluator:
             if role not in explained:
                 self.problems.say(sentence)
 
-    def _say_undescribed(self, within: str) -> None:
-        self.problems.say(f'{self.name}: no robot description came on '
-                          f'{self.arm.robot.description_topic}{within}; evaluated without it.')
+    def _say_undescribed(self, within: str, explained: Collection[str] = ()) -> None:
+        for role, topic in self._undescribed().items():
+            if role not in explained:
+                self.problems.say(f'{self.name}: no {_WHOSE[role]} description came on '
+                                  f'{topic}{within}; evaluated without it.')
 
     def all_problems(self) -> list[str]:
         """Return every problem sentence, each with how often it was met if more than once."""

@@ -12,7 +12,8 @@ from teleop_eval.core.errors import TeleopEvalError
 from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.intake import Intake
 from teleop_eval.core.joint_match import JointMatcher
-from teleop_eval.core.mappings import MappingModel, make_mapping
+from teleop_eval.core.mappings import MappingModel, MappingSettings, make_mapping
+from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS
 from teleop_eval.core.mappings.guarded import checked_operator_joints
 from teleop_eval.core.mappings.registry import is_modelled
 from teleop_eval.core.mappings.unmodelled import UNMODELLED
@@ -68,15 +69,17 @@ def make_setup(name: str, arm: ArmSettings, operator: OperatorGeometry,
         UNKNOWN_UNIT if robot is None else robot.unit_of(joint) for joint in setup.joint_names)
     setup.operator_joint_names = tuple(sorted({
         joint for mapping in arm.mappings.values()
-        for joint in checked_operator_joints(mapping)}))
+        for joint in checked_operator_joints(mapping)}.union(
+            () if operator.arm is None else operator.arm.chain.joint_names)))
     setup.turning = frozenset() if robot is None else frozenset(
         joint for joint, kind in zip(robot.chain.joint_names, robot.chain.kinds, strict=True)
         if kind == CONTINUOUS)
-    _make_intakes(name, arm, setup)
+    _make_intakes(name, arm, setup, operator)
     if setup.joint_names:
         for key, units, known in (
                 ('robot', arm.robot.joints, setup.joint_names),
-                ('command', arm.command.joints, arm.command.joint_order or setup.joint_names)):
+                ('command', arm.command.joints, arm.command.joint_order or setup.joint_names),
+                ('operator', arm.operator.joints, setup.operator_joint_names)):
             setup.problems += [_foreign_unit(name, f'{key}.joints.{joint}', joint, known)
                                for joint in units if joint not in known]
     return setup
@@ -119,6 +122,21 @@ def unknown_label(name: str, arm: ArmSettings, label: object) -> str:
             f'among the mappings {listed(arm.mappings)}; {hint}')
 
 
+def has_input(need: str, intakes: Mapping[str, Intake], operator: OperatorGeometry) -> bool:
+    """Tell whether there is an input for what a model needs; joints may give the hand."""
+    return need in intakes or (
+        need == HAND and operator.arm is not None and OPERATOR_JOINTS in intakes)
+
+
+def lacks_operator_arm(mapping: MappingSettings, operator: OperatorGeometry) -> bool:
+    """Tell whether a mapping cannot be modelled for want of the operator's arm."""
+    if not operator.lacking:
+        return False
+    no_shoulder = operator.shoulder_m is None and not operator.shoulder_moves
+    return (operator.length_m is None and getattr(mapping, 'normalized', False)) or (
+        no_shoulder and getattr(mapping, 'operator_center_m', ()) is None)
+
+
 def _foreign_unit(name: str, key: str, joint: str, known: tuple[str, ...]) -> str:
     near = nearest(joint, known)
     hint = f'did you mean {near}?' if near else 'remove it.'
@@ -126,12 +144,15 @@ def _foreign_unit(name: str, key: str, joint: str, known: tuple[str, ...]) -> st
             f'{listed(known)}; {hint}')
 
 
-def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup) -> None:
+def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup,
+                  operator: OperatorGeometry) -> None:
     commanded = arm.command.joint_order or setup.joint_names
     topics = {
         'hand': (arm.operator.hand_topic, None),
-        'operator_joints': (arm.operator.joints_topic,
-                            JointMatcher(setup.operator_joint_names, {})),
+        'shoulder': (arm.operator.shoulder_topic, None),
+        'operator_joints': (arm.operator.joints_topic, JointMatcher(
+            setup.operator_joint_names, arm.operator.joints,
+            turning=frozenset() if operator.arm is None else operator.arm.turning)),
         'robot_joints': (arm.robot.joints_topic,
                          JointMatcher(setup.joint_names, arm.robot.joints,
                                       turning=setup.turning)),

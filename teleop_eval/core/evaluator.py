@@ -12,9 +12,12 @@ from __future__ import annotations
 import dataclasses
 from collections.abc import Callable, Collection, Mapping
 from dataclasses import dataclass
+from types import MappingProxyType
 from typing import Any
 
-from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.arm import DESCRIPTION, OPERATOR_DESCRIPTION, ArmEvaluator
+from teleop_eval.core.calibration_interval import CalibrationInterval
+from teleop_eval.core.operator_settings import operator_key
 from teleop_eval.core.reachable_cells import ReachableCells, ReachableSet
 from teleop_eval.core.results import StatusLine, WindowResult
 from teleop_eval.core.samples import Sample, TextSample
@@ -27,6 +30,7 @@ EVENT_TOPIC = '/teleop_eval/session_event'
 """Topic of the evaluator's own events: 'reset', 'segment'."""
 
 REACHABLE_SEED = 20260101
+_NONE: Mapping[str, CalibrationInterval] = MappingProxyType({})
 
 
 @dataclass(frozen=True)
@@ -52,7 +56,8 @@ class SessionEvaluator:
     settings
         What to evaluate.
     descriptions
-        URDF text by arm, for arms whose description is a file.
+        URDF text by arm, for arms whose description is a file; that of the operator's arm by
+        `operator_key` of the arm.
     resolve
         Turns a configured topic name into the full name used in `add`.
     simulated_time
@@ -75,22 +80,26 @@ class SessionEvaluator:
         self._reachable: dict[str, ReachableCells] = {}
         self._make_arms()
 
-    def _make_arms(self) -> None:
+    def _make_arms(self, calibrations: Mapping[str, CalibrationInterval] = _NONE) -> None:
         self.arms = {
-            name: ArmEvaluator(name, self.settings, urdf=self._descriptions.get(name),
-                               results=self._results)
+            name: ArmEvaluator(
+                name, self.settings, urdf=self._descriptions.get(name),
+                operator_urdf=self._descriptions.get(operator_key(name)),
+                calibration=calibrations.get(name), results=self._results)
             for name in self.settings.arms}
         self._status = {name: ArmStatus(arm) for name, arm in self.arms.items()}
         routes: dict[str, list[Route]] = {}
         for name, arm in self.settings.arms.items():
             for role, topic in (
                     ('hand', arm.operator.hand_topic),
+                    ('shoulder', arm.operator.shoulder_topic),
                     ('operator_joints', arm.operator.joints_topic),
                     ('robot_joints', arm.robot.joints_topic),
                     ('command', arm.command.topic),
                     ('engaged', arm.engaged.topic),
                     ('active_mapping', arm.active_mapping.topic),
-                    ('description', arm.robot.description_topic)):
+                    (DESCRIPTION, arm.robot.description_topic),
+                    (OPERATOR_DESCRIPTION, arm.operator.description_topic)):
                 if topic:
                     enabled = arm.command.enabled_field or '' if role == 'command' else ''
                     routes.setdefault(self._resolve(topic), []).append(
@@ -148,13 +157,14 @@ class SessionEvaluator:
             self._reset()
 
     def _reset(self) -> None:
-        """Begin the evaluation anew; the descriptions already seen stay."""
+        """Begin the evaluation anew; descriptions already seen and calibrations stay."""
         for name, arm in self.arms.items():
-            if arm.described is not None:
-                self._descriptions[name] = arm.described
+            for role, text in arm.described.items():
+                self._descriptions[name if role == DESCRIPTION else operator_key(name)] = text
         held = {name: arm.states for name, arm in self.arms.items()}
         before = self._status
-        self._make_arms()
+        self._make_arms({name: side.calibration for name, arm in self.arms.items()
+                         if (side := arm.operator_side).calibration is not None})
         self._told = len(self._results)
         for name, arm in self.arms.items():
             self._status[name].phase.carry_on(before[name].phase)

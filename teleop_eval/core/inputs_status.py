@@ -47,6 +47,7 @@ class InputsStatus:
         """Return what has not come, or not for too long; put the ages into the values."""
         arm, absent, silent = self._arm, [], []
         roles = {'hand': arm.arm.operator.hand_topic,
+                 'shoulder': arm.arm.operator.shoulder_topic,
                  'operator_joints': arm.arm.operator.joints_topic,
                  'robot_joints': arm.arm.robot.joints_topic, 'command': arm.arm.command.topic}
         for role, topic in roles.items():

@@ -66,6 +66,11 @@ class Intake:
         return self._kind == _POSES
 
     @property
+    def frame_id(self) -> str | None:
+        """Return the frame of the poses that are used, None before the first."""
+        return self._frame_id
+
+    @property
     def turning(self) -> np.ndarray:
         """Return the columns of joints that turn without limits."""
         return np.zeros(0, dtype=np.int64) if self.matcher is None else self.matcher.turning

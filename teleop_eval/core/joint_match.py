@@ -9,8 +9,8 @@ from collections.abc import Mapping
 
 import numpy as np
 
+from teleop_eval.core.operator_settings import UnitSettings
 from teleop_eval.core.samples import JointSample, TrajectorySample
-from teleop_eval.core.settings import UnitSettings
 
 TURN = 2.0 * math.pi
 

@@ -17,6 +17,7 @@ from teleop_eval.core.history import History, Track
 from teleop_eval.core.ideal_command import IdealCommand
 from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
 from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
+from teleop_eval.core.operator_tracks import operator_tracks
 from teleop_eval.core.results import WindowResult
 from teleop_eval.core.streams import Items
 from teleop_eval.core.tracking import JointErrors, joint_errors
@@ -24,7 +25,6 @@ from teleop_eval.core.velocity import velocity_tracks
 from teleop_eval.core.window import (
     Span,
     on_grid,
-    operator_tracks,
     pose_command_tracks,
     tool_tracks,
 )
@@ -137,8 +137,7 @@ class ArmMeasurement:
         arm = self._arm
         streams = {role: intake.stream for role, intake in arm.intakes.items()
                    if intake.stream in arm.frozen_streams}
-        tracks = operator_tracks(
-            streams.get('hand'), streams.get('operator_joints'), span, arm.operator)
+        tracks = operator_tracks(arm, streams, span)
         robot_items = command_items = None
         if 'robot_joints' in streams:
             robot_items = streams['robot_joints'].items(span.end_ns)
@@ -233,6 +232,7 @@ class ArmMeasurement:
                 self.delays_s = budget.delays_s
         if robot_items is not None and command_items is not None:
             found |= self._track_joints(span, index, here, (robot_items, command_items))
+        self.latency.feed_responses(self.history, span, index, here, accumulator.responses)
         for which, name in (('operator', 'u_o'), ('ideal', 'u_i'), ('robot', 'u_r')):
             track = self.history.last(name, span.count)
             if track is not None:

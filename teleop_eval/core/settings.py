@@ -13,11 +13,11 @@ from typing import Any
 from teleop_eval.core.errors import ConfigError
 from teleop_eval.core.mappings.guarded import checked_fault
 from teleop_eval.core.mappings.registry import kind_settings
-from teleop_eval.core.mappings.settings import MappingSettings, quaternion_fault
+from teleop_eval.core.mappings.settings import MappingSettings
+from teleop_eval.core.operator_settings import OperatorSettings, UnitSettings
 from teleop_eval.core.parameters import (
     BOOL,
     DOUBLE,
-    DOUBLES,
     STRING,
     STRINGS,
     build,
@@ -29,7 +29,6 @@ from teleop_eval.core.sentences import listed, nearest, shown
 
 # As ROS 2 has them: absolute, relative or private.
 _TOPIC = re.compile(r'(?:~/|/)?[A-Za-z_][A-Za-z0-9_]*(?:/[A-Za-z_][A-Za-z0-9_]*)*')
-TRACKED_POINTS = ('wrist', 'finger_tip')
 
 
 @dataclass(frozen=True)
@@ -111,39 +110,6 @@ class ThresholdSettings:
     hysteresis: float = parameter(
         DOUBLE, 0.1, 'A level falls only when the value is this share below its threshold.',
         low=0.0, high=0.9)
-
-
-@dataclass(frozen=True)
-class UnitSettings:
-    """Conversion of one joint's numbers."""
-
-    scale: float = parameter(
-        DOUBLE, 1.0, "Factor from the message's number to radians or metres.")
-
-
-@dataclass(frozen=True)
-class OperatorSettings:
-    """The operator's side of one arm."""
-
-    hand_topic: str | None = parameter(STRING, None, "Pose or point of the operator's hand.")
-    joints_topic: str | None = parameter(
-        STRING, None, "JointState of the operator's arm or of the arm the operator moves.")
-    shoulder_m: tuple[float, ...] | None = parameter(
-        DOUBLES, None, "The operator's shoulder in the frame of the hand's messages.",
-        unit='m', size=3)
-    arm_length_m: float | None = parameter(
-        DOUBLE, None, "Length of the operator's arm, shoulder to tracked point.",
-        unit='m', low=0.1, high=2.0)
-    arm_length_sd_m: float | None = parameter(
-        DOUBLE, None, 'Standard uncertainty of arm_length_m.', unit='m', low=0.0, high=0.5)
-    stature_m: float | None = parameter(
-        DOUBLE, None, 'Stature, from which the arm length is estimated to +-12 %.',
-        unit='m', low=0.5, high=2.5)
-    tracked_point: str = parameter(
-        STRING, 'wrist', 'What the hand topic tracks.', choices=TRACKED_POINTS)
-    axes_xyzw: tuple[float, ...] = parameter(
-        DOUBLES, [0.0, 0.0, 0.0, 1.0],
-        'Rotation that turns operator axes into robot axes, quaternion x, y, z, w.', size=4)
 
 
 @dataclass(frozen=True)
@@ -291,13 +257,15 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
             raise ConfigError(f'{where}: {field} is {shown(topic)}, which is no topic name: '
                               'between slashes it may hold letters, digits and _, and must not '
                               'begin with a digit.')
-    if fault := quaternion_fault(f'{key}.operator.axes_xyzw', arm.operator.axes_xyzw):
+    if fault := arm.operator.fault(f'{key}.operator'):
         raise ConfigError(f'{where}: {fault}')
 
 
 def _topics(key: str, arm: ArmSettings) -> list[tuple[str, str | None]]:
     return [(f'{key}.operator.hand_topic', arm.operator.hand_topic),
             (f'{key}.operator.joints_topic', arm.operator.joints_topic),
+            (f'{key}.operator.shoulder_topic', arm.operator.shoulder_topic),
+            (f'{key}.operator.description_topic', arm.operator.description_topic),
             (f'{key}.robot.joints_topic', arm.robot.joints_topic),
             (f'{key}.robot.description_topic', arm.robot.description_topic),
             (f'{key}.command.topic', arm.command.topic),

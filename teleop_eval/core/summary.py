@@ -9,12 +9,13 @@ from typing import Any
 from teleop_eval.core.accumulator import MappingAccumulator
 from teleop_eval.core.advice import what_first
 from teleop_eval.core.arm import ArmEvaluator
-from teleop_eval.core.arm_setup import UNKNOWN_UNIT
+from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
 from teleop_eval.core.budget_summary import budget_metrics
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
+from teleop_eval.core.response_summary import response_metrics
 from teleop_eval.core.window_budget import VELOCITY
 
 CONDITION = 'teleoperated'
@@ -120,11 +121,17 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
             for name, metric in found.items():
                 if name.startswith('tracking_error') and metric.value is not None:
                     metric.details['scale_uncertainty'] = uncertainty
+    found |= response_metrics(accumulator, found)
     found |= budget_metrics(arm, measured, index, no_ideal=no_ideal, caveat=caveat)
     found |= _joint_metrics(arm, accumulator, caveat)
     found |= accumulator.workspace_metrics(
-        arm.operator, reachable, has_operator=not arm.operator.missing and 'hand' in arm.intakes,
+        arm.operator, reachable, has_operator=not (arm.operator.missing or
+                                                     arm.operator.lacking)
+        and has_input('hand', arm.intakes, arm.operator),
         has_ideal=no_ideal or (_RATE if space is VELOCITY else ''))
+    if no_ideal and no_ideal == arm.operator.lacking:
+        found = {name: missing(INSUFFICIENT, metric.unit, no_ideal)
+                 if metric.reason == no_ideal else metric for name, metric in found.items()}
     return found | _engagement(arm, accumulator)
 
 
@@ -172,11 +179,13 @@ def _why_no_ideal(arm: ArmEvaluator, measured: ArmMeasurement, label: str) -> st
     if arm.arm.mappings[label].kind == UNMODELLED:
         return NOT_MODELLED
     model = arm.setup.models.get(label)
+    if model is None and lacks_operator_arm(arm.arm.mappings[label], arm.operator):
+        return arm.operator.lacking
     if model is None:
         return f'mapping {label!r} cannot be modelled; see problems'
     if measured.ideal.faults.get(label) and label not in measured.ideal.made:
         return f'mapping {label!r} failed: {measured.ideal.faults[label]}'
-    if model.needs not in arm.intakes:
+    if not has_input(model.needs, arm.intakes, arm.operator):
         topic = 'operator.hand_topic' if model.needs == 'hand' else 'operator.joints_topic'
         return f'mapping {label!r} needs {topic}'
     return ''
@@ -218,6 +227,8 @@ def _geometry(arm: ArmEvaluator) -> dict[str, Any]:
         'operator_scale_uncertainty': operator.scale_uncertainty,
         'operator_shoulder_m': None if operator.shoulder_m is None
         else operator.shoulder_m.tolist(),
+        'operator_shoulder_moves': operator.shoulder_moves,
+        'operator_calibration': arm.operator_side.calibration_summary(),
         'robot_reach_m': None if robot is None else robot.reach.length_m,
         'robot_reach_posture': None if robot is None else dict(
             zip(robot.chain.joint_names, robot.reach.posture.tolist(), strict=True)),

@@ -9,11 +9,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from teleop_eval.core import rotations
-from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
+from teleop_eval.core.geometry import RobotGeometry
 from teleop_eval.core.history import Track
-from teleop_eval.core.mappings import MappingModel, OperatorCells
 from teleop_eval.core.resample import cell_average, cell_average_held, cell_slerp
-from teleop_eval.core.streams import Items, SampledStream
+from teleop_eval.core.streams import Items
 
 
 @dataclass(frozen=True)
@@ -63,26 +62,6 @@ def turned_on_grid(items: Items, span: Span, *, max_gap_ns: int) -> Track | None
                                span.count, period_ns=span.period_ns, max_gap_ns=max_gap_ns))
 
 
-def operator_tracks(hand: SampledStream | None, joints: SampledStream | None, span: Span,
-                    geometry: OperatorGeometry) -> dict[str, Track]:
-    """Return the operator's tracks: hand, hand_turn, operator_joints, u_o as far as known."""
-    tracks: dict[str, Track] = {}
-    if hand is not None:
-        items = hand.items(span.end_ns)
-        position = on_grid(items, span, max_gap_ns=hand.max_gap_ns)
-        tracks['hand'] = position
-        turn = turned_on_grid(items, span, max_gap_ns=hand.max_gap_ns)
-        if turn is not None:
-            tracks['hand_turn'] = turn
-        normalised = geometry.normalise(position.values)
-        if normalised is not None:
-            tracks['u_o'] = Track.computed(normalised, position.valid)
-    if joints is not None:
-        items = joints.items(span.end_ns)
-        tracks['operator_joints'] = on_grid(items, span, max_gap_ns=joints.max_gap_ns)
-    return tracks
-
-
 def tool_tracks(prefix: str, joints: Track, columns: np.ndarray,
                 robot: RobotGeometry) -> dict[str, Track]:
     """
@@ -107,32 +86,4 @@ def pose_command_tracks(items: Items, span: Span, *, max_gap_ns: int, hold: bool
     turn = None if hold else turned_on_grid(items, span, max_gap_ns=max_gap_ns)
     if turn is not None:
         tracks['turn_c'] = turn
-    return tracks
-
-
-def ideal_tracks(model: MappingModel, operator: dict[str, Track],
-                 operator_joint_names: tuple[str, ...], robot_joints: np.ndarray,
-                 robot: RobotGeometry) -> dict[str, Track]:
-    """Return u_i, turn_i and q_i of one mapping model, {} if its operator input is absent."""
-    source = operator.get(model.needs)
-    if source is None:
-        return {}
-    turn = operator.get('hand_turn')
-    ideal = model.ideal(OperatorCells(
-        hand_m=operator['hand'].values if 'hand' in operator else None,
-        hand_xyzw=None if turn is None
-        else np.where(turn.valid[:, None], turn.values, [0.0, 0.0, 0.0, 1.0]),
-        joints=operator['operator_joints'].values if 'operator_joints' in operator else None,
-        joint_names=operator_joint_names,
-        robot_joints=robot_joints,
-    ))
-    # A sliding joint carries the shoulder: the ideal one belongs to the ideal joints.
-    carried = robot_joints if ideal.joints is None else ideal.joints
-    tracks = {'u_i': Track.computed(robot.normalise(ideal.positions_m, carried), source.valid)}
-    if ideal.orientations is not None:
-        valid = source.valid if model.needs != 'hand' or turn is None else (
-            source.valid & turn.valid)
-        tracks['turn_i'] = Track.computed(ideal.orientations, valid)
-    if ideal.joints is not None:
-        tracks['q_i'] = Track.computed(ideal.joints, source.valid)
     return tracks

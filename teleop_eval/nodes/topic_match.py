@@ -10,27 +10,32 @@ from dataclasses import dataclass
 from teleop_eval.nodes.qos import Offer, Request, request_for
 
 # Inputs whose last message stays valid until the next one.
-LATCHED_ROLES = frozenset({'description', 'active_mapping', 'engaged'})
+LATCHED_ROLES = frozenset(
+    {'description', 'operator_description', 'active_mapping', 'engaged'})
 
 # Kind of message, as the decoders name it, by role.
 ROLE_KINDS = {
     'hand': 'pose',
+    'shoulder': 'pose',
     'operator_joints': 'joints',
     'robot_joints': 'joints',
     'command': 'command',
     'engaged': 'bool',
     'active_mapping': 'text',
     'description': 'text',
+    'operator_description': 'text',
 }
 
 ROLE_WORDS = {
     'hand': "operator's hand",
+    'shoulder': "operator's shoulder",
     'operator_joints': "operator's joints",
     'robot_joints': "robot's joints",
     'command': 'command',
     'engaged': 'engaged state',
     'active_mapping': 'active mapping',
     'description': 'robot description',
+    'operator_description': 'operator description',
 }
 
 
