@@ -4,7 +4,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -12,6 +12,7 @@ import numpy as np
 
 from teleop_eval.core.accumulator import LATENCIES, MappingAccumulator
 from teleop_eval.core.delays import DelayNow, Observed, window_metric
+from teleop_eval.core.frequency_response import FrequencyResponse
 from teleop_eval.core.history import History
 from teleop_eval.core.latency import DelayEstimate, DelaySettings, estimate_delay
 from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
@@ -146,6 +147,37 @@ class WindowLatency:
             now[name].add(estimate, span.end_ns)
             accumulator.delays[name].add(estimate, start_ns, span.end_ns, pair.space)
 
+    def feed_responses(self, history: History, span: Span, label: int, here: np.ndarray,
+                       responses: Mapping[str, FrequencyResponse]) -> None:
+        """
+        Add one window to the frequency responses, by name of the latency with the same sides.
+
+        `here` (count,) tells which cells are usable under the mapping.
+        """
+        pairs = self.pairs(label)
+        for name, response in responses.items():
+            pair = pairs[name]
+            if pair is None:
+                continue
+            reference, robot = (history.last(side, span.count)
+                                for side in (pair.reference, pair.response))
+            if reference is None or robot is None:
+                continue
+            seen = self.in_use(span.end_ns, label, (name,))
+            response.add(
+                *self._on_one_scale(pair, reference.values, robot.values),
+                here & reference.valid & robot.valid, history.run[-span.count:],
+                shift_cells=0 if seen is None else round(seen.delay_s / self._period_s))
+
+    def _on_one_scale(self, pair: Pair, *sides: np.ndarray) -> list[np.ndarray]:
+        """Return both sides (m, d) with the same joints, sliding ones beside angles."""
+        found = []
+        for values, columns in zip(sides, pair.columns, strict=True):
+            chosen = values if columns is None else values[:, columns]
+            found.append(chosen * self._joint_weights(columns) if pair.space == 'joints'
+                         else chosen)
+        return found
+
     def _estimate(self, history: History, pair: Pair, label: int) -> DelayEstimate:
         if pair.space == 'velocity':
             reference = history.usable_track(pair.reference)
@@ -155,11 +187,7 @@ class WindowLatency:
             response = history.velocity(pair.response, self._period_s, usable_only=False)
         if reference is None or response is None:
             return _none('one of the two sides has not come since the last interruption')
-        sides = []
-        for track, columns in zip((reference, response), pair.columns, strict=True):
-            values = track.values if columns is None else track.values[:, columns]
-            sides.append(values * self._joint_weights(columns) if pair.space == 'joints'
-                         else values)
+        sides = self._on_one_scale(pair, reference.values, response.values)
         stop = len(history)
         return estimate_delay(
             sides[0], sides[1], 1.0 / self._period_s,

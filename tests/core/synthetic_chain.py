@@ -44,7 +44,7 @@ class Chain:
 
 @dataclass(frozen=True)
 class Motion:
-    """Dense noise-free series: times (n,) s, the rest (n, 3) arm lengths; engaged (n,)."""
+    """Dense series: times (n,) s, the rest (n, 3) arm lengths; engaged (n,)."""
 
     times: np.ndarray
     operator: np.ndarray
@@ -54,11 +54,21 @@ class Motion:
     engaged: np.ndarray
 
 
-def simulate(chain: Chain, motion, seconds: float) -> Motion:
-    """Step the chain from rest, with the operator's motion as function of seconds."""
+def simulate(chain: Chain, motion, seconds: float, *, noisy: bool = False,
+             seed: int = 3) -> Motion:
+    """
+    Step the chain from rest, with the operator's motion as function of seconds.
+
+    With `noisy`, what the stack gets is the hand as the tracker reports it at 100 Hz.
+    """
     lead = 2 * RATE_HZ
     times = (np.arange(lead + round(seconds * RATE_HZ)) - lead) / RATE_HZ
     hand = motion(times)
+    if noisy and chain.noise:
+        reports = syn.clock(times[0], times[-1] + 0.02, 100.0)
+        error = chain.noise / 0.6 * np.random.default_rng(seed).standard_normal(
+            (len(reports), 3))
+        hand = hand + np.column_stack([np.interp(times, reports, axis) for axis in error.T])
     spans = chain.clutch or ((-2.0, seconds + 1.0),)
     engaged = np.zeros(len(times), dtype=bool)
     begins = []
@@ -110,7 +120,7 @@ def _servo_step(omega: float, zeta: float) -> tuple[np.ndarray, np.ndarray]:
 
 def messages(chain: Chain, motion: Motion, *, command: bool = True, seed: int = 3) -> syn.Feed:
     """Return the feed of a chain's hand, command, robot and clutch."""
-    rng, made = np.random.default_rng(seed), syn.Feed()
+    rng, made = np.random.default_rng(seed + 1), syn.Feed()
     end = motion.times[-1]
 
     def at(series, times):
@@ -121,13 +131,14 @@ def messages(chain: Chain, motion: Motion, *, command: bool = True, seed: int = 
         for on, off in chain.clutch:
             made.flag(on, '/clutch', True).flag(off, '/clutch', False)
     t = syn.clock(0.0, end, 100.0)
-    made.poses('/hand', t, 0.6 * (at(motion.operator, t)
-                                  + chain.noise / 0.6 * rng.standard_normal((len(t), 3))))
+    made.poses('/hand', t, 0.6 * at(motion.operator, t))
     t = syn.clock(0.0, end, 125.0, phase=0.7)
-    noisy = at(motion.robot, t) + chain.noise / syn.REACH_M * rng.standard_normal((len(t), 3))
+    # Encoders are ten times better than trackers.
+    noisy = at(motion.robot, t) + 0.1 * chain.noise * rng.standard_normal((len(t), 3))
     made.joints('/joints', t, syn.joints_for(noisy))
     if command:
-        t = syn.clock(0.0, end, 100.0, phase=0.5)
+        # The stack commands when it gets the hand, a processing time later.
+        t = syn.clock(0.0, end, 100.0, phase=0.3 + 100.0 * chain.processing_s)
         made.joints('/command', t, syn.joints_for(at(motion.command, t)))
     return made
 

@@ -65,11 +65,12 @@ def parameters(chain: chains.Chain, command: bool = True) -> dict:
 
 def evaluated(chain: chains.Chain, *, command: bool = True):
     """Return the metrics found, the truth, and the summary."""
-    motion = chains.simulate(chain, syn.wander(), SECONDS)
+    motion = chains.simulate(chain, syn.wander(), SECONDS, noisy=True)
     target = syn.evaluator(parameters(chain, command))
     syn.feed(target, chains.messages(chain, motion, command=command).messages())
     summary = syn.closed(target)
-    return syn.metrics(summary), chains.truth(motion, command=command), summary
+    clean = chains.simulate(chain, syn.wander(), SECONDS) if chain.noise else motion
+    return syn.metrics(summary), chains.truth(clean, command=command), summary
 
 
 def rows(name: str, found: dict, true: dict):

@@ -1,0 +1,35 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The frequency responses of a run as metrics, with the reason for each that is not there."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+from teleop_eval.core import frequency_metrics
+from teleop_eval.core.accumulator import MappingAccumulator
+from teleop_eval.core.metric import NOT_CONFIGURED, Metric, missing
+
+# Ends of the metrics' names by the latency that has the same two sides.
+ENDS = {'latency_s': '', 'latency_response_s': '_response'}
+
+
+def response_metrics(accumulator: MappingAccumulator,
+                     latencies: Mapping[str, Metric]) -> dict[str, Metric]:
+    """
+    Return bandwidth, phase delay and coherent band of both responses.
+
+    `latencies` are the run's metrics; where one is not configured, its response is not
+    either, for the same reason.
+    """
+    found: dict[str, Metric] = {}
+    for name, response in accumulator.responses.items():
+        end, latency = ENDS[name], latencies[name]
+        if latency.status == NOT_CONFIGURED:
+            found |= {
+                f'bandwidth{end}_hz': missing(NOT_CONFIGURED, 'Hz', latency.reason),
+                f'phase_delay{end}_s': missing(NOT_CONFIGURED, 's', latency.reason),
+                f'coherent_up_to{end}_hz': missing(NOT_CONFIGURED, 'Hz', latency.reason)}
+            continue
+        found |= frequency_metrics.metrics(response, of=end)
+    return found
