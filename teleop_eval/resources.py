@@ -36,6 +36,32 @@ def config_file(name: str) -> Path:
         'install the package again.')
 
 
+def package_file(package: str, name: str) -> Path:
+    """
+    Return the path of a file in the share folder of a package, as package:// names it.
+
+    Files of this project's own config folder are found without a ROS installation too.
+
+    Raises
+    ------
+    TeleopEvalError
+        If there is no such file.
+
+    """
+    folder, _, rest = name.partition('/')
+    if package == PACKAGE and folder == 'config':
+        return config_file(rest)
+    places = [Path(prefix) / 'share' / package
+              for prefix in os.environ.get('AMENT_PREFIX_PATH', '').split(os.pathsep) if prefix]
+    for place in places:
+        if (place / name).is_file():
+            return place / name
+    listed = ', '.join(map(str, places)) or 'nowhere, since AMENT_PREFIX_PATH is empty'
+    raise TeleopEvalError(
+        f'there is no file {name!r} of a package {package!r} (looked in {listed}); correct the '
+        'name or source the workspace that has it.')
+
+
 def _places() -> list[Path]:
     root = Path(__file__).resolve().parent.parent
     # The package comes first: an installed copy must not pair with an older tree's files,

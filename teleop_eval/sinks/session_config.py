@@ -7,9 +7,10 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from typing import Any
 
+from teleop_eval.core.operator_settings import operator_key
 from teleop_eval.sources.parameter_file import to_yaml
 
-_FILE_KEY = '.robot.description_file'
+_OPERATOR = operator_key('')
 
 
 def session_config(flat: Mapping[str, Any], descriptions: Mapping[str, str],
@@ -23,8 +24,9 @@ def session_config(flat: Mapping[str, Any], descriptions: Mapping[str, str],
     flat
         Parameters by dotted name.
     descriptions
-        Robot description by arm; each becomes a file of its own beside the configuration,
-        to which `arms.ARM.robot.description_file` then points.
+        Robot description by arm, that of the operator by `operator_key` of the arm; each
+        becomes a file of its own beside the configuration, to which
+        `arms.ARM.robot.description_file` or `arms.ARM.operator.description_file` then points.
     resolve
         Turns a configured topic into its full name, so that the folder does not depend on
         the namespace and the remappings of its run.
@@ -36,10 +38,14 @@ def session_config(flat: Mapping[str, Any], descriptions: Mapping[str, str],
     """
     kept = {'use_sim_time': True, **flat} if simulated_time else dict(flat)
     files: dict[str, str] = {}
-    for arm, text in descriptions.items():
-        if kept.get(f'arms.{arm}{_FILE_KEY}'):
-            kept[f'arms.{arm}{_FILE_KEY}'] = f'description_{arm}.urdf'
-            files[f'description_{arm}.urdf'] = text
+    for whose, text in descriptions.items():
+        arm = whose.removesuffix(_OPERATOR)
+        of_robot = arm == whose
+        key = f'arms.{arm}.{"robot" if of_robot else "operator"}.description_file'
+        if kept.get(key):
+            # Names of arms have no dot: the two files of an arm cannot meet another arm's.
+            kept[key] = f'description_{arm}.urdf' if of_robot else f'description_{whose}.urdf'
+            files[kept[key]] = text
     if resolve is not None:
         for key, value in flat.items():
             if _names_topic(key) and isinstance(value, str) and value:
