@@ -45,7 +45,7 @@ LAYERS = {
     '__main__': layer('cli'),
     'resources': layer('core.errors'),
     'core': layer('core', 'numpy scipy'),
-    'sources': layer('sources core', 'numpy yaml rosbags mcap zstandard lz4'),
+    'sources': layer('sources core resources', 'numpy yaml rosbags mcap zstandard lz4'),
     'sinks': layer('sinks core sources.parameter_file __init__',
                    'numpy rich rosbags yaml mcap'),
     'cli': layer('cli core sources sinks resources __init__', 'numpy rich'),

@@ -16,6 +16,7 @@ from teleop_eval.core.errors import RecordingError, UsageError
 from teleop_eval.core.settings import from_parameters
 from teleop_eval.sinks.session_folder import CONFIG_FILE, INPUTS_BAG, SUMMARY_BAG
 from teleop_eval.sources.description_file import read_descriptions
+from teleop_eval.sources.mapping_kinds import load_mapping_kinds
 from teleop_eval.sources.parameter_file import load_parameters
 
 NODE_NAME = 'teleop_eval'
@@ -52,6 +53,8 @@ def main(argv: Sequence[str] | None = None) -> int:
     namespace = _namespace(options.namespace)
     parameters = load_parameters(config, node_name=NODE_NAME, namespace=namespace)
     flat = {key: value for key, value in parameters.items() if not _OF_ROS.fullmatch(key)}
+    for problem in load_mapping_kinds(flat):
+        print(f'teleop_eval summarize: {one_line(problem)}', file=sys.stderr)
     settings = from_parameters(flat, where=str(config))
     name = options.recording.resolve().name
     run = OfflineRun(

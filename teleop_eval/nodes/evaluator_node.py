@@ -33,6 +33,7 @@ from teleop_eval.nodes.parts import Parts, free_folder
 from teleop_eval.nodes.schedule import Every
 from teleop_eval.sinks import messages
 from teleop_eval.sources.description_file import read_descriptions
+from teleop_eval.sources.mapping_kinds import load_mapping_kinds
 
 NODE_NAME = 'teleop_eval'
 GRAPH_S, DIAGNOSTICS_S, FLUSH_S, SUMMARY_S = 0.5, 1.0, 0.5, 5.0
@@ -72,7 +73,10 @@ class EvaluatorNode(Node):
         self._parts = parts or Parts()
         # There is no public way to list overrides: declaring them automatically fails on an
         # empty list.
-        declared = declare(self, flat_overrides(self._parameter_overrides), where=where)
+        flat = flat_overrides(self._parameter_overrides)
+        for problem in load_mapping_kinds(flat):
+            self.get_logger().warning(problem)
+        declared = declare(self, flat, where=where)
         self.settings, self._flat = declared.settings, declared.flat
         self._descriptions = read_descriptions(self.settings, folder)
         self._configured: dict[str, str] = {}
