@@ -22,10 +22,11 @@ _UNITS = {'arm lengths': 'arm lengths', 'arm lengths/s': 'arm lengths/s'}
 _OFFSET_SHARE = 0.5
 
 
-def largest_term(metrics: Mapping[str, Metric], suffix: str = '_norm') -> str:
-    """Return the name of the term of largest RMS, '' if none has a value."""
+def largest_term(metrics: Mapping[str, Metric], suffix: str = '_norm', *,
+                 but: str = '') -> str:
+    """Return the name of the term of largest RMS but one, '' if none has a value."""
     known = {name: metrics[key].number for name in TERMS
-             if (key := f'budget_{name}_rms{suffix}') in metrics
+             if name != but and (key := f'budget_{name}_rms{suffix}') in metrics
              and metrics[key].value is not None}
     return max(known, key=lambda name: known[name], default='')
 
@@ -59,7 +60,8 @@ def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float |
     return text
 
 
-def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm') -> str:
+def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm', *,
+               clutched: bool = False) -> str:
     """
     Return one sentence on a mapping: what to fix first, and how sure that is.
 
@@ -69,10 +71,14 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm')
         Of the mapping.
     metrics
         Of the whole run under that mapping.
+    clutched
+        Whether the mapping is anchored anew at each engagement. Hand and tool are then meant
+        to be apart, and the mapping's own term holds that offset.
 
     """
     total = metrics.get(f'discrepancy_rms{suffix}')
-    name = largest_term(metrics, suffix)
+    meant = 'mapping' if clutched and suffix == '_norm' else ''
+    name = largest_term(metrics, suffix, but=meant)
     if not name:
         reason = next((metric.reason for key, metric in metrics.items()
                        if key.startswith('budget_residual_rms')), 'nothing was measured')
@@ -88,8 +94,12 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm')
         if share.value < 0.0:
             other = WORDS.get(str(share.details.get('partly_cancels', '')), 'other terms')
             part = f', which partly cancels {other}'
+    aside = ''
+    if meant and (offset := metrics.get(f'budget_mapping_rms{suffix}')) and offset.value:
+        aside = (f'; the {offset.value:.3f} of the mapping hold the offset between hand and '
+                 'tool that clutching leaves, which is meant')
     return (f'{label}: fix first {_what(name, metrics, suffix)} ({metric.number:.3f} '
-            f'{metric.unit} RMS{part}); {_how_sure(name, metrics, suffix)}.')
+            f'{metric.unit} RMS{part}); {_how_sure(name, metrics, suffix, but=meant)}{aside}.')
 
 
 def _what(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
@@ -117,11 +127,11 @@ def _milliseconds(metrics: Mapping[str, Metric], name: str) -> str:
     return '' if metric is None or metric.value is None else f', {metric.value * 1e3:.0f} ms'
 
 
-def _how_sure(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
+def _how_sure(name: str, metrics: Mapping[str, Metric], suffix: str, *, but: str) -> str:
     """Return how sure it is that this term is the largest."""
     first = metrics[f'budget_{name}_rms{suffix}']
     others = {other: metrics[key] for other in TERMS
-              if other != name and (key := f'budget_{other}_rms{suffix}') in metrics
+              if other not in (name, but) and (key := f'budget_{other}_rms{suffix}') in metrics
               and metrics[key].value is not None}
     if not others:
         return 'no other term could be formed beside it'

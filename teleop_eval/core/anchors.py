@@ -34,6 +34,20 @@ class AnchorBook:
         self._seen = False
         self.interrupt()
 
+    def notes(self, name: str) -> list[str]:
+        """Return the sentences on anchors of arm `name` that could not be read."""
+        found = []
+        if self.from_first_cell:
+            found.append(
+                f'{name}: the first engagement began before hand and tool were both there, so '
+                'relative and rate mappings are anchored at the first sample of both; the '
+                'constant part of their error is not seen until the next engagement.')
+        if self.unknown:
+            found.append(
+                f'{name}: {self.unknown} engagements began where hand or tool was not seen; for '
+                'relative and rate mappings there is no ideal command until the next one.')
+        return found
+
     def interrupt(self) -> None:
         """Forget the last cell, which the next window does not follow."""
         self._before: dict[str, Track] = {}

@@ -381,6 +381,11 @@ class ArmEvaluator:
                 self.problems.say(f'{self.name}: no {_WHOSE[role]} description came on '
                                   f'{topic}{within}; evaluated without it.')
 
+    def all_notes(self) -> list[str]:
+        """Return every note, those on the beginnings of engagements last."""
+        return self.notes.texts() + (
+            [] if self.measurement is None else self.measurement.ideal.anchors.notes(self.name))
+
     def all_problems(self) -> list[str]:
         """Return every problem sentence, each with how often it was met if more than once."""
         return self.problems.texts() + [

@@ -130,6 +130,11 @@ class BudgetStatistics:
         place = int(row.argmin())
         return TERMS[place] if row[place] < 0.0 else ''
 
+    def cancels(self, name: str) -> str:
+        """Return the term that a term of negative share works against, '' if it is positive."""
+        shares = self._shares.get(name)
+        return self.cancelled(name) if shares is not None and shares.mean < 0.0 else ''
+
     def metrics(self, *, why: Mapping[str, tuple[str, str]]) -> dict[str, Metric]:
         """
         Return discrepancy and terms: RMS, static mean, varying part, share.

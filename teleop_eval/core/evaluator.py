@@ -221,7 +221,7 @@ class SessionEvaluator:
     def notes(self) -> list[str]:
         """Return further sentences, such as why receive time is used."""
         return self._notes.texts() + [
-            text for arm in self.arms.values() for text in arm.notes.texts()]
+            text for arm in self.arms.values() for text in arm.all_notes()]
 
     def summary(self) -> dict[str, Any]:
         """Return the evaluation as it stands, in plain types."""

@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from teleop_eval.core.advice import WORDS, largest_term, plain_words
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.inputs_status import InputsStatus
 from teleop_eval.core.latency_status import LatencyStatus
@@ -19,6 +20,7 @@ from teleop_eval.core.metric import NOT_CONFIGURED, Metric, missing
 from teleop_eval.core.phase import Phase, seconds
 from teleop_eval.core.results import LEVEL_OK, LEVEL_STALE, LEVEL_WARN, StatusLine
 from teleop_eval.core.settings import ThresholdSettings
+from teleop_eval.core.window_budget import POSITION, Space
 
 
 class ArmStatus:
@@ -90,11 +92,13 @@ class ArmStatus:
         return newest.metrics[name]
 
     def _tracking(self, now_ns: int, thresholds: ThresholdSettings) -> StatusLine:
-        tool, joint = self._metric('tracking_error_rms_norm'), self._metric('joint_error_rms')
-        compensated = self._metric('tracking_error_compensated_rms_norm')
+        space = self._space()
+        tool = self._metric(f'tracking_error_rms{space.suffix}')
+        joint = self._metric('joint_error_rms')
+        compensated = self._metric(f'tracking_error_compensated_rms{space.suffix}')
         number = ''
         if tool.value is not None:
-            number = f'tracking error {tool.value:.3f} arm lengths RMS'
+            number = f'tracking error {tool.value:.3f} {space.unit} RMS'
         elif joint.value is not None:
             number = f'joint error {joint.value:.4f} {joint.unit} RMS'
         line = self._without_number('tracking', number, now_ns, thresholds)
@@ -104,8 +108,8 @@ class ArmStatus:
         assert measured is not None and measured.newest is not None  # else it waits
         values = {'mapping': measured.newest.mapping}
         for label, metric, unit in (
-                ('tracking error RMS', tool, 'arm lengths'),
-                ('delay-compensated RMS', compensated, 'arm lengths'),
+                ('tracking error RMS', tool, space.unit),
+                ('delay-compensated RMS', compensated, space.unit),
                 ('joint error RMS', joint, joint.unit or 'rad')):
             values[f'{label} ({unit})'] = (
                 metric.status if metric.value is None else f'{metric.value:.4f}')
@@ -115,7 +119,30 @@ class ArmStatus:
             aside = () if tool.status == NOT_CONFIGURED else ('command',)
             why = self.phase.silent(now_ns, thresholds.stale_s, but=aside)
             number = f'no tracking error: {why or tool.reason.rstrip(".")}'
-        return StatusLine(f'{self._arm.name}: tracking', LEVEL_OK, number, values)
+        words = self._largest_term(values)
+        return StatusLine(f'{self._arm.name}: tracking', LEVEL_OK,
+                          f'{number}; {words}' if words else number, values)
+
+    def _space(self) -> Space:
+        measured = self._arm.measurement
+        return POSITION if measured is None or measured.label < 0 else (
+            measured.space(measured.label))
+
+    def _largest_term(self, values: dict[str, str]) -> str:
+        """Return the largest term of the newest window in plain words; add all to `values`."""
+        measured = self._arm.measurement
+        assert measured is not None and measured.newest is not None  # else it waits
+        space, metrics = self._space(), measured.newest.metrics
+        for term, words in WORDS.items():
+            metric = metrics.get(f'budget_{term}_rms{space.suffix}')
+            if metric is not None and metric.value is not None:
+                values[f'{words} RMS ({space.unit})'] = f'{metric.value:.4f}'
+        largest = largest_term(metrics, space.suffix)
+        if not largest:
+            return ''
+        cancels = measured.accumulators[measured.label].budget.cancels(largest)
+        return 'largest part: ' + plain_words(
+            metrics, delays_s=measured.delays_s, cancels=cancels, suffix=space.suffix)
 
     def _workspace(self, now_ns: int, thresholds: ThresholdSettings) -> StatusLine:
         measured = self._arm.measurement

@@ -33,7 +33,8 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
             label = arm.boundaries.labels[index]
             mappings[label] = {
                 'condition': CONDITION,
-                'advice': what_first(label, metrics, measured.space(index).suffix),
+                'advice': what_first(label, metrics, measured.space(index).suffix,
+                                     clutched=_anchored(arm, label)),
                 'metrics': {name: metrics[name].to_dict() for name in metrics},
             }
     base = arm.chosen
@@ -52,6 +53,11 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
         'inputs': _inputs(arm, simulated_time=simulated_time),
         'mappings': mappings,
     }
+
+
+def _anchored(arm: ArmEvaluator, label: str) -> bool:
+    model = arm.setup.models.get(label)
+    return model is not None and model.anchored
 
 
 def _receive_dependent(arm: ArmEvaluator, mappings: dict[str, Any]) -> list[str]:
