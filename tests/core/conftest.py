@@ -11,6 +11,7 @@ from pathlib import Path
 import pytest
 
 from teleop_eval.core import arm as arm_module
+from teleop_eval.core import operator_side as operator_module
 
 
 def _load(name):
@@ -42,6 +43,22 @@ def _known_robots():
     return remembered
 
 
+@pytest.fixture(scope='session')
+def _known_operators():
+    make, known = operator_module.operator_arm, {}
+
+    def remembered(settings, urdf, *, source):
+        key = repr((settings.base_link, settings.tip_link, settings.shoulder_link,
+                    settings.shoulder_m, settings.stature_m, settings.description_stature_m,
+                    urdf, source))
+        if key not in known:
+            known[key] = make(settings, urdf, source=source)
+        return known[key]
+
+    return remembered
+
+
 @pytest.fixture(autouse=True)
-def _remember_robots(monkeypatch, _known_robots):
+def _remember_robots(monkeypatch, _known_robots, _known_operators):
     monkeypatch.setattr(arm_module, 'robot_geometry', _known_robots)
+    monkeypatch.setattr(operator_module, 'operator_arm', _known_operators)
