@@ -9,6 +9,7 @@ nor the numbers of other mappings.
 
 from __future__ import annotations
 
+from dataclasses import fields
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -18,11 +19,12 @@ from teleop_eval.core.mappings.base import (
     GIVES,
     NEEDS,
     VELOCITY,
+    Anchor,
     Ideal,
     MappingModel,
     OperatorCells,
 )
-from teleop_eval.core.mappings.registry import BrokenKind, known_kinds
+from teleop_eval.core.mappings.registry import BUILT_IN, BrokenKind, known_kinds
 from teleop_eval.core.mappings.settings import MappingSettings
 from teleop_eval.core.sentences import cut, listed, nearest, shown
 
@@ -50,22 +52,81 @@ def make_mapping(label: str, settings: MappingSettings, operator: OperatorGeomet
                           f'only {listed(kinds)}; {hint}')
     if isinstance(kind, BrokenKind):
         raise ConfigError(f'mapping {label!r} cannot be modelled: {kind.why}')
+    if settings.kind in BUILT_IN:
+        return kind(label, settings, operator, robot)
     try:
         settings.fault(label)
         settings.operator_joints()
-        model = kind(label, settings, operator, robot)
+        return _Foreign(label, settings.kind, kind(label, settings, operator, robot))
     except TeleopEvalError:
         raise
     except Exception as error:
         raise ConfigError(f'mapping {label!r} of kind {settings.kind} cannot be modelled, since '
-                          f'{kind.__name__} failed: {_said(error)}; correct it or its '
+                          f'{kind.__name__} failed ({_said(error)}); correct it or its '
                           'settings.') from error
-    for name, value, choices in (('needs', model.needs, NEEDS), ('gives', model.gives, GIVES)):
-        if value not in choices:
-            raise ConfigError(f'mapping {label!r} of kind {settings.kind} cannot be modelled, '
-                              f'since its {name} is {shown(value)}, not one of '
-                              f'{", ".join(map(repr, choices))}; correct {kind.__name__}.')
-    return model
+
+
+class _Fault(Exception):
+    """What a model did wrong before it was asked for its ideal command."""
+
+
+class _Foreign(MappingModel):
+    """
+    A model of another package.
+
+    What it fails to do between windows is kept and told with its next ideal command, so that
+    whoever uses a model need not be on guard.
+    """
+
+    def __init__(self, label: str, kind: str, model: MappingModel) -> None:
+        for name, value, choices in (('needs', model.needs, NEEDS),
+                                     ('gives', model.gives, GIVES)):
+            if value not in choices:
+                raise ConfigError(
+                    f'mapping {label!r} of kind {kind} cannot be modelled, since its {name} is '
+                    f'{shown(value)}, not one of {", ".join(map(repr, choices))}; correct '
+                    f'{type(model).__name__}.')
+        self._model = model
+        self._fault = ''
+        self.needs, self.gives = model.needs, model.gives
+        self.anchored = bool(model.anchored)
+        self.scales_by_arm_lengths = bool(model.scales_by_arm_lengths)
+        self.estimates_tool_rotation = bool(model.estimates_tool_rotation)
+
+    def take_tool_rotation(self, hand_to_tool: np.ndarray) -> None:
+        """Pass it on."""
+        try:
+            self._model.take_tool_rotation(hand_to_tool.copy())
+        except Exception as error:
+            self._fault = f'take_tool_rotation() raised {_said(error)}'
+
+    def restart(self) -> None:
+        """Pass it on."""
+        try:
+            self._model.restart()
+        except Exception as error:
+            self._fault = f'restart() raised {_said(error)}'
+
+    def ideal(self, cells: OperatorCells) -> Ideal:
+        """Return what the model makes of the cells, which it cannot change."""
+        if self._fault:
+            raise _Fault(self._fault)
+        return self._model.ideal(_read_only(cells))
+
+
+def _read_only(cells: OperatorCells) -> OperatorCells:
+    """Return the same cells; what writes into them fails instead of changing other results."""
+    def locked(value: Any) -> Any:
+        if not isinstance(value, np.ndarray):
+            return value
+        view = value.view()
+        view.flags.writeable = False
+        return view
+
+    def all_locked(of: Any) -> dict[str, Any]:
+        return {one.name: locked(getattr(of, one.name)) for one in fields(of)}
+    anchors = {number: Anchor(**all_locked(anchor)) for number, anchor in cells.anchors.items()}
+    return OperatorCells(**{**all_locked(cells), 'anchors': anchors})
 
 
 def checked_fault(settings: MappingSettings, key: str) -> str:
@@ -99,6 +160,8 @@ def checked_ideal(model: MappingModel, cells: OperatorCells) -> Ideal | str:
     """
     try:
         ideal = model.ideal(cells)
+    except _Fault as earlier:
+        return str(earlier)
     except Exception as error:
         return f'ideal() raised {_said(error)}'
     if not isinstance(ideal, Ideal):
@@ -110,18 +173,22 @@ def checked_ideal(model: MappingModel, cells: OperatorCells) -> Ideal | str:
         value = getattr(ideal, name)
         if value is None and name != 'positions_m':
             continue
-        if fault := _array_fault(value, (count, width)):
+        if fault := _array_fault(value, count, width):
             return f'ideal() returned {name} {fault}'
     if model.gives == VELOCITY and ideal.velocities_mps is None:
         return 'ideal() returned no velocities_mps, although the kind gives velocities'
     return ideal
 
 
-def _array_fault(value: Any, shape: tuple[int, int]) -> str:
+def _array_fault(value: Any, count: int, width: int) -> str:
+    wanted = f'(m, {width}) is expected for m cells'
     if not isinstance(value, np.ndarray):
-        return f'as {type(value).__name__} where an array of shape {shape} is expected'
-    if value.shape != shape:
-        return f'of shape {value.shape} where {shape} is expected'
+        return f'as {type(value).__name__} where an array of shape {wanted}'
+    if value.shape[:1] != (count,):
+        return f'with another number of rows than there are cells where {wanted}'
+    if value.shape != (count, width):
+        # The number of cells differs from window to window; the sentence should not.
+        return f'of shape ({", ".join(["m", *map(str, value.shape[1:])])}) where {wanted}'
     if value.dtype != np.float64:
         return f'of type {value.dtype} where float64 is expected'
     return ''

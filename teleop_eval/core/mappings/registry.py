@@ -55,9 +55,14 @@ def register_kind(name: str, cls: type[MappingModel]) -> None:
     _added[name] = cls
 
 
-def register_broken(name: str, why: str) -> None:
+def register_broken(name: str, why: str) -> bool:
     """
     Note a kind that cannot be used: its mappings are reported, and the run goes on.
+
+    Returns
+    -------
+    bool
+        False if another package has a sound kind of that name, which stays.
 
     Raises
     ------
@@ -66,7 +71,7 @@ def register_broken(name: str, why: str) -> None:
 
     """
     _check_name(name)
-    _added.setdefault(name, BrokenKind(why))
+    return isinstance(_added.setdefault(name, BrokenKind(why)), BrokenKind)
 
 
 def forget_kind(name: str) -> None:
