@@ -11,6 +11,7 @@ from teleop_eval.core.advice import what_first
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
 from teleop_eval.core.budget_summary import budget_metrics
+from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
@@ -19,6 +20,8 @@ from teleop_eval.core.response_summary import response_metrics
 from teleop_eval.core.window_budget import VELOCITY
 
 CONDITION = 'teleoperated'
+_TOPIC_OF = {HAND: 'operator.hand_topic', OPERATOR_JOINTS: 'operator.joints_topic',
+             RATE_INPUT: 'operator.rate_topic'}
 _RATE = 'a rate mapping commands velocities: positions and orientations follow from no input'
 
 
@@ -65,12 +68,14 @@ def _receive_dependent(arm: ArmEvaluator, mappings: dict[str, Any]) -> list[str]
     Name the metrics that a recording by another process would give a little differently.
 
     Transport ages are made of receive times. Clutch and mapping messages have no stamps:
-    where they switch is known by their arrival. On receive time everything depends on it.
+    where they switch is known by their arrival. On receive time everything depends on it,
+    and after a calibration, whose interval is counted in it.
     """
     names = {'transport_age_min_s', 'transport_age_s', 'transport_age_jitter_s'}
     if arm.states:
         names |= {'engaged_time_s', 'engagements', 'engagement_rate_per_min'}
-    if arm.chosen is not None and not arm.chosen.by_stamp:
+    if (arm.chosen is not None and not arm.chosen.by_stamp) or (
+            arm.operator_side.calibration is not None):
         names |= {name for mapping in mappings.values() for name in mapping['metrics']}
     return sorted(names)
 
@@ -149,9 +154,9 @@ def _joint_metrics(arm: ArmEvaluator, accumulator: MappingAccumulator,
         'joint_error_compensated', **_why_no_delay(accumulator), caveat=caveat)
     found: dict[str, Metric] = raw | compensated
     command = arm.intakes.get('command')
-    if command is None or command.posed:
-        why = ('command.topic is not configured' if command is None
-               else 'the command is a tool pose, not joints')
+    if command is None or command.posed or command.velocities:
+        why = ('command.topic is not configured' if command is None else
+               f'the command is a tool {"pose" if command.posed else "velocity"}, not joints')
         return {name: missing(NOT_CONFIGURED, metric.unit, why)
                 for name, metric in found.items()}
     if len(arm.setup.joint_names) > 1 and UNKNOWN_UNIT in arm.setup.joint_units:
@@ -192,7 +197,7 @@ def _why_no_ideal(arm: ArmEvaluator, measured: ArmMeasurement, label: str) -> st
     if measured.ideal.faults.get(label) and label not in measured.ideal.made:
         return f'mapping {label!r} failed: {measured.ideal.faults[label]}'
     if not has_input(model.needs, arm.intakes, arm.operator):
-        topic = 'operator.hand_topic' if model.needs == 'hand' else 'operator.joints_topic'
+        topic = _TOPIC_OF[model.needs]
         return f'mapping {label!r} needs {topic}'
     return ''
 
