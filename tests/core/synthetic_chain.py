@@ -17,6 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import synthetic_session as syn
 from scipy.linalg import expm
+from scipy.spatial.transform import Rotation
 
 from teleop_eval.core.latency import DelaySettings, estimate_delay
 
@@ -40,6 +41,7 @@ class Chain:
     servo: tuple[float, float] | None = None
     noise: float = 0.0
     clutch: tuple[tuple[float, float], ...] = ()
+    turn_offset: tuple[float, float, float] | None = None
 
 
 @dataclass(frozen=True)
@@ -130,16 +132,28 @@ def messages(chain: Chain, motion: Motion, *, command: bool = True, seed: int = 
         made.flag(-0.5, '/clutch', False)
         for on, off in chain.clutch:
             made.flag(on, '/clutch', True).flag(off, '/clutch', False)
+    def turns(times):
+        if chain.turn_offset is None:
+            return None
+        return Rotation.from_rotvec(
+            syn.wander(7, centre=(0.0, 0.0, 0.0), size=0.3)(times))
+
     t = syn.clock(0.0, end, 100.0)
-    made.poses('/hand', t, 0.6 * at(motion.operator, t))
+    turned = turns(t)
+    made.poses('/hand', t, 0.6 * at(motion.operator, t),
+               None if turned is None else turned.as_quat())
     t = syn.clock(0.0, end, 125.0, phase=0.7)
     # Encoders are ten times better than trackers.
     noisy = at(motion.robot, t) + 0.1 * chain.noise * rng.standard_normal((len(t), 3))
-    made.joints('/joints', t, syn.joints_for(noisy))
+    turned = turns(t - chain.processing_s - chain.transport_s)
+    if turned is not None:
+        turned = turned * Rotation.from_rotvec(chain.turn_offset)
+    made.joints('/joints', t, syn.joints_for(noisy, turned))
     if command:
         # The stack commands when it gets the hand, a processing time later.
         t = syn.clock(0.0, end, 100.0, phase=0.3 + 100.0 * chain.processing_s)
-        made.joints('/command', t, syn.joints_for(at(motion.command, t)))
+        made.joints('/command', t, syn.joints_for(
+            at(motion.command, t), turns(t - chain.processing_s)))
     return made
 
 

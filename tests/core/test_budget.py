@@ -185,3 +185,11 @@ def test_what_to_fix_first_and_how_sure():
     none = {f'budget_{name}_rms_norm': missing('unobservable', 'arm lengths', 'no delay')
             for name in TERMS}
     assert what_first('reach', none) == 'reach: cannot say what to fix first: no delay.'
+
+
+def test_the_offset_of_clutching_is_no_fault():
+    """Under a mapping anchored at each engagement, hand and tool are meant to be apart."""
+    sentence = what_first('ratchet', measured(0.4, 0.05, ci=0.1), clutched=True)
+    assert 'fix first the time the robot takes to follow' in sentence
+    assert 'the 0.400 of the mapping hold the offset' in sentence
+    assert 'which is meant' in sentence

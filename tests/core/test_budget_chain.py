@@ -33,6 +33,8 @@ CASES = {
     'sluggish servo': chains.Chain(servo=(12.0, 0.9)),
     'noise': chains.Chain(transport_s=0.05, noise=0.001),
     'clutch': chains.Chain(relative=True, scale=(0.8,) * 3, transport_s=0.08, clutch=CLUTCH),
+    'orientation offset': chains.Chain(
+        scale=(0.9,) * 3, transport_s=0.07, turn_offset=(0.1, -0.2, 0.05)),
     'all': chains.Chain(scale=(0.9, 0.8, 0.7), offset=(0.05, 0.0, 0.02), processing_s=0.02,
                         filter_s=0.05, command_offset=(0.0, 0.02, 0.0), transport_s=0.06,
                         servo=(18.0, 0.7), noise=0.001),
@@ -58,6 +60,8 @@ def parameters(chain: chains.Chain, command: bool = True) -> dict:
             syn.SHOULDER_M + syn.REACH_M * np.array(chain.offset)).tolist()
     if command:
         more['command__topic'] = '/command'
+    if chain.turn_offset is not None:
+        more['mappings__direct__hand_to_tool_xyzw'] = [0.0, 0.0, 0.0, 1.0]
     if chain.clutch:
         more['engaged__topic'] = '/clutch'
     return syn.arm_parameters(**more)
@@ -97,6 +101,16 @@ def test_terms_are_those_of_the_noise_free_chain(name):
         assert sum(one['value'] for one in shares.values()) == pytest.approx(1.0, abs=1e-9)
         for term, one in shares.items():
             assert one['value'] == pytest.approx(true[term]['share'], rel=0.05, abs=0.02), term
+
+
+def test_an_orientation_offset_is_the_static_part():
+    """Its angle is |(0.1, -0.2, 0.05)| = 0.22913 rad; nothing of it is in the budget."""
+    found, true, _ = evaluated(CASES['orientation offset'])
+    static = found['orientation_error_compensated_static_rad']
+    assert static['value'] == pytest.approx(0.22913, abs=1e-3)
+    assert found['orientation_error_compensated_varying_rad']['value'] < 2e-3
+    assert found['budget_residual_rms_norm']['value'] < 1e-3
+    assert true['residual']['rms'] < 1e-3
 
 
 def test_without_a_command_topic_there_are_three_terms():
