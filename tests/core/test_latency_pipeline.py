@@ -6,12 +6,19 @@ Latency through the whole evaluator: streams in, window results out.
 The delay put in is exact by construction: the hand (or the operator's joints) is computed from
 the same smooth motion as the robot's joints, `delay` seconds earlier. The arm is that of the
 demonstration cell, whose link ratio is unlike a person's.
+
+Every stream has noise on its values, irregular sampling times, noise on its stamps, lost samples
+and gaps. Elsewhere, on the estimator alone: the bound on the spread, windows that are barely
+excited, reaches with rests and a step of the delay (test_latency_montecarlo.py), each reason
+word by word (test_latency.py).
 """
 
 from __future__ import annotations
 
 import heapq
 from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from operator import itemgetter
 
 import numpy as np
 import pytest
@@ -20,7 +27,7 @@ from scipy.signal import butter, sosfiltfilt
 
 from teleop_eval.core.evaluator import SessionEvaluator
 from teleop_eval.core.kinematics import SerialChain
-from teleop_eval.core.metric import OK
+from teleop_eval.core.metric import OK, UNOBSERVABLE, Metric
 from teleop_eval.core.samples import JointSample, PoseSample
 from teleop_eval.core.settings import from_parameters
 from teleop_eval.core.urdf import parse_urdf
@@ -35,16 +42,22 @@ CENTRE = np.array([0.1, 0.4, -0.9, 0.0, 0.3, 0.0])
 START_NS = 1_700_000_000_000_000_000
 WINDOWS = 205
 WINDOW_S = 10.0
+# Shorter at 1 kHz, since the work goes with the number of samples: as independent as others.
+FAST_WINDOW_S = 4.0
+# What a driver takes to note the time of a sample: one standard deviation. At 1 kHz, together
+# with the irregular sampling, some samples change places by it.
+STAMP_NOISE_S = 0.0002
 
 BASE = {
     'arms.a.robot.joints_topic': '/robot', 'arms.a.robot.description_file': 'arm.urdf',
     'arms.a.robot.base_link': 'teardown_arm_base', 'arms.a.robot.tip_link': 'teardown_arm_tool',
-    # One window of each kind every 10 s: independent, and no work for what is not asked.
-    'time.window_s': WINDOW_S, 'latency.window_s': WINDOW_S, 'latency.hop_s': WINDOW_S,
 }
 
 
-def smooth_motion(rng: np.random.Generator, seconds: float) -> Callable[[np.ndarray], np.ndarray]:
+Motion = Callable[[np.ndarray], np.ndarray]
+
+
+def smooth_motion(rng: np.random.Generator, seconds: float) -> Motion:
     """Return joint angles (n, 6) of 0.2 to 2 Hz as a function of time (n,), rad."""
     rate = 50.0
     white = rng.standard_normal((int(seconds * rate) + 500, 6))
@@ -63,6 +76,11 @@ def sample_times(rng: np.random.Generator, rate_hz: float, seconds: float) -> np
     return times[kept]
 
 
+def stamped(rng: np.random.Generator, times: np.ndarray, noise_s: float) -> list[int]:
+    """Return the stamps (n,) that a sensor with a poor clock gives to samples at these times."""
+    return [START_NS + round(t * 1e9) for t in times + rng.normal(0.0, noise_s, len(times))]
+
+
 def joint_space(delay_s: float) -> tuple[dict, Callable]:
     """Return the parameters of a joint-space mapping and the maker of the operator's samples."""
     flat = dict(BASE)
@@ -72,11 +90,11 @@ def joint_space(delay_s: float) -> tuple[dict, Callable]:
         key = f'arms.a.mappings.direct.joints.{name}'
         flat |= {f'{key}.source': source, f'{key}.scale': GAIN, f'{key}.offset': OFFSET}
 
-    def operator(times, motion, rng) -> Iterator[tuple[float, str, object]]:
+    def operator(times, stamps, motion, rng) -> Iterator[tuple[float, str, object]]:
         values = (motion(times + delay_s) - OFFSET) / GAIN
         values += rng.normal(0.0, 1e-3, values.shape)
-        for t, row in zip(times.tolist(), values, strict=True):
-            yield t, '/operator', JointSample(START_NS + round(t * 1e9), SOURCES, row, None)
+        for t, stamp, row in zip(times.tolist(), stamps, values, strict=True):
+            yield t, '/operator', JointSample(stamp, SOURCES, row, None)
 
     return flat, operator
 
@@ -92,56 +110,134 @@ def task_space(delay_s: float) -> tuple[dict, Callable]:
         'arms.a.mappings.reach.robot_center_m': centre.tolist(),
     }
 
-    def operator(times, motion, rng) -> Iterator[tuple[float, str, object]]:
+    def operator(times, stamps, motion, rng) -> Iterator[tuple[float, str, object]]:
         tool = CHAIN.positions(motion(times + delay_s))
         hand = shoulder + (tool - centre) / 1.4 + rng.normal(0.0, 5e-4, tool.shape)
-        for t, row in zip(times.tolist(), hand, strict=True):
-            yield t, '/operator', PoseSample(START_NS + round(t * 1e9), row, None, 'base')
+        for t, stamp, row in zip(times.tolist(), stamps, hand, strict=True):
+            yield t, '/operator', PoseSample(stamp, row, None, 'base')
 
     return flat, operator
 
 
-def estimates(mapping: Callable, rate_hz: float, delay_s: float, seed: int) -> np.ndarray:
-    """Return (delay, standard error) of every window, NaN where there is no value."""
-    rng = np.random.default_rng(seed)
-    seconds = WINDOWS * WINDOW_S + 2.0
-    motion = smooth_motion(rng, seconds + 2.0)
-    flat, operator = mapping(delay_s)
+@dataclass(frozen=True)
+class Pair:
+    """What the operator and the robot do, in joint angles (n, 6) rad over seconds (n,)."""
 
-    def robot(times: np.ndarray) -> Iterator[tuple[float, str, object]]:
-        values = motion(times) + rng.normal(0.0, 1e-3, (len(times), 6))
-        for t, row in zip(times.tolist(), values, strict=True):
-            yield t, '/robot', JointSample(START_NS + round(t * 1e9), NAMES, row, None)
+    operator: Motion
+    robot: Motion
+
+
+def latencies(mapping: Callable, rate_hz: float, delay_s: float, pair: Pair, *,
+              rng: np.random.Generator, windows: int = WINDOWS, window_s: float = WINDOW_S,
+              stamp_noise_s: float = STAMP_NOISE_S) -> list[Metric]:
+    """Return latency_s of every window of a whole run."""
+    flat, operator = mapping(delay_s)
+    # One window of each kind at a time: independent, and no work for what is not asked.
+    flat |= {'time.window_s': window_s, 'latency.window_s': window_s, 'latency.hop_s': window_s}
+    seconds = windows * window_s + 2.0
+
+    def robot(times: np.ndarray, stamps: list[int]) -> Iterator[tuple[float, str, object]]:
+        values = pair.robot(times) + rng.normal(0.0, 1e-3, (len(times), 6))
+        for t, stamp, row in zip(times.tolist(), stamps, values, strict=True):
+            yield t, '/robot', JointSample(stamp, NAMES, row, None)
 
     evaluator = SessionEvaluator(from_parameters(flat), descriptions={'a': URDF})
-    feed = heapq.merge(operator(sample_times(rng, rate_hz, seconds), motion, rng),
-                       robot(sample_times(rng, rate_hz, seconds)), key=lambda item: item[0])
+    seen, answered = (sample_times(rng, rate_hz, seconds) for _ in range(2))
+    feed = heapq.merge(operator(seen, stamped(rng, seen, stamp_noise_s), pair.operator, rng),
+                       robot(answered, stamped(rng, answered, stamp_noise_s)), key=itemgetter(0))
     last_ns = 0
     for t, topic, sample in feed:
         last_ns = max(START_NS + round(t * 1e9) + 500_000, last_ns + 1)
         evaluator.add(last_ns, topic, sample)
-    found = []
-    for window in evaluator.poll():
-        metric = window.metrics['latency_s']
-        found.append((metric.value, metric.details['standard_error_s'])
-                     if metric.status == OK else (np.nan, np.nan))
-    return np.array(found)
+    # The grid is as fast as the streams, what they lose left out of account.
+    assert 1e9 / evaluator.arms['a'].period_ns == pytest.approx(rate_hz, rel=0.03)
+    return [window.metrics['latency_s'] for window in evaluator.poll()]
 
 
-@pytest.mark.parametrize(('mapping', 'rate_hz', 'delay_s'), [
-    (joint_space, 50.0, 0.0137),
-    (joint_space, 200.0, 0.2172),
-    (task_space, 50.0, 0.4),
-    (task_space, 200.0, 0.0613),
+@pytest.mark.parametrize(('mapping', 'rate_hz', 'delay_s', 'window_s'), [
+    (joint_space, 50.0, 0.0137, WINDOW_S),
+    (joint_space, 200.0, 0.2172, WINDOW_S),
+    (joint_space, 1000.0, 0.0874, FAST_WINDOW_S),
+    (task_space, 50.0, 0.0, WINDOW_S),
+    (task_space, 50.0, 0.4, WINDOW_S),
+    (task_space, 200.0, 0.0613, WINDOW_S),
+    (task_space, 1000.0, 0.3129, FAST_WINDOW_S),
 ])
-def test_latency_is_unbiased_and_knows_its_error(mapping, rate_hz: float, delay_s: float):
+def test_latency_is_unbiased_and_knows_its_error(mapping, rate_hz: float, delay_s: float,
+                                                 window_s: float):
     """Bias under a tenth of a grid step, honest standard error, at least 95 % of the windows."""
-    found = estimates(mapping, rate_hz, delay_s, seed=int(rate_hz + 1000 * delay_s))
+    rng = np.random.default_rng(int(rate_hz + 1000 * delay_s))
+    motion = smooth_motion(rng, WINDOWS * window_s + 4.0)
+    found = latencies(mapping, rate_hz, delay_s, Pair(motion, motion), rng=rng,
+                      window_s=window_s)
     assert len(found) >= 200
-    given = np.isfinite(found[:, 0])
-    assert given.mean() >= 0.95
-    errors = found[given, 0] - delay_s
+    given = [metric for metric in found if metric.status == OK]
+    assert len(given) >= 0.95 * len(found)
+    errors = np.array([metric.value for metric in given]) - delay_s
+    claimed = np.array([metric.details['standard_error_s'] for metric in given])
     step_s = 1.0 / max(50.0, rate_hz)
     spread = errors.std(ddof=1)
     assert abs(errors.mean()) < 0.1 * step_s + 2.0 * spread / np.sqrt(len(errors))
-    assert 0.7 < np.sqrt(np.mean(found[given, 1] ** 2)) / spread < 1.4
+    assert 0.7 < np.sqrt(np.mean(claimed ** 2)) / spread < 1.4
+
+
+@pytest.mark.xfail(strict=True, reason=(
+    'the standard error takes the axes for independent, but a false stamp moves them all at '
+    'once: it is too small by about the square root of their number'))
+def test_standard_error_knows_of_stamps_that_are_off():
+    """Stamps off by 1 ms at 50 Hz spread the delay more than the noise of the values does."""
+    rng, delay_s = np.random.default_rng(5), 0.0613
+    motion = smooth_motion(rng, WINDOWS * WINDOW_S + 4.0)
+    found = latencies(joint_space, 50.0, delay_s, Pair(motion, motion), rng=rng,
+                      stamp_noise_s=0.001)
+    errors = np.array([metric.value for metric in found]) - delay_s
+    claimed = np.array([metric.details['standard_error_s'] for metric in found])
+    assert abs(errors.mean()) < 0.002
+    assert 0.7 < np.sqrt(np.mean(claimed ** 2)) / errors.std(ddof=1) < 1.4
+
+
+def still(times: np.ndarray) -> np.ndarray:
+    """Return a posture that is held, joint angles (n, 6) rad."""
+    return np.tile(CENTRE, (len(times), 1))
+
+
+def waves(period_s: float, size: float) -> Motion:
+    """Return a motion of all joints that repeats itself."""
+    phases = np.array([0.0, 1.5, 0.7, 2.1, 3.0, 0.3])
+
+    def motion(times: np.ndarray) -> np.ndarray:
+        return CENTRE + size * np.sin(2.0 * np.pi * times[:, None] / period_s + phases)
+    return motion
+
+
+@pytest.mark.parametrize(('mapping', 'kind', 'words'), [
+    (joint_space, 'still', ['hardly moves', 'too low']),
+    (task_space, 'still', ['hardly moves', 'too low']),
+    (joint_space, 'slow', ['too slow', 'hardly moves']),
+    (task_space, 'slow', ['too slow', 'hardly moves']),
+    (joint_space, 0.5, ['periodic', 'second peak']),
+    (task_space, 0.8, ['periodic', 'second peak']),
+    (joint_space, 1.2, ['periodic', 'second peak']),
+    (joint_space, 'unrelated', ['Correlation too low']),
+    (task_space, 'unrelated', ['Correlation too low']),
+])
+def test_what_tells_no_delay_gives_none_and_says_why(mapping, kind: str | float,
+                                                     words: list[str]):
+    """At most one of a hundred windows has a value; the others have the reason in words."""
+    rng, windows = np.random.default_rng(17), 100
+    seconds = windows * WINDOW_S + 4.0
+    if kind == 'unrelated':
+        pair = Pair(smooth_motion(rng, seconds), smooth_motion(rng, seconds))
+    else:
+        # Once in 40 s, by 0.15 rad: as slow as a change of posture.
+        both = (still if kind == 'still' else waves(40.0, 0.15) if kind == 'slow'
+                else waves(kind, 0.15))
+        pair = Pair(both, both)
+    found = latencies(mapping, 50.0, 0.1, pair, rng=rng, windows=windows)
+    assert len(found) >= windows
+    assert sum(metric.status == OK for metric in found) <= 0.01 * len(found)
+    without = [metric for metric in found if metric.status != OK]
+    assert {metric.status for metric in without} == {UNOBSERVABLE}
+    assert all(metric.value is None and metric.reason.endswith('.') for metric in without)
+    told = [metric for metric in without if any(word in metric.reason for word in words)]
+    assert len(told) >= 0.9 * len(without), {metric.reason for metric in without}
