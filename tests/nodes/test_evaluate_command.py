@@ -13,8 +13,11 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
-from live_helpers import write_settings
+from live_helpers import PATIENCE_S, ros, wait_until, write_settings
 from mcap.reader import make_reader
+from rclpy.duration import Duration
+from rclpy.node import Node
+from sensor_msgs.msg import JointState
 
 from teleop_eval.core.errors import ConfigError, UsageError
 from teleop_eval.nodes import evaluate
@@ -27,16 +30,31 @@ def environment() -> dict[str, str]:
     return {**os.environ, 'PYTHONPATH': str(ROOT), 'OMP_NUM_THREADS': '1'}
 
 
+def heed_hangup() -> None:
+    """Undo in a child that this test run may ignore SIGHUP, as under nohup, which is inherited."""
+    signal.signal(signal.SIGHUP, signal.SIG_DFL)
+
+
 @pytest.fixture
 def started(domain: int, tmp_path: Path) -> Iterator[subprocess.Popen[str]]:
     settings = write_settings(tmp_path)
     process = subprocess.Popen(
         [*COMMAND, '--ros-args', '--params-file', str(settings), '-p', 'session.name:=s'],
-        env=environment(), stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
+        env=environment(), stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
+        preexec_fn=heed_hangup)
     assert process.stderr is not None
-    for line in process.stderr:
-        if 'Session begins' in line:
-            break
+    with ros(domain) as context:
+        stack = Node('stack', context=context)
+        joints = stack.create_publisher(JointState, 'robot_joints', 100)
+        for line in process.stderr:
+            if '/robot_joints: found' in line:
+                break
+        wait_until(joints.get_subscription_count)
+        # Without any sample there is nothing to finish.
+        for _ in range(20):
+            joints.publish(JointState(name=['j1', 'j2'], position=[0.0, 0.0]))
+        assert joints.wait_for_all_acked(Duration(seconds=PATIENCE_S))
+        stack.destroy_node()
     yield process
     process.kill()
     process.communicate()
