@@ -17,6 +17,11 @@ import pytest
 
 pytestmark = pytest.mark.timeout(300)
 
+# A machine that delivers commands later than the simulated arm waits for them has changed the
+# arm's motion, and with it the truth: the demo says so, and is run again. What does not depend
+# on the machine is checked every time.
+ATTEMPTS = 3
+
 # Named like a node of the ROS command line, which is let in; prints the graph as JSON.
 WATCHER = """
 import json, sys, time, rclpy
@@ -91,31 +96,45 @@ def demo(cell_domain: int, tmp_path: Path) -> Iterator[subprocess.Popen[str]]:
         process.communicate()
 
 
-def test_the_demo_measures_the_truth_and_stays_inside(
-        demo: subprocess.Popen[str], cell_domain: int, tmp_path: Path) -> None:
-    read_until(demo, 'engaged')
-    watched = subprocess.run(
-        [sys.executable, '-c', WATCHER, str(cell_domain), '8'], capture_output=True, text=True,
-        env={**os.environ, 'ROS_AUTOMATIC_DISCOVERY_RANGE': 'LOCALHOST'}, timeout=90,
-        check=True)
-    output, errors = demo.communicate(timeout=200)
+@pytest.mark.timeout(300 * ATTEMPTS)
+def test_the_demo_measures_the_truth_and_stays_inside(cell_domain: int, tmp_path: Path) -> None:
+    for attempt in range(ATTEMPTS):
+        if _run_once(cell_domain, tmp_path / str(attempt)):
+            return
+    pytest.skip(f'The machine was too busy for the simulated arm in {ATTEMPTS} runs: no numbers '
+                'to check.')
+
+
+def _run_once(domain: int, out: Path) -> bool:
+    """Check a whole run of the demo; return whether the machine was fast enough for numbers."""
+    demo = start_demo(domain, out, 20.0)
+    try:
+        read_until(demo, 'engaged')
+        watched = subprocess.run(
+            [sys.executable, '-c', WATCHER, str(domain), '8'], capture_output=True, text=True,
+            env={**os.environ, 'ROS_AUTOMATIC_DISCOVERY_RANGE': 'LOCALHOST'}, timeout=90,
+            check=True)
+        output, errors = demo.communicate(timeout=200)
+    finally:
+        demo.kill()
+        demo.communicate()
     assert demo.returncode == 0, errors
     assert errors == ''
     _check_graph(json.loads(watched.stdout))
-    (session,) = tmp_path.iterdir()
+    (session,) = out.iterdir()
     summary = json.loads((session / 'summary.json').read_text())
     truth = json.loads((session / 'truth.json').read_text())
-    assert ('too busy' in output) == (truth['largest_command_lateness_s'] > 0.4)
-    if 'too busy' not in output:
-        _check_numbers(summary, truth)
     assert 'mirror' in output and 'reach' in output and 'truth' in output
     assert str(session) in output and 'teleop_eval summarize' in output
     assert 'injure' in output and 'no safety function' in output
     assert max(map(len, output.split('Computing the truth')[1].split('This cell is')[0]
                    .splitlines())) <= 80
-    assert processes_of(cell_domain) == []
+    assert processes_of(domain) == []
+    assert ('too busy' in output) == (truth['largest_command_lateness_s'] > 0.4)
     if 'too busy' in output:
-        pytest.skip('The machine was too busy for the simulated arm: no numbers to check.')
+        return False
+    _check_numbers(summary, truth)
+    return True
 
 
 def _check_graph(graph: dict) -> None:
@@ -137,10 +156,15 @@ def _check_numbers(summary: dict, truth: dict) -> None:
     for label, mapping in arm['mappings'].items():
         metrics = mapping['metrics']
         true = truth['mappings'][label]
-        assert metrics['latency_s']['status'] == 'ok', metrics['latency_s']['reason']
-        # One window of 4 s with noise: standard error about 1 ms (measured).
-        assert abs(metrics['latency_s']['value']
-                   - true['noise_free_correlation_delay_s']) < 0.006
+        latency = metrics['latency_s']
+        assert latency['status'] == 'ok', latency['reason']
+        # Within three standard errors, as the evaluator itself states them for one window. No
+        # allowance for the grid: the delay is found between its steps. Windows that lie
+        # elsewhere in the same motion than those of the truth differ by less than that. A
+        # statement of more than 2 ms would be no excuse (0.8 to 1.7 ms were seen in eight).
+        claimed = latency['details']['standard_error_s']
+        assert claimed < 0.002
+        assert abs(latency['value'] - true['noise_free_correlation_delay_s']) < 3.0 * claimed
         assert abs(metrics['latency_command_s']['value'] - 0.008) < 0.001
         # Without the delay, only noise is left between ideal and arm.
         assert metrics['tracking_error_compensated_rms_norm']['value'] < 0.01
