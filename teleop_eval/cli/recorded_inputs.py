@@ -20,9 +20,9 @@ Decoder = Callable[[bytes], Sample]
 
 # What the decoders call the kinds of message that serve each role of a topic.
 KIND_OF_ROLE = {
-    'hand': 'pose', 'shoulder': 'pose', 'operator_joints': 'joints', 'robot_joints': 'joints',
-    'command': 'command', 'engaged': 'bool', 'active_mapping': 'text', 'description': 'text',
-    'operator_description': 'text'}
+    'hand': 'pose', 'shoulder': 'pose', 'rate_input': 'rate', 'operator_joints': 'joints',
+    'robot_joints': 'joints', 'command': 'command', 'engaged': 'bool', 'active_mapping': 'text',
+    'description': 'text', 'operator_description': 'text'}
 # Kinds that messages of any other type may serve as, by the fields of their definition.
 _ANY_NAME = ('joints', 'command')
 _OR_FIELDS = ', or a type with name[] and position[] whose definition is recorded'

@@ -26,7 +26,7 @@ from teleop_eval.core.intake import RUN_ON, Intake
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.operator_side import OperatorSide
 from teleop_eval.core.results import WindowResult
-from teleop_eval.core.samples import BoolSample, Sample, TextSample, TrajectorySample
+from teleop_eval.core.samples import Sample, TextSample, TrajectorySample
 from teleop_eval.core.segment import NEVER_NS, Segment, SegmentInputs
 from teleop_eval.core.sentences import Sentences
 from teleop_eval.core.settings import ArmSettings, Settings
@@ -122,13 +122,12 @@ class ArmEvaluator:
                 self._make_ready()
 
     def _add_state(self, state: HeldState, receive_ns: int, sample: Sample) -> None:
-        wanted = BoolSample if state.role == 'engaged' else TextSample
-        if not isinstance(sample, wanted):
+        value = arm_setup.state_value(state.role, sample, self.arm.engaged.button)
+        if value is None:
             self.problems.say(f'{self.name}: {state.role} ({state.topic}): '
-                              f'{type(sample).__name__} is of no use here.')
+                              f'{arm_setup.no_state(sample, self.arm.engaged.button)}')
             return
         state.counts.messages += 1
-        value = sample.value if isinstance(sample, BoolSample) else sample.text
         if sentence := arm_setup.unknown_label(self.name, self.arm, value):
             self.problems.say(sentence)
         segment = self._segment

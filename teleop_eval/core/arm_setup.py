@@ -13,10 +13,11 @@ from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
 from teleop_eval.core.intake import Intake
 from teleop_eval.core.joint_match import JointMatcher
 from teleop_eval.core.mappings import MappingModel, MappingSettings, make_mapping
-from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS
+from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
 from teleop_eval.core.mappings.guarded import checked_operator_joints
 from teleop_eval.core.mappings.registry import is_modelled
 from teleop_eval.core.mappings.unmodelled import UNMODELLED
+from teleop_eval.core.samples import BoolSample, JoySample, Sample, TextSample
 from teleop_eval.core.sentences import listed, nearest, shown
 from teleop_eval.core.settings import ArmSettings
 from teleop_eval.core.streams import HeldState, SampledStream
@@ -112,6 +113,23 @@ def fixed_label(arm: ArmSettings) -> str | None:
     return next(iter(arm.mappings)) if len(arm.mappings) == 1 else UNMODELLED
 
 
+def state_value(role: str, sample: Sample, button: int) -> bool | str | None:
+    """Return what a sample says of a state, None if nothing; `button` is a joystick's clutch."""
+    if role != 'engaged':
+        return sample.text if isinstance(sample, TextSample) else None
+    if isinstance(sample, JoySample):
+        return bool(sample.buttons[button]) if button < len(sample.buttons) else None
+    return sample.value if isinstance(sample, BoolSample) else None
+
+
+def no_state(sample: Sample, button: int) -> str:
+    """Return why a sample says nothing of a state."""
+    if isinstance(sample, JoySample):
+        return (f'engaged.button is {button}, but a message has {len(sample.buttons)} buttons, '
+                'counted from 0; correct it.')
+    return f'{type(sample).__name__} is of no use here.'
+
+
 def unknown_label(name: str, arm: ArmSettings, label: object) -> str:
     """Return the sentence on a label that names none of the configured mappings, else ''."""
     if not label or not isinstance(label, str) or not arm.mappings or label in arm.mappings:
@@ -150,6 +168,7 @@ def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup,
     topics = {
         'hand': (arm.operator.hand_topic, None),
         'shoulder': (arm.operator.shoulder_topic, None),
+        RATE_INPUT: (arm.operator.rate_topic, None),
         'operator_joints': (arm.operator.joints_topic, JointMatcher(
             setup.operator_joint_names, arm.operator.joints,
             turning=frozenset() if operator.arm is None else operator.arm.turning)),
@@ -169,7 +188,7 @@ def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup,
                 'not evaluated.')
             continue
         stream = SampledStream(role, topic, held=role == 'command' and arm.command.hold)
-        setup.intakes[role] = Intake(name, stream, matcher)
+        setup.intakes[role] = Intake(name, stream, matcher, joy_axes=arm.operator.joy_axes)
 
 
 def silent_inputs(name: str, intakes: Mapping[str, Intake],

@@ -93,6 +93,7 @@ class SessionEvaluator:
             for role, topic in (
                     ('hand', arm.operator.hand_topic),
                     ('shoulder', arm.operator.shoulder_topic),
+                    ('rate_input', arm.operator.rate_topic),
                     ('operator_joints', arm.operator.joints_topic),
                     ('robot_joints', arm.robot.joints_topic),
                     ('command', arm.command.topic),

@@ -48,6 +48,7 @@ class InputsStatus:
         arm, absent, silent = self._arm, [], []
         roles = {'hand': arm.arm.operator.hand_topic,
                  'shoulder': arm.arm.operator.shoulder_topic,
+                 'rate_input': arm.arm.operator.rate_topic,
                  'operator_joints': arm.arm.operator.joints_topic,
                  'robot_joints': arm.arm.robot.joints_topic, 'command': arm.arm.command.topic}
         for role, topic in roles.items():

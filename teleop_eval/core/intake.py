@@ -5,23 +5,30 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import Any
 
 import numpy as np
 
 from teleop_eval.core.joint_match import JointMatcher
+from teleop_eval.core.mappings.base import RATE_INPUT
 from teleop_eval.core.samples import (
     ArraySample,
     JointSample,
+    JoySample,
     PoseSample,
     Sample,
     TrajectorySample,
+    TwistSample,
 )
 from teleop_eval.core.sentences import Sentences, listed, nearest, shown
 from teleop_eval.core.streams import Row, SampledStream
 
 _POSES, _JOINTS, _PLANS = 'poses', 'joints', 'joint trajectories'
+_TWISTS, _STICKS = 'velocities', 'joystick states'
+_POINT = ('x', 'y', 'z')
+_TWIST = (*_POINT, 'rx', 'ry', 'rz')
+_NO_AXIS = -1
 # No position in metres or radians; its square can still be summed.
 _LARGEST = 1e12
 RUN_ON = 'let the clocks of all publishers run on during a session'
@@ -30,6 +37,17 @@ RUN_ON = 'let the clocks of all publishers run on during a session'
 class Intake:
     """
     Turns the samples of one role into rows, and collects what is wrong with them.
+
+    Parameters
+    ----------
+    arm
+        Name of the arm.
+    stream
+        Where the rows go.
+    matcher
+        Of the joints, None where none are expected.
+    joy_axes
+        Which axes of a joystick are x, y, z, rx, ry, rz; -1 for none.
 
     Attributes
     ----------
@@ -42,7 +60,8 @@ class Intake:
 
     """
 
-    def __init__(self, arm: str, stream: SampledStream, matcher: JointMatcher | None) -> None:
+    def __init__(self, arm: str, stream: SampledStream, matcher: JointMatcher | None, *,
+                 joy_axes: Sequence[int] = range(6)) -> None:
         self._arm = arm
         self.stream = stream
         self.matcher = matcher
@@ -50,7 +69,9 @@ class Intake:
         self._kind = ''
         self._kinds: dict[type, tuple[str, Callable[[int, Any], list[Row]]]] = {
             PoseSample: (_POSES, self._pose), JointSample: (_JOINTS, self._joints),
-            ArraySample: (_JOINTS, self._array), TrajectorySample: (_PLANS, self._trajectory)}
+            ArraySample: (_JOINTS, self._array), TrajectorySample: (_PLANS, self._trajectory),
+            TwistSample: (_TWISTS, self._twist), JoySample: (_STICKS, self._joy)}
+        self._joy_axes = tuple(joy_axes)
         self.foreign_messages = 0
         self.foreign_names: tuple[str, ...] = ()
         self._frame_id: str | None = None
@@ -58,12 +79,17 @@ class Intake:
         if matcher is not None:
             stream.width = len(matcher.names)
         else:
-            stream.width = 3
+            stream.width = len(_TWIST) if stream.role == RATE_INPUT else len(_POINT)
 
     @property
     def posed(self) -> bool:
         """Tell whether poses come, not joints."""
         return self._kind == _POSES
+
+    @property
+    def velocities(self) -> bool:
+        """Tell whether velocities come, rows (6,) of linear and angular velocity."""
+        return self._kind == _TWISTS
 
     @property
     def frame_id(self) -> str | None:
@@ -96,12 +122,11 @@ class Intake:
         if self.stream.role in ('robot_joints', 'operator_joints'):
             self.problem('poses came where joints are expected')
             return []
-        self.stream.width = 3
-        if self._frame_id is None:
-            self._frame_id = sample.frame_id
-        elif sample.frame_id != self._frame_id:
-            self.problem(f'frame_id changed from {shown(self._frame_id)} to '
-                         f'{shown(sample.frame_id)}; only messages in the first frame are used')
+        if self.stream.role == RATE_INPUT:
+            self.problem('poses came where velocities or joystick states are expected')
+            return []
+        self.stream.width = len(_POINT)
+        if not self._in_first_frame(sample.frame_id):
             return []
         if sample.position.shape != (3,) or (
                 sample.orientation is not None and sample.orientation.shape != (4,)):
@@ -110,7 +135,42 @@ class Intake:
         finite = _finite(sample.position) and (
             sample.orientation is None or _finite(sample.orientation))
         return self._row(
-            finite, (receive_ns, sample.stamp_ns, sample.position, sample.orientation, None))
+            finite, (receive_ns, sample.stamp_ns, sample.position, sample.orientation, None),
+            _POINT)
+
+    def _in_first_frame(self, frame_id: str) -> bool:
+        if self._frame_id is None:
+            self._frame_id = frame_id
+        elif frame_id != self._frame_id:
+            self.problem(f'frame_id changed from {shown(self._frame_id)} to '
+                         f'{shown(frame_id)}; only messages in the first frame are used')
+            return False
+        return True
+
+    def _twist(self, receive_ns: int, sample: TwistSample) -> list[Row]:
+        if self.stream.role not in (RATE_INPUT, 'command'):
+            self.problem('velocities can only be a rate input or commands')
+            return []
+        self.stream.width = len(_TWIST)
+        if not self._in_first_frame(sample.frame_id):
+            return []
+        values = np.concatenate([sample.linear, sample.angular])
+        return self._row(
+            _finite(values), (receive_ns, sample.stamp_ns, values, None, None), _TWIST)
+
+    def _joy(self, receive_ns: int, sample: JoySample) -> list[Row]:
+        if self.stream.role != RATE_INPUT:
+            self.problem('joystick states can only be a rate input')
+            return []
+        lacking = [axis for axis in self._joy_axes if axis >= len(sample.axes)]
+        if lacking:
+            self.problem(f'operator.joy_axes names axis {lacking[0]}, but a message has '
+                         f'{len(sample.axes)} axes, counted from 0; correct it, -1 for none')
+            return []
+        values = np.array([0.0 if axis == _NO_AXIS else float(sample.axes[axis])
+                           for axis in self._joy_axes])
+        return self._row(
+            _finite(values), (receive_ns, sample.stamp_ns, values, None, None), _TWIST)
 
     def _joints(self, receive_ns: int, sample: JointSample) -> list[Row]:
         if self.matcher is None:
@@ -128,7 +188,8 @@ class Intake:
         values = self.matcher.values(sample, columns)
         enabled = None if sample.enabled is None else sample.enabled[columns]
         return self._row(
-            _finite(values), (receive_ns, sample.stamp_ns, values, None, enabled))
+            _finite(values), (receive_ns, sample.stamp_ns, values, None, enabled),
+            self.matcher.names)
 
     def _array(self, receive_ns: int, sample: ArraySample) -> list[Row]:
         if self.matcher is None or len(sample.values) != len(self.matcher.names):
@@ -137,7 +198,8 @@ class Intake:
                           'command.joint_order')
             return []
         values = self.matcher.continued(sample.values * self.matcher.scale)
-        return self._row(_finite(values), (receive_ns, 0, values, None, None))
+        return self._row(
+            _finite(values), (receive_ns, 0, values, None, None), self.matcher.names)
 
     def _trajectory(self, receive_ns: int, sample: TrajectorySample) -> list[Row]:
         if self.matcher is None or self.stream.role != 'command':
@@ -156,21 +218,21 @@ class Intake:
             # A zero stamp means that the plan starts on receipt.
             stamp_ns = sample.stamp_ns + offset_ns if sample.stamp_ns else 0
             rows += self._row(
-                _finite(point), (receive_ns + offset_ns, stamp_ns, point, None, None))
+                _finite(point), (receive_ns + offset_ns, stamp_ns, point, None, None),
+                self.matcher.names)
         return rows
 
-    def _row(self, finite: bool, row: Row) -> list[Row]:
+    def _row(self, finite: bool, row: Row, names: Sequence[str]) -> list[Row]:
         if not finite:
             self.stream.counts.non_finite += 1
             # Only the first values are shown: all others count under the same sentence.
-            self._non_finite = self._non_finite or self._where_not_finite(row)
+            self._non_finite = self._non_finite or self._where_not_finite(row, names)
             self.problem(f'{self._non_finite} came; messages with NaN or infinity are left out, '
                          'so look for their cause at the publisher')
             return []
         return [row]
 
-    def _where_not_finite(self, row: Row) -> str:
-        names = ('x', 'y', 'z') if self.matcher is None or self.posed else self.matcher.names
+    def _where_not_finite(self, row: Row, names: Sequence[str]) -> str:
         parts = [*zip(names, row[2].tolist(), strict=True)]
         if row[3] is not None:
             parts += zip(('qx', 'qy', 'qz', 'qw'), row[3].tolist(), strict=True)

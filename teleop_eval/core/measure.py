@@ -148,7 +148,9 @@ class ArmMeasurement:
         if 'command' in streams:
             stream, hold = streams['command'], arm.arm.command.hold
             command_items = stream.items(span.end_ns)
-            if not arm.intakes['command'].posed:
+            if arm.intakes['command'].velocities:
+                command_items = None
+            elif not arm.intakes['command'].posed:
                 command_items = self._in_robot_order(command_items)
                 tracks['q_c'] = on_grid(
                     command_items, span, max_gap_ns=stream.max_gap_ns, hold=hold)

@@ -7,7 +7,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from teleop_eval.core.mappings.settings import quaternion_fault
-from teleop_eval.core.parameters import DOUBLE, DOUBLES, STRING, named_map, parameter
+from teleop_eval.core.parameters import DOUBLE, DOUBLES, INTEGERS, STRING, named_map, parameter
 
 TRACKED_POINTS = ('wrist', 'finger_tip')
 # Longer sweeps tire the arm; what is kept of them is bounded.
@@ -45,6 +45,11 @@ class OperatorSettings:
     description_stature_m: float | None = parameter(
         DOUBLE, None, 'Stature that the description is drawn for; its lengths are scaled to '
         'stature_m.', unit='m', low=0.5, high=2.5)
+    rate_topic: str | None = parameter(
+        STRING, None, 'TwistStamped or Joy that sets the velocity, for a rate mapping.')
+    joy_axes: tuple[int, ...] = parameter(
+        INTEGERS, [0, 1, 2, 3, 4, 5], "Which of a Joy message's axes, counted from 0, are x, y, "
+        'z and the rotations about them; -1 for none.', size=6, low=-1, high=63)
     shoulder_m: tuple[float, ...] | None = parameter(
         DOUBLES, None, "The operator's shoulder in the frame of the hand's messages.",
         unit='m', size=3)

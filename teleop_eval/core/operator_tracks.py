@@ -11,6 +11,7 @@ import numpy as np
 
 from teleop_eval.core.history import Track
 from teleop_eval.core.intake import Intake
+from teleop_eval.core.mappings.base import RATE_INPUT
 from teleop_eval.core.operator_arm import OperatorArm
 from teleop_eval.core.operator_settings import OperatorSettings
 from teleop_eval.core.sentences import shown
@@ -23,13 +24,16 @@ if TYPE_CHECKING:
 
 def operator_tracks(arm: ArmEvaluator, streams: Mapping[str, SampledStream],
                     span: Span) -> dict[str, Track]:
-    """Return hand, hand_turn, operator_joints, shoulder and u_o as far as they are known."""
+    """Return hand, hand_turn, operator_joints, rate_input, shoulder and u_o as far as known."""
     tracks: dict[str, Track] = {}
     geometry = arm.operator
     if 'operator_joints' in streams:
         stream = streams['operator_joints']
         tracks['operator_joints'] = on_grid(
             stream.items(span.end_ns), span, max_gap_ns=stream.max_gap_ns)
+    if RATE_INPUT in streams:
+        stream = streams[RATE_INPUT]
+        tracks[RATE_INPUT] = on_grid(stream.items(span.end_ns), span, max_gap_ns=stream.max_gap_ns)
     if 'hand' in streams:
         stream = streams['hand']
         items = stream.items(span.end_ns)

@@ -24,7 +24,7 @@ NAME_PATTERN = re.compile(r'[a-z][a-z0-9_]*')
 
 # Kinds a parameter can have; each has a ROS parameter type of the same meaning.
 BOOL, INTEGER, DOUBLE, STRING = 'bool', 'integer', 'double', 'string'
-DOUBLES, STRINGS = 'double_array', 'string_array'
+DOUBLES, STRINGS, INTEGERS = 'double_array', 'string_array', 'integer_array'
 # A file of another tool has nothing but unknown parameters.
 _MOST_UNKNOWN = 5
 
@@ -236,7 +236,7 @@ def convert(described: Parameter, value: Any, key: str, where: str) -> Any:
     if kind == BOOL:
         fits = isinstance(value, bool)
     elif kind == INTEGER:
-        fits = isinstance(value, int) and not isinstance(value, bool)
+        fits = _is_whole(value)
     elif kind == DOUBLE:
         fits = _is_number(value)
         value = float(value) if fits else value
@@ -250,7 +250,8 @@ def convert(described: Parameter, value: Any, key: str, where: str) -> Any:
             fits = all(_is_number(item) for item in value)
             value = tuple(float(item) for item in value) if fits else value
         elif fits:
-            fits = all(isinstance(item, str) for item in value)
+            fits = all(isinstance(item, str) if kind == STRINGS else _is_whole(item)
+                       for item in value)
             value = tuple(value) if fits else value
     if not fits:
         hint = '; quote it if it is a text' if kind == STRING else '; correct it'
@@ -278,11 +279,16 @@ _KIND_WORDS = {
     STRING: 'a text',
     DOUBLES: 'a list of numbers',
     STRINGS: 'a list of texts',
+    INTEGERS: 'a list of whole numbers',
 }
 
 
 def _is_number(value: Any) -> bool:
     return isinstance(value, (int, float)) and not isinstance(value, bool)
+
+
+def _is_whole(value: Any) -> bool:
+    return isinstance(value, int) and not isinstance(value, bool)
 
 
 def _check_limits(described: Parameter, value: Any, key: str, where: str) -> None:

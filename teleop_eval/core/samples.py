@@ -58,6 +58,29 @@ class TrajectorySample:
 
 
 @dataclass(frozen=True, slots=True)
+class TwistSample:
+    """
+    Velocity in the axes of one frame.
+
+    Linear (3,) in m/s, angular (3,) in rad/s.
+    """
+
+    stamp_ns: int
+    linear: np.ndarray
+    angular: np.ndarray
+    frame_id: str
+
+
+@dataclass(frozen=True, slots=True)
+class JoySample:
+    """State of a joystick: axes (n,) from -1 to 1, buttons (m,) of int."""
+
+    stamp_ns: int
+    axes: np.ndarray
+    buttons: np.ndarray
+
+
+@dataclass(frozen=True, slots=True)
 class ArraySample:
     """Bare numbers (n,) in the configured joint order; the message has no stamp."""
 
@@ -81,4 +104,5 @@ class TextSample:
     stamp_ns: int = 0
 
 
-Sample = PoseSample | JointSample | TrajectorySample | ArraySample | BoolSample | TextSample
+Sample = (PoseSample | JointSample | TrajectorySample | TwistSample | JoySample | ArraySample
+          | BoolSample | TextSample)

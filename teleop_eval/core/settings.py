@@ -18,6 +18,7 @@ from teleop_eval.core.operator_settings import OperatorSettings, UnitSettings
 from teleop_eval.core.parameters import (
     BOOL,
     DOUBLE,
+    INTEGER,
     STRING,
     STRINGS,
     build,
@@ -155,6 +156,18 @@ class TopicSettings:
 
 
 @dataclass(frozen=True)
+class EngagedSettings:
+    """The clutch."""
+
+    topic: str | None = parameter(
+        STRING, None, 'Bool, or Joy of which one button is the clutch; not given: always '
+        'engaged.')
+    button: int = parameter(
+        INTEGER, 0, "Which of a Joy message's buttons, counted from 0; engaged while pressed.",
+        low=0, high=63)
+
+
+@dataclass(frozen=True)
 class ActiveMappingSettings:
     """Which mapping is in use."""
 
@@ -169,7 +182,7 @@ class ArmSettings:
     operator: OperatorSettings = group(OperatorSettings)
     robot: RobotSettings = group(RobotSettings)
     command: CommandSettings = group(CommandSettings)
-    engaged: TopicSettings = group(TopicSettings)
+    engaged: EngagedSettings = group(EngagedSettings)
     active_mapping: ActiveMappingSettings = group(ActiveMappingSettings)
     mappings: dict[str, MappingSettings] = named_map(
         MappingSettings, 'Mappings by label.', kinds=kind_settings)
@@ -265,6 +278,7 @@ def _topics(key: str, arm: ArmSettings) -> list[tuple[str, str | None]]:
     return [(f'{key}.operator.hand_topic', arm.operator.hand_topic),
             (f'{key}.operator.joints_topic', arm.operator.joints_topic),
             (f'{key}.operator.shoulder_topic', arm.operator.shoulder_topic),
+            (f'{key}.operator.rate_topic', arm.operator.rate_topic),
             (f'{key}.operator.description_topic', arm.operator.description_topic),
             (f'{key}.robot.joints_topic', arm.robot.joints_topic),
             (f'{key}.robot.description_topic', arm.robot.description_topic),

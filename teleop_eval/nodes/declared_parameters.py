@@ -19,6 +19,7 @@ from teleop_eval.core.parameters import (
     DOUBLE,
     DOUBLES,
     INTEGER,
+    INTEGERS,
     STRING,
     STRINGS,
     Parameter,
@@ -39,9 +40,11 @@ _TYPES = {
     STRING: RosParameter.Type.STRING,
     DOUBLES: RosParameter.Type.DOUBLE_ARRAY,
     STRINGS: RosParameter.Type.STRING_ARRAY,
+    INTEGERS: RosParameter.Type.INTEGER_ARRAY,
 }
 # ROS parameters always have a value; these stand for "not given".
-_NOT_GIVEN = {BOOL: False, INTEGER: 0, DOUBLE: math.nan, STRING: '', DOUBLES: [], STRINGS: []}
+_NOT_GIVEN = {BOOL: False, INTEGER: 0, DOUBLE: math.nan, STRING: '', DOUBLES: [], STRINGS: [],
+              INTEGERS: []}
 
 
 @dataclass(frozen=True)
@@ -135,7 +138,7 @@ def _ros_value(described: Parameter, given: Any) -> Any:
         return float(value)
     if described.kind == DOUBLES:
         return [float(number) for number in value]
-    return list(value) if described.kind == STRINGS else value
+    return list(value) if described.kind in (STRINGS, INTEGERS) else value
 
 
 def _bound(number: float | None) -> str:

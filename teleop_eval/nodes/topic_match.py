@@ -17,6 +17,7 @@ LATCHED_ROLES = frozenset(
 ROLE_KINDS = {
     'hand': 'pose',
     'shoulder': 'pose',
+    'rate_input': 'rate',
     'operator_joints': 'joints',
     'robot_joints': 'joints',
     'command': 'command',
@@ -29,6 +30,7 @@ ROLE_KINDS = {
 ROLE_WORDS = {
     'hand': "operator's hand",
     'shoulder': "operator's shoulder",
+    'rate_input': "operator's rate input",
     'operator_joints': "operator's joints",
     'robot_joints': "robot's joints",
     'command': 'command',

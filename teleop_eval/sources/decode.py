@@ -19,9 +19,11 @@ from teleop_eval.sources.decode_standard import (
     array_reader,
     bool_reader,
     joint_state_reader,
+    joy_reader,
     pose_reader,
     text_reader,
     trajectory_reader,
+    twist_reader,
 )
 
 _MAKERS: dict[str, Callable[[str], Callable[[bytes], Sample]]] = {
@@ -30,7 +32,9 @@ _MAKERS: dict[str, Callable[[str], Callable[[bytes], Sample]]] = {
     'geometry_msgs/msg/TransformStamped': partial(pose_reader, child_frame=True),
     'geometry_msgs/msg/PointStamped': partial(pose_reader, oriented=False),
     'nav_msgs/msg/Odometry': partial(pose_reader, child_frame=True),
+    'geometry_msgs/msg/TwistStamped': twist_reader,
     'sensor_msgs/msg/JointState': joint_state_reader,
+    'sensor_msgs/msg/Joy': joy_reader,
     'std_msgs/msg/Float64MultiArray': array_reader,
     'trajectory_msgs/msg/JointTrajectory': trajectory_reader,
     'std_msgs/msg/Bool': bool_reader,
@@ -47,8 +51,10 @@ SUPPORTED: dict[str, tuple[str, ...]] = {
     'joints': ('sensor_msgs/msg/JointState',),
     'command': (
         'sensor_msgs/msg/JointState', 'geometry_msgs/msg/PoseStamped',
-        'std_msgs/msg/Float64MultiArray', 'trajectory_msgs/msg/JointTrajectory'),
-    'bool': ('std_msgs/msg/Bool',),
+        'geometry_msgs/msg/TwistStamped', 'std_msgs/msg/Float64MultiArray',
+        'trajectory_msgs/msg/JointTrajectory'),
+    'rate': ('geometry_msgs/msg/TwistStamped', 'sensor_msgs/msg/Joy'),
+    'bool': ('std_msgs/msg/Bool', 'sensor_msgs/msg/Joy'),
     'text': ('std_msgs/msg/String',),
 }
 

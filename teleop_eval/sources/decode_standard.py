@@ -21,9 +21,11 @@ from teleop_eval.core.samples import (
     ArraySample,
     BoolSample,
     JointSample,
+    JoySample,
     PoseSample,
     TextSample,
     TrajectorySample,
+    TwistSample,
 )
 from teleop_eval.sources.cdr import NS_PER_S, CdrReader, Layout, LayoutCache, truncated
 
@@ -75,6 +77,40 @@ def pose_reader(
         return PoseSample(
             seconds * NS_PER_S + nanoseconds, values[:3], values[3:] if oriented else None,
             layout.content)
+
+    return decode
+
+
+def twist_reader(what: str) -> Callable[[bytes], TwistSample]:
+    """Make a reader of geometry_msgs TwistStamped; it raises InputError."""
+    cache = LayoutCache(CdrReader.text, counted=False, what=what)
+    last: Layout[str] | None = None
+
+    def decode(data: bytes) -> TwistSample:
+        nonlocal last
+        data = data if type(data) is bytes else bytes(data)
+        last = layout = cache.find(data, last)
+        seconds, nanoseconds = layout.front.unpack_from(data)
+        if len(data) < layout.values_at + 6 * 8:
+            raise truncated(data, what)
+        values = np.frombuffer(data, layout.number, 6, layout.values_at)
+        if not layout.native:
+            values = values.astype(np.float64)
+        return TwistSample(
+            seconds * NS_PER_S + nanoseconds, values[:3], values[3:], layout.content)
+
+    return decode
+
+
+def joy_reader(what: str) -> Callable[[bytes], JoySample]:
+    """Make a reader of sensor_msgs Joy; it raises InputError."""
+    def decode(data: bytes) -> JoySample:
+        reader = CdrReader(bytes(data), what)
+        stamp_ns = reader.stamp_ns()
+        reader.skip_text()
+        axes = reader.numbers('f4', reader.count(4))
+        buttons = reader.numbers('i4', reader.count(4))
+        return JoySample(stamp_ns, axes.astype(np.float64), buttons.astype(np.int64))
 
     return decode
 

@@ -20,9 +20,11 @@ from teleop_eval.core.samples import (
     ArraySample,
     BoolSample,
     JointSample,
+    JoySample,
     PoseSample,
     TextSample,
     TrajectorySample,
+    TwistSample,
 )
 from teleop_eval.sources.decode import SUPPORTED, full_type_name, make_decoder
 
@@ -132,6 +134,17 @@ def multi_array(values, labels=(), offset=0):
               of('std_msgs/msg/MultiArrayLayout', dimensions, offset), np.array(values, float))
 
 
+def twist(values, head=None):
+    return of('geometry_msgs/msg/TwistStamped', head or header(), of(
+        'geometry_msgs/msg/Twist', of('geometry_msgs/msg/Vector3', *values[:3]),
+        of('geometry_msgs/msg/Vector3', *values[3:])))
+
+
+def joy(axes, buttons, head=None):
+    return of('sensor_msgs/msg/Joy', head or header(), np.array(axes, np.float32),
+              np.array(buttons, np.int32))
+
+
 def custom_message(names, positions, enable, seconds=5, notes=('a',)):
     types = CUSTOM_STORE.types
     stamp = types['builtin_interfaces/msg/Time'](seconds, 6)
@@ -159,6 +172,8 @@ def example_bytes(name, *, little=True):
             'std_msgs/msg/Float64MultiArray': lambda: multi_array([1, 2], ['row', 'column']),
             'trajectory_msgs/msg/JointTrajectory': lambda: trajectory(
                 ['a', 'bc'], [[1, 2], [3, 4]], [(0, 5), (1, 0)], velocities=[1, 2, 3]),
+            'geometry_msgs/msg/TwistStamped': lambda: twist([0.1, 0.2, 0.3, 0.4, 0.5, 0.6]),
+            'sensor_msgs/msg/Joy': lambda: joy([0.5, -1.0, 0.0], [0, 1]),
             'std_msgs/msg/Bool': lambda: of('std_msgs/msg/Bool', True),
             'std_msgs/msg/String': lambda: of('std_msgs/msg/String', 'task_space'),
             CUSTOM: lambda: custom_message(['a', 'bc'], [1.5, 2.5], [True, False]),
@@ -210,6 +225,27 @@ def test_joint_states_equal_rosbags(seconds, nanoseconds, frame, joints, more, l
         encode(message, 'sensor_msgs/msg/JointState', little=little))
     assert same(sample, JointSample(
         seconds * 10**9 + nanoseconds, names, np.array(positions, float), None))
+
+
+@settings(deadline=None)
+@given(SECONDS, NANOSECONDS, NAMES, st.lists(FLOATS, min_size=6, max_size=6), st.booleans())
+def test_twists_equal_rosbags(seconds, nanoseconds, frame, values, little):
+    name = 'geometry_msgs/msg/TwistStamped'
+    sample = make_decoder(name)(encode(
+        twist(values, header(seconds, nanoseconds, frame)), name, little=little))
+    assert same(sample, TwistSample(seconds * 10**9 + nanoseconds, np.array(values[:3]),
+                                    np.array(values[3:]), frame))
+
+
+@settings(deadline=None)
+@given(SECONDS, NANOSECONDS, NAMES, st.lists(st.floats(width=32), max_size=9),
+       st.lists(st.integers(-2**31, 2**31 - 1), max_size=12), st.booleans())
+def test_joystick_states_equal_rosbags(seconds, nanoseconds, frame, axes, buttons, little):
+    name = 'sensor_msgs/msg/Joy'
+    sample = make_decoder(name)(encode(
+        joy(axes, buttons, header(seconds, nanoseconds, frame)), name, little=little))
+    assert same(sample, JoySample(seconds * 10**9 + nanoseconds, np.array(axes, float),
+                                  np.array(buttons, np.int64)))
 
 
 @settings(deadline=None)
@@ -605,7 +641,7 @@ def test_any_definition_text_is_refused_clearly_or_works(text, definition_format
 
 
 def test_roles_name_types_that_exist():
-    assert set(SUPPORTED) == {'pose', 'joints', 'command', 'bool', 'text'}
+    assert set(SUPPORTED) == {'pose', 'joints', 'command', 'rate', 'bool', 'text'}
     for name in ALL_TYPES:
         assert name in STORE.fielddefs
         make_decoder(name)
