@@ -18,7 +18,7 @@ from teleop_eval.core.latency import DelayEstimate
 from teleop_eval.core.levels import RisingLevel
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import UNOBSERVABLE, Metric
-from teleop_eval.core.phase import Phase, seconds, spoken
+from teleop_eval.core.phase import OPERATOR_ROLES, Phase, seconds, spoken
 from teleop_eval.core.results import LEVEL_ERROR, LEVEL_OK, LEVEL_STALE, LEVEL_WARN, StatusLine
 from teleop_eval.core.settings import ThresholdSettings
 
@@ -166,8 +166,7 @@ class LatencyStatus:
     def _reason(self, now_ns: int, thresholds: ThresholdSettings) -> str:
         """Return why the newest window tells no delay, in the names of its two sides."""
         assert self._of is not None  # a window has closed
-        other = ('hand', 'operator_joints') if self._of[2] == 'latency_response_s' else (
-            'command',)
+        other = OPERATOR_ROLES if self._of[2] == 'latency_response_s' else ('command',)
         if silent := self._phase.silent(now_ns, thresholds.stale_s, but=other):
             return silent
         if self._estimate is None:

@@ -6,10 +6,11 @@ from __future__ import annotations
 
 from collections.abc import Collection, Sequence
 
-from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.arm import DESCRIPTION, OPERATOR_DESCRIPTION, ArmEvaluator
 from teleop_eval.core.segment import NEVER_NS
 from teleop_eval.core.settings import ThresholdSettings
 
+OPERATOR_ROLES = ('hand', 'shoulder', 'operator_joints')
 # From here on seconds say more than anybody wants to know.
 _MINUTES_FROM_S = 600.0
 
@@ -81,8 +82,8 @@ class Phase:
         arm = self._arm
         if arm.measurement is not None and arm.measurement.newest is not None:
             return ''
-        if arm.time_base is None and not arm.intakes and arm.described is None:
-            return f'waits for the robot description on {arm.arm.robot.description_topic}'
+        if arm.time_base is None and not arm.intakes and (lacking := self._undescribed()):
+            return f'waits for {joined(lacking)}'
         absent = [intake.stream.topic for role, intake in arm.intakes.items()
                   if role not in self.last_receive_ns]
         if arm.time_base is None and len(absent) == len(arm.intakes):
@@ -94,6 +95,15 @@ class Phase:
         if mapping is not None and not mapping.latest:
             return f'waits for the active mapping on {mapping.topic}'
         return f'waits for its first window of {arm.settings.time.window_s:g} s'
+
+    def _undescribed(self) -> list[str]:
+        """Return the descriptions that are to come on a topic and have not."""
+        topics = {
+            (DESCRIPTION, 'the robot description'): self._arm.arm.robot.description_topic,
+            (OPERATOR_DESCRIPTION, 'the description of the operator side'):
+                self._arm.arm.operator.description_topic}
+        return [f'{words} on {topic}' for (role, words), topic in topics.items()
+                if topic and role not in self._arm.described]
 
     def _warm_up_left(self, now_ns: int) -> str:
         if self._arm.next_check_ns == NEVER_NS:

@@ -13,11 +13,12 @@ import numpy as np
 
 from teleop_eval.core.advice import WORDS, largest_term, plain_words
 from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.budget import LEAST_DISCREPANCY
 from teleop_eval.core.inputs_status import InputsStatus
 from teleop_eval.core.latency_status import LatencyStatus
 from teleop_eval.core.levels import MarginLevel
 from teleop_eval.core.metric import NOT_CONFIGURED, Metric, missing
-from teleop_eval.core.phase import Phase, seconds
+from teleop_eval.core.phase import OPERATOR_ROLES, Phase, seconds
 from teleop_eval.core.results import LEVEL_OK, LEVEL_STALE, LEVEL_WARN, StatusLine
 from teleop_eval.core.settings import ThresholdSettings
 from teleop_eval.core.window_budget import POSITION, Space
@@ -120,6 +121,8 @@ class ArmStatus:
             why = self.phase.silent(now_ns, thresholds.stale_s, but=aside)
             number = f'no tracking error: {why or tool.reason.rstrip(".")}'
         words = self._largest_term(values)
+        if tool.value is None or tool.value < LEAST_DISCREPANCY:
+            words = ''  # of next to nothing no part is worth a look
         return StatusLine(f'{self._arm.name}: tracking', LEVEL_OK,
                           f'{number}; {words}' if words else number, values)
 
@@ -141,7 +144,7 @@ class ArmStatus:
         if not largest:
             return ''
         cancels = measured.accumulators[measured.label].budget.cancels(largest)
-        return 'largest part: ' + plain_words(
+        return 'mostly ' + plain_words(
             metrics, delays_s=measured.delays_s, cancels=cancels, suffix=space.suffix)
 
     def _workspace(self, now_ns: int, thresholds: ThresholdSettings) -> StatusLine:
@@ -173,7 +176,6 @@ class ArmStatus:
         chain = self._arm.robot.chain
         if not np.any(np.isfinite(chain.lower) & np.isfinite(chain.upper)):
             return 'no limit margin: no joint of this arm has limits'
-        silent = self.phase.silent(now_ns, thresholds.stale_s,
-                                   but=('hand', 'operator_joints', 'command'))
+        silent = self.phase.silent(now_ns, thresholds.stale_s, but=(*OPERATOR_ROLES, 'command'))
         why = silent or 'no engaged and settled sample in the last window'
         return f'no limit margin: {why}'

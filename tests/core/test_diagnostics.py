@@ -42,7 +42,8 @@ def test_running_well_is_numbers_and_nothing_else():
     assert {line.level for line in lines.values()} == {LEVEL_OK}
     assert lines['inputs'].message == 'all inputs arrive'
     assert re.fullmatch(r'tracking error 0\.\d{3} arm lengths RMS, 0\.00\d with the delay '
-                        'taken out', lines['tracking'].message)
+                        r'taken out; mostly response delay: 0\.\d{3} arm lengths, 100 ms .*',
+                        lines['tracking'].message)
     assert re.fullmatch(r'ideal command -> robot 100\.\d \+- 0\.\d ms', lines['latency'].message)
     assert re.fullmatch(r'\w+ is \d+\.\d% of its span from a limit', lines['workspace'].message)
 
@@ -214,6 +215,70 @@ def test_numbers_of_one_mapping_are_not_shown_for_the_next():
                  active_mapping__topic='/mapping')
     lines = asked(target, 21.0)
     assert {lines[c].message for c in MEASURED} == {'waits for the first window under other'}
+
+
+def test_a_window_that_closes_after_the_switch_may_still_be_of_the_old_mapping():
+    """The window to 20 s closes when a sample from after its end has come."""
+    made = syn.session(21.0, motion=syn.wander()).text(0.0, '/mapping', 'direct')
+    made.text(20.003, '/mapping', 'other')
+    target = fed(syn.Feed(), mappings__other__kind='task_space', active_mapping__fixed=None,
+                 active_mapping__topic='/mapping')
+    late = []
+    for message in made.messages():
+        target.add(*message)
+        late += [window for window in target.poll() if window.receive_ns > syn.ns(20.003)]
+        if late:
+            assert late[0].mapping == 'direct'
+            assert asked(target, message[0])['tracking'].message == (
+                'waits for the first window under other')
+    assert late
+
+
+def test_nothing_is_the_larger_part_of_nothing():
+    lines = asked(fed(syn.session(24.0, motion=syn.wander())), 24.0)
+    assert re.fullmatch(r'tracking error 0\.000 arm lengths RMS, 0\.000 with the delay taken out',
+                        lines['tracking'].message)
+
+
+def test_both_descriptions_are_waited_for():
+    target = syn.evaluator(syn.arm_parameters(
+        robot__description_file=None, robot__description_topic='/description',
+        operator__description_topic='/human', operator__joints_topic='/operator',
+        operator__base_link='base', operator__tip_link='tool', operator__hand_topic=None,
+        operator__shoulder_m=None, operator__arm_length_m=None))
+    both = 'waits for the robot description on /description and '
+    one = 'the description of the operator side on /human'
+    assert asked(target, 0.0)['tracking'].message == both + one
+    target.add(syn.ns(0.1), '/description', syn.TextSample(syn.urdf()))
+    assert asked(target, 0.1)['latency'].message == f'waits for {one}'
+
+
+def test_silence_of_a_command_explains_only_what_needs_it():
+    """Disengaged a moment ago and still settling; the command was silent all the time since."""
+    motion = syn.wander()
+    made, t = syn.session(31.0, motion=motion, delay=0.1), syn.clock(0.0, 12.0, 100.0)
+    made.joints('/command', t, syn.joints_for(motion(t)))
+    made.flag(0.0, '/engaged', True).flag(14.0, '/engaged', False).flag(30.5, '/engaged', True)
+    lines = asked(fed(made, command__topic='/command', engaged__topic='/engaged'), 31.0)
+    assert '/command is silent' in lines['inputs'].message
+    assert lines['tracking'].message.startswith('no tracking error: no engaged')
+    assert re.match(r'not observed now \(only \d', lines['latency'].message)
+
+
+def test_a_level_of_the_margin_ends_with_the_engagement():
+    """From 8.3 s on the margin sinks from 5.4 to 5 %: no WARN begins there, but one goes on."""
+    t = syn.clock(0.0, 17.0, 100.0)
+    share = np.interp(t, [0.0, 8.05, 8.3, 17.0], [0.3, 0.04, 0.054, 0.0505])
+    q = np.zeros((len(t), 6))
+    q[:, 2] = syn.REACH_M - share * (syn.REACH_M - 0.05)
+    for open_s, level in ((9.5, LEVEL_OK), (None, LEVEL_WARN)):
+        made = syn.Feed().joints('/joints', t, q).flag(0.0, '/engaged', True)
+        if open_s is not None:
+            made.flag(open_s, '/engaged', False).flag(11.0, '/engaged', True)
+        target = fed(syn.Feed(), operator__hand_topic=None, engaged__topic='/engaged')
+        for message in made.messages():
+            target.add(*message)
+        assert asked(target, 17.0)['workspace'].level == level
 
 
 def test_a_new_segment_is_the_reason_for_missing_windows():
