@@ -68,7 +68,7 @@ def document(result: Mapping[str, Any], facts: SessionFacts, *, notes: Sequence[
     ----------
     result
         What the evaluator's `finish` returned; keys it sets itself are kept, its notes and
-        problems come first.
+        problems come first, then what its inputs' transport ages say against the clocks.
     facts
         Facts of the session.
     notes, problems
@@ -79,9 +79,28 @@ def document(result: Mapping[str, Any], facts: SessionFacts, *, notes: Sequence[
     whole.update(result)
     whole['session'] = {**facts.to_dict(), **dict(result.get('session', {}))}
     whole.setdefault('arms', {})
-    for key, added in (('notes', notes), ('problems', problems)):
+    for key, added in (('notes', notes), ('problems', [*clock_problems(whole['arms']),
+                                                       *problems])):
         whole[key] = list(dict.fromkeys([*result.get(key, ()), *added]))
     return whole
+
+
+def clock_problems(arms: Mapping[str, Any]) -> list[str]:
+    """
+    Return a sentence for each input whose header stamps come from a clock that is off.
+
+    An arm that uses receive time uses no stamps, and says so in its notes.
+    """
+    found = []
+    for name, arm in arms.items():
+        if (arm.get('time_base') or {}).get('base') != 'stamp':
+            continue
+        for role, entry in arm.get('inputs', {}).items():
+            caveats = {metric.get('reason') for metric in entry.get('metrics', {}).values()
+                       if metric.get('status') == 'ok' and metric.get('reason')}
+            found += [f'{name}: {role} ({entry["topic"]}): {caveat.rstrip(".")}.'
+                      for caveat in sorted(caveats)]
+    return found
 
 
 def tool_versions() -> dict[str, Any]:

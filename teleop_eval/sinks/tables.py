@@ -241,6 +241,8 @@ def _cell(metric: Any, remarks: _Remarks) -> Text:
     value, reason = metric.get('value'), str(metric.get('reason') or '')
     if metric.get('status') == 'ok' and _finite(value):
         text = Text(number(value))
+        if reason:  # a caveat
+            text.append(f' {remarks.mark(clean(reason, LONGEST_SENTENCE))}', style='yellow')
         interval = metric.get('ci95')
         if _is_pair(interval):
             low, high = (number(float(end)) for end in interval)

@@ -62,6 +62,31 @@ def test_what_the_evaluator_says_of_the_session_wins():
     assert (whole['notes'], whole['problems']) == (['x', 'y'], ['p'])
 
 
+def arm_with_age(base, reason, *, status='ok'):
+    """Return an arm's part with one input whose transport age has a caveat."""
+    age = {'value': -0.02, 'status': status, 'reason': reason}
+    return {'time_base': {'base': base}, 'inputs': {
+        'hand': {'topic': '/hand', 'metrics': {'transport_age_s': age,
+                                               'transport_age_min_s': age}},
+        'engaged': {'topic': '/clutch'}}}
+
+
+def test_a_clock_that_is_off_is_a_problem_of_the_session():
+    arms = {'right': arm_with_age('stamp', 'the clocks are not synchronised'),
+            'left': arm_with_age('stamp', '')}
+    whole = summary_file.document({'arms': arms, 'problems': ['a.']}, FACTS, problems=['z.'])
+    assert whole['problems'] == [
+        'a.', 'right: hand (/hand): the clocks are not synchronised.', 'z.']
+
+
+@pytest.mark.parametrize('arm', [
+    arm_with_age('receive', 'the clocks are not synchronised'),
+    arm_with_age('stamp', 'header stamps are zero', status='unobservable'),
+    {'time_base': {'base': 'stamp'}}, {}])
+def test_stamps_that_nobody_uses_are_no_problem(arm):
+    assert summary_file.document({'arms': {'right': arm}}, FACTS)['problems'] == []
+
+
 @given(st.floats(allow_nan=False, allow_infinity=False))
 def test_numbers_read_back_exactly(value):
     assert json.loads(summary_file.to_json({'v': value}))['v'] == value

@@ -70,6 +70,30 @@ def test_a_missing_number_is_said_in_words_with_its_reason(status, words):
     assert 'None' not in shown and 'nan' not in shown
 
 
+CAVEAT = 'hand: smallest transport age is -20.0 ms, below zero: distrust it.'
+
+
+def test_a_caveat_of_a_number_is_marked_and_said_once_below():
+    warned = metric(0.13961, ci95=[0.1382, 0.1411], reason=CAVEAT)
+    other = metric(0.05, reason='receive-based')
+    shown = text(summary(mirror={'latency_s': warned, 'latency_command_s': other},
+                         reach={'latency_s': warned, 'latency_command_s': metric(0.008)}))
+    assert row(shown, 'latency_s').split() == [
+        'latency_s', 's', '0.1396', '(1)', '0.1396', '(1)']
+    assert row(shown, 'latency_command_s').split() == [
+        'latency_command_s', 's', '0.0500', '(2)', '0.0080']
+    below = ' '.join(shown.partition('metrics.csv')[2].split())
+    assert below == f'(1) {CAVEAT} (2) receive-based'
+
+
+def test_a_caveat_fits_beside_a_truth_column():
+    shown = text(summary(mirror={'latency_s': metric(-0.1391, reason=CAVEAT)},
+                         reach={'latency_s': metric(0.1402, reason=CAVEAT)}),
+                 {'mappings': {'mirror': {'metrics': {'latency_s': 0.1397}}}})
+    assert row(shown, 'latency_s').split() == [
+        'latency_s', 's', '-0.1391', '(1)', '0.1397', '0.1402', '(1)']
+
+
 def test_what_is_not_configured_anywhere_is_a_sentence_and_no_row():
     gone = metric(None, status='not_configured', reason='there is no clutch')
     shown = text(summary(mirror={'engagements': gone, 'latency_s': metric(0.1)},
