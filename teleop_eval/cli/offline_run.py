@@ -33,11 +33,16 @@ _DIAGNOSTICS_NS = 1_000_000_000
 
 @dataclass(frozen=True)
 class Outcome:
-    """The whole summary, where it is, and the problems that a user must see."""
+    """
+    The whole summary and where it is.
+
+    `complete` tells that the recording was read to the end of what can be read of it, and that
+    something was measured; problems of the data do not count.
+    """
 
     folder: Path
     summary: dict[str, Any]
-    problems: list[str]
+    complete: bool
 
 
 class OfflineRun:
@@ -85,7 +90,7 @@ class OfflineRun:
 
     def run(self) -> Outcome:
         """
-        Evaluate and write; what stops the reading on the way ends up among the problems.
+        Evaluate and write; what stops the reading on the way is among the summary's problems.
 
         Raises
         ------
@@ -103,20 +108,25 @@ class OfflineRun:
             folder = SessionFolder(
                 self._out, self._settings, self._flat, source=self._source,
                 descriptions=self._descriptions, resolve=self._resolve,
-                simulated_time=self._simulated_time)
-            problems = list(inputs.problems)
+                published=self._resolve, simulated_time=self._simulated_time)
+            failures: list[str] = []
             with Interruption() as interruption:
                 try:
                     self._feed(recording, inputs, evaluator, folder, interruption)
                 except TeleopEvalError as error:
-                    problems.append(f'Reading stopped: {error}')
+                    failures.append(f'Reading stopped: {error}')
                 if interruption.wanted:
-                    problems.append(self._interrupted(recording))
+                    failures.append(self._interrupted(recording))
+                elif nothing := inputs.nothing():
+                    failures.append(nothing)
                 losses = recording.losses
-                return self._finish(
-                    evaluator, folder, problems=[*problems, *losses, *inputs.malformed()],
-                    notes=[note for note in recording.notes if note not in losses],
+                whole = self._finish(
+                    evaluator, folder,
+                    problems=[*inputs.problems, *failures, *losses, *inputs.malformed()],
+                    notes=[note for note in recording.notes
+                           if note not in losses and not inputs.is_said(note)],
                     explained=inputs.explained())
+            return Outcome(folder.path, whole, complete=not failures)
 
     def _feed(self, recording: Recording, inputs: RecordedInputs, evaluator: SessionEvaluator,
               folder: SessionFolder, interruption: Interruption) -> None:
@@ -129,15 +139,17 @@ class OfflineRun:
                 # Messages of the last time wait for others of that time in the next batch.
                 cut_ns = batch[-1].receive_ns - 1 if batch else None
                 for receive_ns, topic, _, data in order.order(batch, cut_ns=cut_ns):
+                    if self._first_ns is None:
+                        self._first_ns = receive_ns
+                    self._last_ns = receive_ns
                     try:
                         sample = decoders[topic](data)
                     except InputError as error:
-                        inputs.refuse(topic, error)
+                        inputs.refuse(topic, error, (receive_ns - self._first_ns) / 1e9)
                         continue
                     evaluator.add(receive_ns, topic, sample)
                     if receive_ns >= self._next_diagnostics_ns:
                         self._second(receive_ns, evaluator, folder)
-                    self._last_ns = receive_ns
                 inputs.read.update(map(_TOPIC, batch))
                 done += len(batch)
                 self._windows(evaluator, folder)
@@ -148,9 +160,7 @@ class OfflineRun:
     def _second(self, receive_ns: int, evaluator: SessionEvaluator,
                 folder: SessionFolder) -> None:
         """Write the diagnostics that the live node would publish once a second."""
-        if self._first_ns is None:
-            self._first_ns = receive_ns
-        else:
+        if self._next_diagnostics_ns:
             self._windows(evaluator, folder)
             lines = evaluator.diagnostics(receive_ns)
             self._write(lambda: folder.diagnostics(receive_ns, lines))
@@ -168,9 +178,9 @@ class OfflineRun:
             self._failure = self._failure or error
 
     def _finish(self, evaluator: SessionEvaluator, folder: SessionFolder, *,
-                problems: list[str], notes: list[str], explained: set[str]) -> Outcome:
+                problems: list[str], notes: list[str], explained: set[str]) -> dict[str, Any]:
         """
-        Write what there is, whatever went wrong before.
+        Write what there is, whatever went wrong before; return the whole summary.
 
         Raises
         ------
@@ -188,7 +198,7 @@ class OfflineRun:
             raise self._failure or error from error
         if self._failure is not None:
             raise self._failure
-        return Outcome(folder.path, whole, whole['problems'])
+        return whole
 
     def _interrupted(self, recording: Recording) -> str:
         read, whole = 0.0, 0.0

@@ -7,6 +7,7 @@ from __future__ import annotations
 import difflib
 from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass
 from typing import Protocol
 
 from teleop_eval.core.errors import InputError, RecordingError, TeleopEvalError
@@ -14,7 +15,8 @@ from teleop_eval.core.samples import Sample
 from teleop_eval.core.sentences import listed
 from teleop_eval.sinks import messages
 from teleop_eval.sources.decode import full_type_name
-from teleop_eval.sources.recording import Recording, TopicInfo
+from teleop_eval.sources.malformed import malformed_sentence, nothing_sentence
+from teleop_eval.sources.recording import Recording, TopicInfo, several_types
 
 Decoder = Callable[[bytes], Sample]
 
@@ -23,6 +25,8 @@ KIND_OF_ROLE = {
     'hand': 'pose', 'shoulder': 'pose', 'rate_input': 'rate', 'operator_joints': 'joints',
     'robot_joints': 'joints', 'command': 'command', 'engaged': 'bool', 'active_mapping': 'text',
     'description': 'text', 'operator_description': 'text'}
+# Kinds that carry what is measured; the others only say how to take it.
+MEASURED = ('pose', 'joints', 'rate', 'command')
 # Kinds that messages of any other type may serve as, by the fields of their definition.
 _ANY_NAME = ('joints', 'command')
 _OR_FIELDS = ', or a type with name[] and position[] whose definition is recorded'
@@ -42,6 +46,15 @@ class RouteLike(Protocol):
     @property
     def enabled_field(self) -> str | None:
         """Boolean array of the message that switches joints on."""
+
+
+@dataclass
+class _Failures:
+    """Messages of one topic that could not be decoded; time and reason are the first one's."""
+
+    first_s: float
+    reason: str
+    count: int = 0
 
 
 class RecordedInputs:
@@ -87,7 +100,7 @@ class RecordedInputs:
         self.problems: list[str] = []
         self.decoders: dict[str, Decoder] = {}
         self.read: Counter[str] = Counter()
-        self._failures: dict[str, tuple[int, str]] = {}
+        self._failures: dict[str, _Failures] = {}
         absent = [topic for topic in routes if topic not in recording.topics]
         for topic in [topic for topic in routes if topic in recording.topics]:
             try:
@@ -102,6 +115,10 @@ class RecordedInputs:
             raise RecordingError(
                 f'The recording {recording.path} holds no message of the configured topics '
                 f'({listed(self.decoders)}); record while they are published.')
+        self._measured = [topic for topic, uses in routes.items() if any(
+            KIND_OF_ROLE[route.role] in MEASURED for route in uses)]
+        self._several = [several_types(recording, recording.topics[topic])
+                         for topic in routes if topic in recording.topics]
         self._silent = routes.keys() - self.decoders
         if recording.losses and len(absent) > 1:
             self.problems.append(f'What is left of {recording.path.name} holds nothing of '
@@ -115,21 +132,32 @@ class RecordedInputs:
         # The order of the feed makes such events itself, also where none was recorded.
         self.decoders[event_topic] = make_decoder(messages.STRING)
 
-    def refuse(self, topic: str, error: TeleopEvalError) -> None:
-        """Count a message that its decoder refused."""
-        count, first = self._failures.get(topic, (0, str(error)))
-        self._failures[topic] = (count + 1, first)
+    def refuse(self, topic: str, error: TeleopEvalError, time_s: float) -> None:
+        """Count a message that its decoder refused, so long after the first message of all."""
+        self._failures.setdefault(topic, _Failures(time_s, str(error))).count += 1
 
     def explained(self) -> set[str]:
         """Return the topics of which nothing can come and on which a sentence says why."""
-        return self._silent | {topic for topic, (count, _) in self._failures.items()
-                               if count == self.read[topic]}
+        return self._silent | {topic for topic, found in self._failures.items()
+                               if found.count == self.read[topic]}
 
     def malformed(self) -> list[str]:
         """Return a sentence for each topic with messages that could not be decoded."""
-        return [f'{count} of {self.read[topic]} messages on {topic} cannot be decoded and are '
-                f'left out; the first because: {first.rstrip(".")}.'
-                for topic, (count, first) in self._failures.items()]
+        return [malformed_sentence(topic, count=found.count, total=self.read[topic],
+                                   first_s=found.first_s, reason=found.reason)
+                for topic, found in self._failures.items()]
+
+    def nothing(self) -> str:
+        """Return a sentence where no measured sample could be read, '' elsewhere."""
+        received = sum(self.read[topic] for topic in self._measured)
+        refused = sum(found.count for topic, found in self._failures.items()
+                      if topic in self._measured)
+        return '' if received > refused else nothing_sentence(
+            self._measured, received=received)
+
+    def is_said(self, note: str) -> bool:
+        """Tell whether a note of the recording only repeats one of the problems."""
+        return any(note.startswith(text) for text in self._several)
 
 
 def _decoder(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
@@ -174,9 +202,10 @@ def _check(info: TopicInfo, uses: Sequence[RouteLike], recording: Recording,
         Several types on the topic, an encoding other than CDR, a type its use cannot read.
 
     """
-    for note in recording.notes:
-        if note.startswith(f'Topic {info.name} of ') and ' occurs as ' in note:
-            raise InputError(f'{note.split(";")[0]}; one topic must have one type.')
+    if info.others:
+        raise InputError(
+            f'{several_types(recording, info)}, so it is not evaluated; one topic must have one '
+            'type, so name another topic, or stop the other publisher and record again.')
     if info.encoding != 'cdr':
         raise InputError(
             f'Topic {info.name} of {recording.path} has the encoding {info.encoding!r}; only '

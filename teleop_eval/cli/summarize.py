@@ -11,9 +11,10 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from teleop_eval.cli.main import STATUS_FAILURE, STATUS_OK, one_line
-from teleop_eval.cli.offline_run import OfflineRun, Outcome
+from teleop_eval.cli.offline_run import OfflineRun
 from teleop_eval.core.errors import RecordingError, UsageError
 from teleop_eval.core.settings import from_parameters
+from teleop_eval.sinks.report import report
 from teleop_eval.sinks.session_folder import CONFIG_FILE, INPUTS_BAG, SUMMARY_BAG
 from teleop_eval.sources.description_file import read_descriptions
 from teleop_eval.sources.mapping_kinds import load_mapping_kinds
@@ -31,7 +32,11 @@ example:
 A session folder that the live node wrote with session.record_inputs needs no --config:
   teleop_eval summarize teleop_eval_sessions/2026-01-31_14-05-00 --out again
 
-exit status: 0 success; 1 failure, or results with problems that are printed; 2 usage.
+exit status
+  0  evaluated. Problems of the data (an absent topic, NaN, a cut recording, clocks that are
+     not synchronised, ...) are printed and stand in summary.json under "problems"
+  1  nothing could be evaluated, a result could not be written, or interrupted
+  2  usage
 
 Motion recordings are personal data: keep them, and what is computed from them, as your
 consent forms say.
@@ -53,6 +58,9 @@ def main(argv: Sequence[str] | None = None) -> int:
     namespace = _namespace(options.namespace)
     parameters = load_parameters(config, node_name=NODE_NAME, namespace=namespace)
     flat = {key: value for key, value in parameters.items() if not _OF_ROS.fullmatch(key)}
+    if recording != options.recording and config.parent == options.recording:
+        # A session is called as its folder is; the name asked for may have been taken.
+        flat.pop('session.name', None)
     for problem in load_mapping_kinds(flat):
         print(f'teleop_eval summarize: {one_line(problem)}', file=sys.stderr)
     settings = from_parameters(flat, where=str(config))
@@ -64,8 +72,8 @@ def main(argv: Sequence[str] | None = None) -> int:
         resolve=lambda topic: resolve_topic(topic, namespace), progress=options.progress,
         simulated_time=parameters.get('use_sim_time') is True)
     outcome = run.run()
-    _print(outcome)
-    return STATUS_FAILURE if outcome.problems else STATUS_OK
+    report('teleop_eval summarize', outcome.summary, outcome.folder)
+    return STATUS_OK if outcome.complete else STATUS_FAILURE
 
 
 def resolve_topic(topic: str, namespace: str) -> str:
@@ -162,14 +170,3 @@ def _namespace(text: str) -> str:
                 f'--namespace {text!r} is not valid: {part!r} must start with a letter and hold '
                 'only letters, digits and underscores.')
     return '/' + '/'.join(parts)
-
-
-def _print(outcome: Outcome) -> None:
-    from teleop_eval.sinks.tables import print_summary
-
-    # Problems go to standard error, so that they are seen when the table goes into a file.
-    print_summary({**outcome.summary, 'problems': []})
-    print(f'\nResults: {one_line(str(outcome.folder))}')
-    sys.stdout.flush()
-    for problem in outcome.problems:
-        print(f'teleop_eval summarize: {one_line(problem)}', file=sys.stderr)

@@ -21,7 +21,7 @@ from teleop_eval.core.errors import ConfigError, OutputError, UsageError
 from teleop_eval.nodes.evaluator_node import NODE_NAME, EvaluatorNode
 from teleop_eval.nodes.parts import Parts
 from teleop_eval.nodes.stop_signals import StopSignals
-from teleop_eval.sinks.tables import print_summary
+from teleop_eval.sinks.report import report
 from teleop_eval.sources.parameter_file import load_parameters
 
 # Messages are collected meanwhile; their receive times are the middleware's.
@@ -41,6 +41,13 @@ services (std_srvs/srv/Trigger):
 
 example:
   teleop_eval evaluate --ros-args --params-file evaluate.yaml -p session.record_inputs:=true
+
+exit status
+  0  ended by Ctrl-C or SIGTERM with complete files. Problems of the data (an absent topic, NaN,
+     clocks that are not synchronised, ...) are printed and stand in summary.json under
+     "problems"
+  1  wrong parameters, nothing could be evaluated, or a result could not be written
+  2  usage
 """
 
 
@@ -58,7 +65,7 @@ def main(argv: Sequence[str] | None = None, *, parts: Parts | None = None) -> in
     Returns
     -------
     int
-        0 when the session's files are complete.
+        0 when the session's files are complete; 1 when no measured sample came.
 
     Raises
     ------
@@ -88,6 +95,8 @@ def main(argv: Sequence[str] | None = None, *, parts: Parts | None = None) -> in
                 node.destroy_node()
             if node.exit_problem:
                 raise OutputError(node.exit_problem)
+            if node.nothing:
+                return 1  # the sentence is among the problems that were printed
         finally:
             context.try_shutdown()
     return 0
@@ -162,8 +171,6 @@ def _tell_end(node: EvaluatorNode) -> None:
     if node.last_path is None or node.last_summary is None:
         return
     try:
-        print_summary({**node.last_summary, 'problems': []})  # they were logged when they came
-        sys.stdout.write(f'\nResults: {node.last_path}\n')
-        sys.stdout.flush()
+        report('teleop_eval evaluate', node.last_summary, node.last_path)
     except OSError:
         pass  # the terminal is gone, as after SIGHUP; the files are not

@@ -31,6 +31,7 @@ from teleop_eval.nodes.live_session import RESET, Decoder, LiveSession
 from teleop_eval.nodes.live_summary import add_losses, summary_text
 from teleop_eval.nodes.parts import Parts, free_folder
 from teleop_eval.nodes.schedule import Every
+from teleop_eval.nodes.topic_match import LATCHED_ROLES
 from teleop_eval.sinks import messages
 from teleop_eval.sources.description_file import read_descriptions
 from teleop_eval.sources.mapping_kinds import load_mapping_kinds
@@ -83,12 +84,16 @@ class EvaluatorNode(Node):
         self._simulated = bool(self.get_parameter('use_sim_time').value)
         self._spare = self._new_evaluator()
         self._routes = self._spare.routes
+        self._measured = [topic for topic, uses in self._routes.items()
+                          if any(route.role not in LATCHED_ROLES for route in uses)]
         self.inputs = LiveInputs(
             self, self._routes, self._configured, self._parts.supported,
             simulated=self._simulated)
         self.outputs = LiveOutputs(self)
         self.session: LiveSession | None = None
         self.exit_problem = ''
+        self.nothing = ''
+        self._evaluated = False
         self.last_summary: dict[str, Any] | None = None
         self.last_path: Path | None = None
         self._changes = statuses.Changes()
@@ -157,6 +162,7 @@ class EvaluatorNode(Node):
         folder = self._parts.make_folder(
             path, self.settings, self._flat, source='live', record_inputs=session.record_inputs,
             descriptions=self._descriptions, resolve=self._resolve,
+            published=self.resolve_topic_name, node_name=self.get_name(),
             simulated_time=self._simulated)
         evaluator, self._spare = self._spare or self._new_evaluator(), None
         self.session = LiveSession(
@@ -180,9 +186,14 @@ class EvaluatorNode(Node):
         windows = self.session.add(batch.messages)
         session, self.session = self.session, None
         self._keep(session, self._lines(session))
+        nothing = session.nothing(self._measured)
         last, whole = session.finish(
             lambda summary: add_losses(summary, self.inputs, self._routes),
-            problems=self.inputs.problems_so_far(), explained=self.inputs.unusable())
+            problems=[*self.inputs.problems_so_far(), *filter(None, [nothing])],
+            explained=self.inputs.unusable())
+        # One session that was evaluated makes the run worth its while.
+        self._evaluated = self._evaluated or not nothing
+        self.nothing = '' if self._evaluated else nothing
         self._publish([*windows, *last])
         self.outputs.summary(summary_text(session, self.settings, self.inputs, self._routes,
                                           whole=whole))

@@ -19,8 +19,6 @@ from teleop_eval.core.results import StatusLine, WindowResult
 from teleop_eval.nodes import qos
 from teleop_eval.sinks import messages
 
-_RECORDED_PREFIX = '/teleop_eval/'
-
 
 class LiveOutputs:
     """Publishers of one node."""
@@ -29,7 +27,7 @@ class LiveOutputs:
         self._node = node
         self._diagnostics = node.create_publisher(
             DiagnosticArray, messages.DIAGNOSTICS_TOPIC, qos.DIAGNOSTICS)
-        self._summary = node.create_publisher(String, '~/summary', qos.LATCHED)
+        self._summary = node.create_publisher(String, messages.SUMMARY_TOPIC, qos.LATCHED)
         self._metrics: dict[tuple[str, str], Publisher] = {}
 
     def diagnostics(self, now_ns: int, lines: Sequence[StatusLine]) -> None:
@@ -44,14 +42,9 @@ class LiveOutputs:
             publisher = self._metrics.get(key)
             if publisher is None:
                 publisher = self._metrics[key] = self._node.create_publisher(
-                    Float64, metric_name(result.arm, name), qos.METRICS)
+                    Float64, messages.metric_topic(result.arm, name), qos.METRICS)
             publisher.publish(messages.float64(metric.number))
 
     def summary(self, text: str) -> None:
         """Publish the summary as JSON text; it stays for late subscribers."""
         self._summary.publish(messages.string(text))
-
-
-def metric_name(arm: str, metric: str) -> str:
-    """Return the private topic of a metric, '~/ARM/METRIC'."""
-    return '~/' + messages.metric_topic(arm, metric).removeprefix(_RECORDED_PREFIX)

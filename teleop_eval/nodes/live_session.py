@@ -20,6 +20,7 @@ from teleop_eval.core.results import StatusLine, WindowResult
 from teleop_eval.core.samples import Sample
 from teleop_eval.sinks import messages
 from teleop_eval.sources.feed_order import FeedOrder, Received
+from teleop_eval.sources.malformed import malformed_sentence, nothing_sentence
 
 Decoder = Callable[[bytes], Sample]
 SEGMENT, RESET = 'segment', 'reset'
@@ -56,6 +57,7 @@ class _Stream:
     messages: int = 0
     malformed: int = 0
     first_failure: str = ''
+    first_failure_ns: int = 0
 
 
 class LiveSession:
@@ -121,9 +123,18 @@ class LiveSession:
 
     def malformed_sentences(self) -> list[str]:
         """Return a sentence for each topic with messages that could not be decoded."""
-        return [f'{stream.malformed} of {stream.messages} messages on {topic} cannot be decoded '
-                f'and are left out; the first because: {stream.first_failure.rstrip(".")}.'
-                for topic, stream in self._known.items() if stream.malformed]
+        return [malformed_sentence(
+            topic, count=stream.malformed, total=stream.messages,
+            first_s=(stream.first_failure_ns - (self.first_ns or 0)) / 1e9,
+            reason=stream.first_failure)
+            for topic, stream in self._known.items() if stream.malformed]
+
+    def nothing(self, measured: Collection[str]) -> str:
+        """Return a sentence if no sample of these topics could be used, '' if one was."""
+        streams = [stream for topic, stream in self._known.items() if topic in measured]
+        received = sum(stream.messages for stream in streams)
+        refused = sum(stream.malformed for stream in streams)
+        return '' if received > refused else nothing_sentence(measured, received=received)
 
     def first_failures(self) -> list[str]:
         """Return why the first such message of each topic could not be decoded."""
@@ -198,7 +209,8 @@ class LiveSession:
             try:
                 sample = stream.decode(data)
             except TeleopEvalError as error:
-                stream.first_failure = stream.first_failure or str(error)
+                if not stream.malformed:
+                    stream.first_failure, stream.first_failure_ns = str(error), receive_ns
                 stream.malformed += 1
                 continue
             add(receive_ns, topic, sample)

@@ -36,8 +36,7 @@ def summary_text(session: LiveSession, settings: Settings, inputs: LiveInputs,
         summary = session.evaluator.summary()
         add_losses(summary, inputs, routes)
         facts = SessionFacts(
-            name=settings.session.name or session.folder.path.name,
-            operator=settings.session.operator, source='live',
+            name=session.folder.path.name, operator=settings.session.operator, source='live',
             start_ns=session.first_ns, end_ns=session.last_ns)
         whole = document(summary, facts, notes=session.malformed_sentences(),
                          problems=session.problems)

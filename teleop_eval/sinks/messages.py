@@ -29,8 +29,9 @@ FLOAT64 = 'std_msgs/msg/Float64'
 STRING = 'std_msgs/msg/String'
 DIAGNOSTIC_ARRAY = 'diagnostic_msgs/msg/DiagnosticArray'
 
+# Names as the node gives them; '~' stands for the node itself.
 DIAGNOSTICS_TOPIC = '/diagnostics'
-SUMMARY_TOPIC = '/teleop_eval/summary'
+SUMMARY_TOPIC = '~/summary'
 HARDWARE_ID = 'teleop_eval'
 
 _LITTLE_ENDIAN_CDR = b'\x00\x01\x00\x00'
@@ -52,14 +53,19 @@ def clean_text(text: str) -> str:
 
 def metric_topic(arm: str, metric: str) -> str:
     """
-    Return the topic of one metric, '/teleop_eval/ARM/METRIC'.
+    Return the private topic of one metric, '~/ARM/METRIC'.
 
     A dot, which parts a metric from a joint's name, becomes a slash. Any other character
     that ROS forbids in a topic becomes an underscore; such a name gets a check sum of the
     original, so that two joints never share a topic.
     """
-    return f'/teleop_eval/{_token(arm)}/' + '/'.join(
+    return f'~/{_token(arm)}/' + '/'.join(
         _token(part) for part in metric.split('.', 1))
+
+
+def plain_name(topic: str) -> str:
+    """Return a topic's full name for a node that is called /teleop_eval."""
+    return f'/teleop_eval{topic[1:]}' if topic.startswith('~') else topic
 
 
 def _token(name: str) -> str:

@@ -9,6 +9,7 @@ killed leaves what it had measured. The end adds summary.json and metrics.csv.
 
 from __future__ import annotations
 
+import functools
 import math
 import shutil
 from collections.abc import Callable, Mapping, Sequence
@@ -64,6 +65,11 @@ class SessionFolder:
         folder, so that it can be evaluated again on another machine.
     resolve
         Turns a configured topic into its full name, for the folder's config.yaml.
+    published
+        Turns a topic that the node publishes, '~/right/latency_s', into its full name; not
+        given: as the node /teleop_eval would.
+    node_name
+        Name of the node, with which its statuses begin.
     simulated_time
         Whether receive times come from a simulated clock.
 
@@ -78,12 +84,15 @@ class SessionFolder:
                  source: str, record_inputs: bool = False,
                  descriptions: Mapping[str, str] | None = None,
                  resolve: Callable[[str], str] | None = None,
-                 simulated_time: bool = False) -> None:
+                 published: Callable[[str], str] = messages.plain_name,
+                 node_name: str = 'teleop_eval', simulated_time: bool = False) -> None:
         self.path = Path(path)
         self._settings = settings
         self._source = source
         self._first_ns: int | None = None
         self._last_ns: int | None = None
+        self._published = functools.cache(published)
+        self._node_name = node_name
         self._origins: dict[str, int] = {}
         self._clock: tuple[int, int] | None = None
         self._finished = False
@@ -155,8 +164,8 @@ class SessionFolder:
 
         """
         self._seen(now_ns)
-        self._write(SUMMARY_BAG, messages.DIAGNOSTICS_TOPIC, messages.DIAGNOSTIC_ARRAY, now_ns,
-                    messages.diagnostic_array(now_ns, lines))
+        self._publish(messages.DIAGNOSTICS_TOPIC, messages.DIAGNOSTIC_ARRAY, now_ns,
+                      messages.diagnostic_array(now_ns, lines, prefix=self._node_name))
 
     def window(self, result: WindowResult) -> None:
         """
@@ -174,8 +183,8 @@ class SessionFolder:
                           (result.end_ns - origin) / 1e9)
         for name, metric in result.metrics.items():
             value = math.nan if metric.value is None else metric.value
-            self._write(SUMMARY_BAG, messages.metric_topic(result.arm, name), messages.FLOAT64,
-                        result.receive_ns, messages.float64(value))
+            self._publish(messages.metric_topic(result.arm, name), messages.FLOAT64,
+                          result.receive_ns, messages.float64(value))
 
     def flush(self) -> None:
         """
@@ -219,8 +228,8 @@ class SessionFolder:
             lambda: write_summary(self.path / SUMMARY_FILE, whole),
             lambda: write_metrics(self.path / METRICS_FILE, whole),
             self._windows.close,
-            lambda: self._write(SUMMARY_BAG, messages.SUMMARY_TOPIC, messages.STRING,
-                                self._last_ns or 0, messages.string(to_json(whole, indent=None))),
+            lambda: self._publish(messages.SUMMARY_TOPIC, messages.STRING, self._last_ns or 0,
+                                  messages.string(to_json(whole, indent=None)), qos=_LATCHED),
             *(bag.close for bag in self._bags.values())]
         failures = []
         for step in steps:
@@ -228,8 +237,10 @@ class SessionFolder:
                 step()
             except (OutputError, OSError) as error:
                 failures.append(str(error).rstrip('.'))
+        # A disk that recovered has taken all but these.
+        failures += [bag.note.rstrip('.') for bag in self._bags.values() if bag.dropped]
         if failures:
-            raise OutputError('; '.join(failures) + '.')
+            raise OutputError('; '.join(dict.fromkeys(failures)) + '.')
         return whole
 
     def _abandon(self, config: Mapping[str, str]) -> None:
@@ -245,18 +256,24 @@ class SessionFolder:
     def _document(self, summary: Mapping[str, Any], start_ns: int | None, end_ns: int | None, *,
                   notes: Sequence[str], problems: Sequence[str]) -> dict[str, Any]:
         session = self._settings.session
-        # The folder's own name may differ between two evaluations of one recording.
-        own_name = self.path.name if self._source == 'live' else self._source
+        # A live session is called as its folder is, since the name asked for may be taken; the
+        # folder's name may differ between two evaluations of one recording.
+        name = self.path.name if self._source == 'live' else session.name or self._source
         facts = SessionFacts(
-            name=session.name or own_name, operator=session.operator, source=self._source,
+            name=name, operator=session.operator, source=self._source,
             start_ns=self._first_ns if start_ns is None else start_ns,
             end_ns=self._last_ns if end_ns is None else end_ns)
         return document(summary, facts, notes=notes, problems=problems)
 
-    def _write(self, bag: str, topic: str, type_name: str, log_ns: int, data: bytes) -> None:
+    def _publish(self, topic: str, type_name: str, log_ns: int, data: bytes, *,
+                 qos: Sequence[Mapping[str, object]] = ()) -> None:
+        """Write what the node publishes, under the name under which it does."""
+        self._write(SUMMARY_BAG, self._published(topic), type_name, log_ns, data, qos=qos)
+
+    def _write(self, bag: str, topic: str, type_name: str, log_ns: int, data: bytes, *,
+               qos: Sequence[Mapping[str, object]] = ()) -> None:
         """Write a message, its topic made known to the bag first."""
         if self._topics[bag].get(topic) != type_name:
-            qos = _LATCHED if topic == messages.SUMMARY_TOPIC else ()
             self._announce(bag, topic, type_name, qos=qos)
         self._bags[bag].write(topic, log_ns, data)
 

@@ -159,25 +159,23 @@ class McapFile:
         type_name = schema.name if schema else ''
         kind = definition_format(schema.encoding) if schema else ''
         count = layout.counts.get(channel_id, 0)
+        found = TopicInfo(
+            channel.topic,
+            type_name,
+            schema.data.decode('utf-8', 'replace') if schema and kind else '',
+            kind,
+            read_qos(channel.metadata.get('offered_qos_profiles')),
+            count,
+            channel.message_encoding,
+            channel.metadata.get('topic_type_hash', ''),
+        )
         known = self.topics.get(channel.topic)
         if known is None:
-            self.topics[channel.topic] = TopicInfo(
-                channel.topic,
-                type_name,
-                schema.data.decode('utf-8', 'replace') if schema and kind else '',
-                kind,
-                read_qos(channel.metadata.get('offered_qos_profiles')),
-                count,
-                channel.message_encoding,
-                channel.metadata.get('topic_type_hash', ''),
-            )
-        elif (known.type_name, known.encoding) == (type_name, channel.message_encoding):
+            self.topics[channel.topic] = found
+        elif known.same_kind(found):
             self.topics[channel.topic] = _with_more(known, count)
         else:
-            self.notes.append(
-                f'Topic {channel.topic} of {self.path.name} occurs as {known.type_name} and as '
-                f'{type_name} ({channel.message_encoding}); the latter is left out.'
-            )
+            self.topics[channel.topic] = known.with_other(found)
             return
         self._topic_of[channel_id] = channel.topic
 

@@ -24,7 +24,7 @@ from teleop_eval.sources.bag_metadata import BagMetadata, read_bag_metadata
 from teleop_eval.sources.recording_files import Scratch, data_files, open_file
 from teleop_eval.sources.stored_file import Loss, Message, StoredFile, TopicInfo, add_note
 
-__all__ = ['Message', 'Recording', 'TopicInfo', 'open_recording']
+__all__ = ['Message', 'Recording', 'TopicInfo', 'open_recording', 'several_types']
 
 Progress = Callable[[float], None]
 
@@ -133,6 +133,10 @@ class Recording:
         self._notes = notes
         self._progress = progress
         self.topics = _all_topics(files, metadata)
+        self._notes += [
+            f'{several_types(self, topic)}; only the first is read.'
+            for topic in self.topics.values() if topic.others
+        ]
         self.start_ns = min((f.start_ns for f in files if f.start_ns is not None), default=None)
         self.end_ns = max((f.end_ns for f in files if f.end_ns is not None), default=None)
         self.message_count = sum(f.message_count or 0 for f in files)
@@ -220,6 +224,11 @@ class Recording:
                 yield from heapq.merge(*parts, key=itemgetter(0))
 
     def _flat(self, stored: StoredFile, wanted: frozenset[str]) -> Iterator[Message]:
+        # Another file may hold a topic with another type, which the topic's decoder cannot read.
+        wanted = frozenset(
+            name for name in wanted & stored.topics.keys()
+            if stored.topics[name].same_kind(self.topics[name])
+        )
         start = self.start_ns or 0
         span = max((self.end_ns or 0) - start, 1)
         for batch in stored.batches(wanted):
@@ -239,6 +248,11 @@ class Recording:
                 Loss(f'A message of {topic} at {log_ns} ns cannot be decompressed and is left '
                      'out.'),
             )
+
+
+def several_types(recording: Recording, topic: TopicInfo) -> str:
+    """Return the beginning of a sentence on a topic that occurs with several types."""
+    return f'Topic {topic.name} of {recording.path.name} occurs {topic.occurrences()}'
 
 
 def _overlapping(files: list[StoredFile]) -> list[list[StoredFile]]:
@@ -262,10 +276,13 @@ def _all_topics(files: list[StoredFile], metadata: BagMetadata) -> dict[str, Top
             known = topics.get(name)
             if known is None:
                 topics[name] = topic
+            elif not known.same_kind(topic):
+                topics[name] = known.with_other(topic)
             else:
+                known = known.with_other(topic)
                 count = (known.message_count or 0) + (topic.message_count or 0)
                 fuller = known if known.definition or not topic.definition else topic
-                topics[name] = replace(fuller, message_count=count)
+                topics[name] = replace(fuller, message_count=count, others=known.others)
     for name, topic in topics.items():
         stated = metadata.topics.get(name)
         if stated is not None and not topic.qos:

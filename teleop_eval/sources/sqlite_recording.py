@@ -6,6 +6,7 @@ from __future__ import annotations
 
 import os
 import sqlite3
+from collections import Counter
 from collections.abc import Collection, Iterator
 from contextlib import closing
 from dataclasses import replace
@@ -155,11 +156,15 @@ class SqliteFile:
         for key, name, type_name, encoding, qos, type_hash in database.execute(query):
             kind, text = definitions.get(type_name, ('', ''))
             kind = definition_format(kind)
-            self._names[key] = name
-            self.topics[name] = TopicInfo(
+            found = TopicInfo(
                 name, type_name, text if kind else '', kind, read_qos(qos), None, encoding,
                 type_hash,
             )
+            known = self.topics.setdefault(name, found)
+            if known.same_kind(found):
+                self._names[key] = name
+            else:
+                self.topics[name] = known.with_other(found)
 
     def _read_totals(self, database: sqlite3.Connection, stated: dict[str, int]) -> None:
         query = 'SELECT min(timestamp), max(timestamp), count(*) FROM messages'
@@ -168,7 +173,9 @@ class SqliteFile:
             counts = stated
         else:
             query = 'SELECT topic_id, count(*) FROM messages GROUP BY topic_id'
-            counts = {self._names.get(key, ''): count for key, count in database.execute(query)}
+            counts = Counter()
+            for key, count in database.execute(query):
+                counts[self._names.get(key, '')] += count
         self._set_counts(counts)
 
     def _set_counts(self, counts: dict[str, int]) -> None:

@@ -5,7 +5,7 @@
 from __future__ import annotations
 
 from collections.abc import Collection, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple, Protocol
 
 
@@ -31,6 +31,8 @@ class TopicInfo:
     `definition` is the text of the type's definition with `definition_format` `ros2msg` or
     `ros2idl`, both empty where the recording has none. `qos` holds the offered profiles with
     policies as names. `message_count` is None where counting would mean reading everything.
+    `others` names further types (or encodings) under which the topic occurs too; messages of
+    those are left out.
     """
 
     name: str
@@ -41,6 +43,25 @@ class TopicInfo:
     message_count: int | None = None
     encoding: str = 'cdr'
     type_hash: str = ''
+    others: tuple[str, ...] = ()
+
+    def same_kind(self, other: TopicInfo) -> bool:
+        """Tell whether type and encoding are the same, so that one decoder fits both."""
+        return (self.type_name, self.encoding) == (other.type_name, other.encoding)
+
+    def with_other(self, other: TopicInfo) -> TopicInfo:
+        """Return the topic with the kinds of message named that occur on it elsewhere."""
+        names = dict.fromkeys((*self.others, other.kind, *other.others))
+        return replace(self, others=tuple(name for name in names if name != self.kind))
+
+    @property
+    def kind(self) -> str:
+        """Return type and encoding as words."""
+        return self.type_name if self.encoding == 'cdr' else f'{self.type_name} ({self.encoding})'
+
+    def occurrences(self) -> str:
+        """Return the types under which the topic occurs, as words of a sentence."""
+        return ' and '.join(f'as {kind}' for kind in (self.kind, *self.others))
 
 
 class StoredFile(Protocol):

@@ -90,11 +90,11 @@ def test_malformed_messages_are_counted_with_the_first_reason(recording):
     for data in (b'123', b''):
         with pytest.raises(InputError) as refused:
             made.decoders['/cell/engaged'](data)
-        made.refuse('/cell/engaged', refused.value)
+        made.refuse('/cell/engaged', refused.value, 1.25 if data else 7.0)
     made.read.update(['/cell/engaged'] * 3)
     [sentence] = made.malformed()
     assert sentence.startswith('2 of 3 messages on /cell/engaged cannot be decoded and are left '
-                               'out; the first because: ')
+                               'out; the first came 1.250 s after the start: ')
     assert '3 bytes' in sentence and sentence.endswith('.') and '..' not in sentence
 
 
@@ -131,7 +131,8 @@ def test_topic_with_two_types_is_refused(tmp_path):
         writer.finish()
     with open_recording(tmp_path / 'two.mcap') as opened, pytest.raises(
             InputError, match=r'Topic /engaged of two\.mcap occurs as std_msgs/msg/Bool and as '
-                              r'std_msgs/msg/String.*; one topic must have one type\.'):
+                              r'std_msgs/msg/String, so it is not evaluated; one topic must '
+                              r'have one type, so name another .*record again\.'):
         inputs(opened, {'/engaged': (Route('right', 'engaged'),)})
 
 

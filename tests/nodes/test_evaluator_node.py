@@ -188,6 +188,9 @@ def test_sessions_start_and_stop_by_service(make_bench: Any, tmp_path: Path) -> 
     assert bench.call('stop_session').success
     assert sorted(path.name for path in (tmp_path / 'sessions').iterdir()) == [
         'trial', 'trial_2']
+    for name in ('trial', 'trial_2'):
+        summary = json.loads((tmp_path / 'sessions' / name / 'summary.json').read_text('utf-8'))
+        assert summary['session']['name'] == name
 
 
 def test_diagnostics_metrics_and_summary_are_published(
@@ -219,6 +222,32 @@ def test_diagnostics_metrics_and_summary_are_published(
     summary = json.loads(wait_until(lambda: late and late[-1], bench.step).data)
     assert summary['schema_version'] == 1
     assert summary['arms']['right']['inputs']['robot_joints']['topic'] == '/cell/robot_joints'
+
+
+def test_topics_are_recorded_as_they_are_published(
+        make_bench: Any, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """In a namespace, under another name, remapped: the bag has what a listener hears."""
+    monkeypatch.setattr(evaluator_node, 'DIAGNOSTICS_S', 0.05)
+    bench = make_bench('-r', '__ns:=/cell', '-r', '__node:=judge', '-p', 'session.name:=s',
+                       '-r', '/diagnostics:=/cell/health')
+    heard = bench.listen(DiagnosticArray, '/cell/health')
+    joints = bench.publisher(JointState, '/cell/robot_joints')
+
+    def publish() -> None:
+        joints.publish(JointState(name=['j1', 'j2'], position=[0.0, 0.0]))
+        bench.step()
+    wait_until(lambda: heard and '/cell/judge/right/latency_s' in dict(
+        bench.stack.get_publisher_names_and_types_by_node('judge', '/cell')), publish)
+    bench.node.stop_session()
+    published = {name for name, _ in
+                 bench.stack.get_publisher_names_and_types_by_node('judge', '/cell')}
+    with open_recording(tmp_path / 'sessions' / 's' / 'summary') as recording:
+        kept = list(recording.messages())
+        assert set(recording.topics) == published - {'/rosout', '/parameter_events'} == {
+            '/cell/health', '/cell/judge/summary', '/cell/judge/right/samples',
+            '/cell/judge/right/latency_s'}
+    assert b'judge: right: inputs' in next(
+        data for _, topic, data in kept if topic == '/cell/health')
 
 
 def test_a_malformed_message_is_counted_and_shown(

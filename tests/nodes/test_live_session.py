@@ -117,13 +117,14 @@ def test_events_are_part_of_the_stream(session: LiveSession) -> None:
 
 def test_a_malformed_message_is_recorded_counted_and_left_out(session: LiveSession) -> None:
     session.add([text(1, 'a'), Received(2, '/mapping', 2, b'\0\1\0\0\xff\0\0\0a')])
-    session.add([text(3, 'b'), Received(4, '/refused', 1, b'x')])
+    session.add([text(3, 'b'), Received(2_500_000_001, '/refused', 1, b'x')])
     assert [sample.text for _, _, sample in fed(session)] == ['a', 'b']
     assert len(session.folder.inputs) == 4  # type: ignore[attr-defined]
     assert session.malformed == {'/mapping': 1, '/refused': 1}
     sentences = session.malformed_sentences()
     assert sentences[0].startswith('1 of 3 messages on /mapping cannot be decoded')
-    assert sentences[1].endswith('because: This type cannot be read.')
+    assert sentences[1].endswith(
+        'it came 2.500 s after the start: This type cannot be read.')
 
 
 def test_a_full_disk_is_said_and_the_evaluation_goes_on(session: LiveSession) -> None:

@@ -186,13 +186,32 @@ def test_two_arms_line_up_unless_their_clocks_differ(tmp_path):
         ['right', 0.0, 2.0], ['left', 2.0, 4.0], ['other', 0.0, 2.0], ['other', 2.0, 4.0]]
 
 
-def test_name_given_in_the_settings_wins_and_a_live_session_has_its_folders(tmp_path):
+def test_a_live_session_is_called_as_its_folder_is(tmp_path):
+    """The name asked for may be taken: then the folder has another, and so has the session."""
     assert make(tmp_path / 'x', source='live').finish({})['session']['name'] == 'x'
     flat = {**FLAT, 'session.name': 'trial_7'}
-    folder = SessionFolder(tmp_path / 'y', from_parameters(flat), flat, source='live')
+    folder = SessionFolder(tmp_path / 'trial_7_2', from_parameters(flat), flat, source='live')
     assert folder.finish({})['session'] == {
-        'name': 'trial_7', 'condition': 'teleoperated', 'operator': 'p01', 'start_ns': None,
+        'name': 'trial_7_2', 'condition': 'teleoperated', 'operator': 'p01', 'start_ns': None,
         'end_ns': None, 'duration_s': None, 'source': 'live'}
+
+
+def test_name_given_in_the_settings_wins_over_that_of_a_recording(tmp_path):
+    flat = {**FLAT, 'session.name': 'trial_7'}
+    folder = SessionFolder(tmp_path / 'y', from_parameters(flat), flat, source='rec')
+    assert folder.finish({})['session']['name'] == 'trial_7'
+
+
+def test_topics_are_recorded_under_the_names_of_the_node_that_publishes(tmp_path):
+    folder = make(tmp_path / 's', node_name='judge', published=lambda topic: topic.replace(
+        '~', '/cell/judge').replace('/diagnostics', '/cell/diagnostics'))
+    folder.window(window(0))
+    folder.diagnostics(START, [StatusLine('right: latency', 1, 'late', {})])
+    folder.finish(summary())
+    bag = read_bag(tmp_path / 's' / 'summary')
+    assert set(bag) == {'/cell/judge/right/latency_s', '/cell/judge/right/tracking_error_rms_m',
+                        '/cell/diagnostics', '/cell/judge/summary'}
+    assert bag['/cell/diagnostics'][0][1].status[0].name == 'judge: right: latency'
 
 
 def test_hostile_joint_names_get_topics_and_cells(tmp_path):
@@ -271,6 +290,15 @@ def test_bag_that_cannot_be_closed_spoils_no_file(tmp_path, monkeypatch):
         folder.finish(summary())
     assert json.loads((tmp_path / 's' / 'summary.json').read_text())['schema_version'] == 1
     assert (tmp_path / 's' / 'metrics.csv').exists()
+
+
+def test_messages_that_the_disk_refused_for_too_long_are_a_failure(tmp_path):
+    folder = make(tmp_path / 's', record_inputs=True)
+    bag = folder._bags['inputs']
+    bag.dropped, bag.note = 3, '3 messages are missing.'
+    with pytest.raises(OutputError, match=r'^3 messages are missing\.$'):
+        folder.finish(summary())
+    assert (tmp_path / 's' / 'summary.json').exists()
 
 
 def test_killed_process_leaves_its_windows(tmp_path):

@@ -323,6 +323,29 @@ def test_a_topic_with_two_types_gives_the_first(tmp_path):
         assert 'occurs as std_msgs/msg/String and as std_msgs/msg/Bool' in recording.notes[0]
 
 
+@pytest.mark.parametrize('plugin', list(StoragePlugin))
+def test_a_type_that_changes_between_or_within_files_is_named(tmp_path, plugin):
+    """Two topics of one name in one file, and a second file with the second type first."""
+    types = (STRING, 'std_msgs/msg/Bool')
+    for k, order in enumerate((types, types[::-1])):
+        with Writer(tmp_path / f'bag{k}', version=9, storage_plugin=plugin) as writer:
+            for number, name in enumerate(order):
+                connection = writer.add_connection('/t', name, typestore=STORE)
+                for _ in range(1 + number):
+                    writer.write(connection, START + k, name.encode())
+    (tmp_path / 'split').mkdir()
+    for k in range(2):
+        [file] = [path for path in (tmp_path / f'bag{k}').iterdir() if path.suffix != '.yaml']
+        file.rename(tmp_path / 'split' / f'split_{k}{file.suffix}')
+    with open_recording(tmp_path / 'split') as recording:
+        topic = recording.topics['/t']
+        assert (topic.type_name, topic.others) == (types[0], types[1:])
+        assert [m.data.decode() for m in recording.messages()] == [STRING]
+        assert [note for note in recording.notes if 'occurs' in note] == [
+            'Topic /t of split occurs as std_msgs/msg/String and as std_msgs/msg/Bool; only the '
+            'first is read.']
+
+
 @pytest.mark.parametrize('plugin', ['mcap', 'unindexed', 'sqlite3'])
 def test_memory_does_not_grow_with_the_recording(tmp_path, plugin):
     """Peak of Python's allocations while iterating; eight times the length, same peak."""
