@@ -50,7 +50,7 @@ LAYERS = {
                    'numpy rich rosbags yaml mcap'),
     'cli': layer('cli core sources sinks resources __init__', 'numpy rich'),
     'nodes': layer('nodes core sources sinks resources __init__', 'numpy', ros=True),
-    'teardown_cell': layer('teardown_cell core sinks resources cli.main',
+    'teardown_cell': layer('teardown_cell core sinks resources cli.main cli.called',
                            'numpy scipy rich', ros=True),
 }
 # One library for one file: only the description of a robot is foreign XML.

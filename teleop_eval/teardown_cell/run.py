@@ -18,6 +18,7 @@ from typing import Any
 
 from std_msgs.msg import Int64
 
+from teleop_eval.cli.called import path_here, program_here
 from teleop_eval.core.errors import OutputError, TeleopEvalError, UsageError
 from teleop_eval.resources import config_file
 from teleop_eval.sinks.tables import print_summary
@@ -257,8 +258,9 @@ def _report(session: Path, plan: Plan, outcome: Outcome) -> int:
     truth['largest_command_lateness_s'] = outcome.lateness_s
     _write(session / 'truth.json', json.dumps(truth, indent=1) + '\n')
     print_summary(summary, truth=truth)
-    _say(f'\n{CAUTION}\n\nSession folder: {session}\n'
-         f'Next: teleop_eval summarize {session} --out {session.name}_again')
+    folder = path_here(session)
+    _say(f'\n{CAUTION}\n\nSession folder: {folder}\n'
+         f'Next: {program_here()} summarize {folder} --out {session.name}_again')
     if outcome.lateness_s > GRACE_S:
         _say(f'This machine was too busy: commands came up to {outcome.lateness_s:.2f} s late, '
              'so the arm waited and the numbers may differ from the truth; run it again.')
