@@ -116,6 +116,7 @@ class Segment:
         self._next_cell += windows * self._cells
         self.plan_next()
         self._measurement.skip(start_ns, self.closed_until_ns)
+        self._let_go(self.closed_until_ns)
 
     def _close(self, cells: int, receive_ns: int, results: list[WindowResult]) -> None:
         span = Span(self._origin_ns, self._period_ns, self._next_cell, cells)
@@ -123,10 +124,14 @@ class Segment:
         if result is not None:
             results.append(result)
         self._next_cell += cells
-        for stream in self._inputs.streams:
-            stream.close(span.end_ns)
-        for state in self._inputs.states:
-            state.close(span.end_ns)
+        self._let_go(span.end_ns)
         for age in self._inputs.ages:
             age.close_window(receive_ns)
         self.plan_next()
+
+    def _let_go(self, end_ns: int) -> None:
+        """Let go of what no later window needs; what comes for an earlier one is late."""
+        for stream in self._inputs.streams:
+            stream.close(end_ns)
+        for state in self._inputs.states:
+            state.close(end_ns)
