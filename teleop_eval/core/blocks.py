@@ -25,7 +25,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from scipy.special import bdtr, stdtrit  # far quicker to import than scipy.stats
+from scipy.special import bdtr, ndtri, stdtrit  # far quicker to import than scipy.stats
 
 # Fewer blocks than this carry no interval.
 MIN_BLOCKS = 20
@@ -36,6 +36,9 @@ _MIN_BATCHES = 10
 # The inflation below has a pole at 1; beyond this the run is too short for any interval.
 _LAG1_CAP = 0.8
 _LEVEL = 0.95
+# Blocks are alike if their means differ by less than rounding.
+_ALIKE = 1e-12
+ALIKE = 'no interval: all blocks are alike and show no spread'
 
 
 class BatchMeans:
@@ -106,9 +109,22 @@ class BatchMeans:
         weight = math.fsum(row[1] for row in self._rows)
         return math.fsum(row[0] for row in self._rows) / weight if weight else math.nan
 
+    @property
+    def alike(self) -> bool:
+        """Tell whether all blocks have the same mean, and so say nothing of the spread."""
+        mean = self.mean
+        return bool(self._rows) and all(
+            abs(total - mean * weight) <= _ALIKE * abs(mean) * weight
+            for total, weight in self._rows)
+
+    @property
+    def caveat(self) -> str:
+        """Return why enough blocks give no interval, '' if they give one or are too few."""
+        return ALIKE if self.n_blocks >= MIN_BLOCKS and self.alike else ''
+
     def ci95(self) -> tuple[float, float] | None:
-        """Return the 95 % interval of the mean, None with fewer than 20 blocks."""
-        if self.n_blocks < MIN_BLOCKS:
+        """Return the 95 % interval of the mean, None with fewer than 20 blocks or all alike."""
+        if self.n_blocks < MIN_BLOCKS or self.alike:
             return None
         rows = self._rows
         if 2 * self._filled < self._size:
@@ -132,7 +148,7 @@ class BatchMeans:
 
     def root_mean_ci(self) -> tuple[float, float] | None:
         """
-        Return the 95 % interval of the root mean, None with fewer than 20 blocks.
+        Return the 95 % interval of the root mean, None where the mean has none.
 
         With sums of squares as block sums this is the interval of the RMS: the square root of
         both ends of the interval of the mean square, a negative lower end taken as 0.
@@ -164,14 +180,42 @@ def median_ci(values: np.ndarray) -> tuple[float, float] | None:
     Return the distribution-free 95 % interval of the median of independent values (n,).
 
     Not finite ones are left out. The level is exact for a continuous distribution, never
-    below 95 %; None with fewer than 20 values.
+    below 95 %; None with fewer than 20 values, or where both ends are the same value.
     """
-    values = np.asarray(values, dtype=float).reshape(-1)
-    values = np.sort(values[np.isfinite(values)])
+    values = _sorted(values)
     ranks = median_ranks(values.size)
     if values.size < MIN_BLOCKS or ranks is None:
         return None
-    return float(values[ranks[0] - 1]), float(values[ranks[1] - 1])
+    low, high = float(values[ranks[0] - 1]), float(values[ranks[1] - 1])
+    return (low, high) if high > low else None
+
+
+def median_error(values: np.ndarray) -> float | None:
+    """
+    Return the standard error of the median of independent values (n,), None as `median_ci`.
+
+    Half the width of the interval between the same two ranks, divided by the normal quantile
+    of its exact binomial level.
+
+    References
+    ----------
+    J. W. McKean, R. M. Schrader, "A comparison of methods for studentizing the sample median",
+    Communications in Statistics - Simulation and Computation 13(6), 1984, 751-773 (citation
+    from memory).
+
+    """
+    values = _sorted(values)
+    interval, ranks = median_ci(values), median_ranks(values.size)
+    if interval is None or ranks is None:
+        return None
+    quantile = -float(ndtri(bdtr(ranks[0] - 1, values.size, 0.5)))
+    return (interval[1] - interval[0]) / (2.0 * quantile)
+
+
+def _sorted(values: np.ndarray) -> np.ndarray:
+    """Return the finite ones of some values in rising order."""
+    values = np.asarray(values, dtype=float).reshape(-1)
+    return np.sort(values[np.isfinite(values)])
 
 
 def _plus(a: tuple[float, float], b: tuple[float, float]) -> tuple[float, float]:

@@ -11,9 +11,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from teleop_eval.core.blocks import median_ci
+from teleop_eval.core.blocks import ALIKE, MIN_BLOCKS, median_ci, median_error
 from teleop_eval.core.latency import DelayEstimate
-from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, joined, missing
 
 # The level on /diagnostics follows the median of so many valid windows in a row.
 LEVEL_WINDOWS = 3
@@ -112,7 +112,9 @@ class DelayStatistics:
         """
         Return the median over the windows that gave a value.
 
-        `reason` says why there is no window at all; `caveat` goes with a value.
+        `reason` says why there is no window at all; `caveat` goes with a value. Of the details,
+        `standard_error_s` is that of the median, from the same windows as its interval;
+        `window_standard_error_s` is the RMS of what single windows estimate of their own error.
         """
         details: dict[str, object] = {'windows': self.windows}
         if not self._delays:
@@ -120,19 +122,23 @@ class DelayStatistics:
                 return missing(INSUFFICIENT, 's', reason, **details)
             words, times = self._reasons.most_common(1)[0]
             newest = self._newest[words]
-            return missing(newest.status, 's', f'{newest.reason} (in {times} of {self.windows} '
-                           'windows that gave no value)', **details)
+            return missing(
+                newest.status, 's', f'{newest.reason.removesuffix(".")} (in {times} of '
+                f'{self.windows} windows that gave no value).', **details)
         delays, errors = np.array(self._delays), np.array(self._errors)
         details |= {
-            'standard_error_s': float(np.sqrt(np.mean(errors ** 2))),
+            'standard_error_s': median_error(delays),
+            'window_standard_error_s': float(np.sqrt(np.mean(errors ** 2))),
             'p95_s': float(np.percentile(delays, 95.0)),
             'spread_s': float(np.std(delays, ddof=1)) if len(delays) > 1 else None,
             'correlation': float(np.median(self._peaks)),
             'space': self._space,
         }
+        interval = median_ci(delays)
+        alike = ALIKE if interval is None and len(delays) >= MIN_BLOCKS else ''
         return Metric(
-            float(np.median(delays)), 's', median_ci(delays), len(delays),
-            self._samples, reason=caveat, details=details)
+            float(np.median(delays)), 's', interval, len(delays),
+            self._samples, reason=joined(caveat, alike), details=details)
 
 
 def window_metric(estimate: DelayEstimate | None, space: str) -> Metric:

@@ -220,7 +220,7 @@ class JointRangeUse:
         fault = max(values, key=values.__getitem__)
         return Metric(
             self._near_any.mean, '1', ci95=interval, n=self._near_any.n_blocks,
-            samples=self._samples, details={
+            samples=self._samples, reason=self._near_any.caveat, details={
                 'joints': values, 'joint': fault if values[fault] > 0.0 else None,
                 'near_share_of_span': NEAR_SHARE})
 

@@ -79,3 +79,8 @@ class Metric:
 def missing(status: str, unit: str, reason: str, **details: object) -> Metric:
     """Return a metric without a value, with the reason as one sentence."""
     return Metric(None, unit, status=status, reason=reason, details=dict(details))
+
+
+def joined(*caveats: str) -> str:
+    """Return the caveats that there are as one reason."""
+    return '; '.join(caveat for caveat in caveats if caveat)

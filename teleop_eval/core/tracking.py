@@ -12,7 +12,7 @@ import numpy as np
 from teleop_eval.core import rotations
 from teleop_eval.core.blocks import BatchMeans
 from teleop_eval.core.histogram import StreamingHistogram
-from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, joined, missing
 
 ARM_LENGTHS = 'arm lengths'
 
@@ -54,7 +54,8 @@ class MagnitudeStatistics:
                   self._histogram.max)
         return {
             name: Metric(float(value) * factor, unit, interval if which == 0 else None,
-                         self._blocks.n_blocks, self.samples, reason=caveat)
+                         self._blocks.n_blocks, self.samples,
+                         reason=joined(caveat, self._blocks.caveat if which == 0 else ''))
             for which, (name, value) in enumerate(zip(names, values, strict=True))
         }
 

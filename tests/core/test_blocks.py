@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from scipy import signal, stats
 
-from teleop_eval.core.blocks import BatchMeans, median_ci, median_ranks
+from teleop_eval.core.blocks import BatchMeans, median_ci, median_error, median_ranks
 
 
 def batches(values, weights=None, max_batches=64):
@@ -110,8 +110,17 @@ def test_blocks_without_weight_or_number_do_not_count():
         BatchMeans(41)
 
 
-def test_constant_blocks_have_an_interval_of_no_width():
-    assert batches(np.full(50, 2.5)).ci95() == (2.5, 2.5)
+@pytest.mark.parametrize('value', [0.0, 1.0, 2.5, 0.1])
+def test_blocks_that_are_all_alike_tell_no_interval(value):
+    weights = np.random.default_rng(3).uniform(0.5, 2.0, 50)
+    for means in (batches(np.full(50, value)), batches(np.full(50, value), weights)):
+        assert means.mean == pytest.approx(value, rel=1e-12)
+        assert means.ci95() is None and means.root_mean_ci() is None
+        assert 'all blocks are alike' in means.caveat
+        # One that differs is a spread.
+        means.add(2.0 + value)
+        assert means.ci95() is not None and means.caveat == ''
+    assert batches(np.full(19, value)).caveat == ''
 
 
 def test_root_mean_interval_is_the_root_of_both_ends():
@@ -186,6 +195,22 @@ def test_too_few_values_have_no_interval():
     assert median_ci(np.array([])) is None
     assert median_ci(np.append(np.arange(19.0), np.nan)) is None
     assert median_ci(np.arange(20.0)[::-1]) == (5.0, 14.0)
+
+
+def test_median_of_values_all_alike_has_no_interval():
+    assert median_ci(np.full(30, 0.1)) is None and median_error(np.full(30, 0.1)) is None
+    assert median_error(np.arange(19.0)) is None
+
+
+@pytest.mark.parametrize('n', [20, 60, 400])
+def test_error_of_the_median_is_its_spread_over_repetitions(n):
+    """Normal values: also sqrt(pi / 2) / sqrt(n), the asymptotic closed form, within 10 %."""
+    rng = np.random.default_rng(11)
+    runs = rng.normal(0.0, 3.0, (1500, n))
+    spread = np.std(np.median(runs, axis=1))
+    told = np.sqrt(np.mean([median_error(run) ** 2 for run in runs]))
+    assert told == pytest.approx(spread, rel=0.12)
+    assert told == pytest.approx(3.0 * math.sqrt(math.pi / 2.0 / n), rel=0.1)
 
 
 def test_median_interval_covers_at_its_exact_level():

@@ -77,6 +77,17 @@ def test_still_joint_in_the_middle_has_the_largest_margin():
     assert joint[SHARE].value == 0.0
 
 
+@pytest.mark.parametrize('position, share', [(0.5, 0.0), (0.99, 1.0)])
+def test_share_that_never_changes_tells_no_interval(position, share):
+    arm = used(np.full((3000, 1), position), [0.0], [1.0], windows=30).metrics()[SHARE]
+    assert (arm.value, arm.ci95, arm.n, arm.status) == (share, None, 30, 'ok')
+    assert 'all blocks are alike' in arm.reason
+    q = np.full((3000, 1), position)
+    q[1500:1520] = 1.49 - position
+    arm = used(q, [0.0], [1.0], windows=30).metrics()[SHARE]
+    assert arm.ci95 is not None and arm.reason == ''
+
+
 def test_overshoot_is_clipped_and_reported_with_the_joint_at_fault():
     q = np.zeros((100, 3))
     q[50] = [1.002, -1.02, 0.0]
