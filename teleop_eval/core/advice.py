@@ -136,12 +136,13 @@ def _how_sure(name: str, metrics: Mapping[str, Metric], suffix: str, *, but: str
     if not others:
         return 'no other term could be formed beside it'
     second = max(others, key=lambda other: others[other].number)
-    if first.ci95 is None or others[second].ci95 is None:
+    interval = others[second].ci95
+    if first.ci95 is None or interval is None:
         return (f'not sure: {first.n} windows are too few for an interval, and {WORDS[second]} '
                 f'has {others[second].number:.3f}')
     low, high = first.ci95
-    if low > others[second].ci95[1]:
+    if low > interval[1]:
         return (f'sure: its 95 % interval {low:.3f} to {high:.3f} lies above that of the next, '
                 f'{WORDS[second]}')
     return (f'not sure: its 95 % interval {low:.3f} to {high:.3f} overlaps that of '
-            f'{WORDS[second]} ({others[second].ci95[0]:.3f} to {others[second].ci95[1]:.3f})')
+            f'{WORDS[second]} ({interval[0]:.3f} to {interval[1]:.3f})')

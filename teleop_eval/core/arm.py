@@ -59,12 +59,18 @@ class ArmEvaluator:
     results
         Where closed windows go, shared by all arms so that they keep the order of closing.
 
+    Attributes
+    ----------
+    predicts
+        Whether every configured mapping is predicted beside the active one; set it at once.
+
     """
 
     def __init__(self, name: str, settings: Settings, *, urdf: str | None = None,
                  operator_urdf: str | None = None, calibration: CalibrationInterval | None = None,
                  results: list[WindowResult] | None = None) -> None:
         self.name = name
+        self.predicts = False
         self.settings = settings
         self.arm: ArmSettings = settings.arms[name]
         self.operator_side = OperatorSide(self.arm.operator, calibration)
@@ -279,6 +285,8 @@ class ArmEvaluator:
         """Give the estimated rotation (4,) x, y, z, w to every mapping that lacks one."""
         for model in self.setup.models.values():
             model.take_tool_rotation(hand_to_tool)
+        if self.measurement is not None and self.measurement.ideal.candidates is not None:
+            self.measurement.ideal.candidates.take_tool_rotation(hand_to_tool)
         shown = ', '.join(f'{part:.4f}' for part in hand_to_tool)
         self.notes.say(f'{self.name}: hand-to-tool rotation estimated from motion: x, y, z, w = '
                        f'{shown}.')

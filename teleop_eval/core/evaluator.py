@@ -62,15 +62,19 @@ class SessionEvaluator:
         Turns a configured topic name into the full name used in `add`.
     simulated_time
         Whether receive times come from a simulated clock.
+    candidates
+        Whether to predict every configured mapping on the same operator motion.
 
     """
 
     def __init__(self, settings: Settings, *, descriptions: Mapping[str, str] | None = None,
-                 resolve: Callable[[str], str] = absolute, simulated_time: bool = False) -> None:
+                 resolve: Callable[[str], str] = absolute, simulated_time: bool = False,
+                 candidates: bool = False) -> None:
         self.settings = settings
         self._descriptions = dict(descriptions or {})
         self._resolve = resolve
         self._simulated_time = simulated_time
+        self._candidates = candidates
         self._receive_ns = 0
         self._notes = Sentences()
         self._problems = Sentences()
@@ -87,6 +91,8 @@ class SessionEvaluator:
                 operator_urdf=self._descriptions.get(operator_key(name)),
                 calibration=calibrations.get(name), results=self._results)
             for name in self.settings.arms}
+        for one in self.arms.values():
+            one.predicts = self._candidates
         self._status = {name: ArmStatus(arm) for name, arm in self.arms.items()}
         routes: dict[str, list[Route]] = {}
         for name, arm in self.settings.arms.items():

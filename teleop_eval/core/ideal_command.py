@@ -10,17 +10,17 @@ import numpy as np
 
 from teleop_eval.core.anchors import AnchorBook
 from teleop_eval.core.boundaries import CellStates
+from teleop_eval.core.candidate_run import CandidateRun
 from teleop_eval.core.geometry import RobotGeometry
 from teleop_eval.core.history import Track
-from teleop_eval.core.mappings import Anchor, Ideal, MappingModel, OperatorCells
+from teleop_eval.core.mapping_input import operator_cells
+from teleop_eval.core.mappings import Anchor, Ideal, MappingModel
 from teleop_eval.core.mappings.base import HAND, VELOCITY
 from teleop_eval.core.mappings.guarded import checked_ideal
 from teleop_eval.core.window import Span
 
 if TYPE_CHECKING:
     from teleop_eval.core.arm import ArmEvaluator
-
-_NO_TURN = (0.0, 0.0, 0.0, 1.0)
 
 
 class IdealCommand:
@@ -35,6 +35,8 @@ class IdealCommand:
         By label, what a model did wrong last.
     made
         Labels of which an ideal command was made.
+    candidates
+        Every configured mapping on the same motion, None unless asked for.
 
     """
 
@@ -44,10 +46,13 @@ class IdealCommand:
         self.anchors = AnchorBook()
         self.faults: dict[str, str] = {}
         self.made: set[str] = set()
+        self.candidates = CandidateRun(arm, period_s) if arm.predicts else None
 
     def interrupt(self) -> None:
         """Pass over a stretch without data."""
         self.anchors.interrupt()
+        if self.candidates is not None:
+            self.candidates.interrupt()
         for model in self._arm.setup.models.values():
             model.restart()
 
@@ -68,6 +73,8 @@ class IdealCommand:
                 tracks = tracks | {'p_r': Track.computed(
                     shoulder + arm.robot.reach.length_m * u_r.values, u_r.valid)}
             anchors = self.anchors.of_window(span, states, tracks)
+        if self.candidates is not None:
+            self.candidates.add(states, tracks, robot_joints, anchors)
         for index in np.unique(states.label[states.label >= 0]):
             label = arm.boundaries.labels[index]
             model = arm.setup.models.get(label)
@@ -92,24 +99,6 @@ class IdealCommand:
                 joined[name] = Track(np.where(here[:, None], track.values, old.values),
                                      np.where(here, track.valid, old.valid))
         return joined
-
-
-def operator_cells(tracks: dict[str, Track], joint_names: tuple[str, ...],
-                   robot_joints: np.ndarray, *, stretch: np.ndarray,
-                   anchors: dict[int, Anchor], period_s: float) -> OperatorCells:
-    """Return one window's tracks as a mapping model wants them."""
-    def values(name: str) -> np.ndarray | None:
-        return tracks[name].values if name in tracks else None
-
-    def turns(name: str) -> np.ndarray | None:
-        track = tracks.get(name)
-        return None if track is None else np.where(track.valid[:, None], track.values, _NO_TURN)
-
-    return OperatorCells(
-        hand_m=values('hand'), hand_xyzw=turns('hand_turn'), joints=values('operator_joints'),
-        joint_names=joint_names, robot_joints=robot_joints, shoulder_m=values('shoulder'),
-        rate_input=values('rate_input'), robot_m=values('p_r'), robot_xyzw=turns('turn_r'),
-        period_s=period_s, stretch=stretch, anchors=anchors)
 
 
 def tracks_of(model: MappingModel, ideal: Ideal, operator: dict[str, Track],

@@ -55,7 +55,14 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
         'geometry': _geometry(arm),
         'inputs': _inputs(arm, simulated_time=simulated_time),
         'mappings': mappings,
+        **_candidates(measured, reachable),
     }
+
+
+def _candidates(measured: ArmMeasurement | None,
+                reachable: ReachableSet | None) -> dict[str, Any]:
+    run = None if measured is None else measured.ideal.candidates
+    return {} if run is None else {'candidates': run.summary(reachable)}
 
 
 def _anchored(arm: ArmEvaluator, label: str) -> bool:

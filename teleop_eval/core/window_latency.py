@@ -164,9 +164,9 @@ class WindowLatency:
             if reference is None or robot is None:
                 continue
             seen = self.in_use(span.end_ns, label, (name,))
+            before, after = self._on_one_scale(pair, reference.values, robot.values)
             response.add(
-                *self._on_one_scale(pair, reference.values, robot.values),
-                here & reference.valid & robot.valid, history.run[-span.count:],
+                before, after, here & reference.valid & robot.valid, history.run[-span.count:],
                 shift_cells=0 if seen is None else round(seen.delay_s / self._period_s))
 
     def _on_one_scale(self, pair: Pair, *sides: np.ndarray) -> list[np.ndarray]:
