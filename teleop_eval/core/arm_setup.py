@@ -188,7 +188,9 @@ def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup,
                 'not evaluated.')
             continue
         stream = SampledStream(role, topic, held=role == 'command' and arm.command.hold)
-        setup.intakes[role] = Intake(name, stream, matcher, joy_axes=arm.operator.joy_axes)
+        setup.intakes[role] = Intake(
+            name, stream, matcher, joy_axes=arm.operator.joy_axes,
+            base_link=arm.robot.base_link if role == 'command' else None)
 
 
 def silent_inputs(name: str, intakes: Mapping[str, Intake],

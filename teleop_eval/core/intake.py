@@ -48,6 +48,8 @@ class Intake:
         Of the joints, None where none are expected.
     joy_axes
         Which axes of a joystick are x, y, z, rx, ry, rz; -1 for none.
+    base_link
+        Frame in which poses and velocities are expected, None where any one frame will do.
 
     Attributes
     ----------
@@ -61,8 +63,9 @@ class Intake:
     """
 
     def __init__(self, arm: str, stream: SampledStream, matcher: JointMatcher | None, *,
-                 joy_axes: Sequence[int] = range(6)) -> None:
+                 joy_axes: Sequence[int] = range(6), base_link: str | None = None) -> None:
         self._arm = arm
+        self._base_link = base_link
         self.stream = stream
         self.matcher = matcher
         self.problems = Sentences()
@@ -139,13 +142,26 @@ class Intake:
             _POINT)
 
     def _in_first_frame(self, frame_id: str) -> bool:
+        if not frame_id:
+            # A message without a frame is taken to be in that of the others.
+            return True
         if self._frame_id is None:
             self._frame_id = frame_id
+            self._check_frame(frame_id)
         elif frame_id != self._frame_id:
             self.problem(f'frame_id changed from {shown(self._frame_id)} to '
                          f'{shown(frame_id)}; only messages in the first frame are used')
             return False
         return True
+
+    def _check_frame(self, frame_id: str) -> None:
+        """Say once if messages are not in the frame in which they are evaluated."""
+        base = self._base_link
+        # Names of tf2 have no slash in front, those of older publishers do.
+        if base and frame_id.lstrip('/') != base.lstrip('/'):
+            self.problem(f'messages come in frame {shown(frame_id)}, but are evaluated as if they '
+                         f'were in robot.base_link, {shown(base)}; publish them in {shown(base)}, '
+                         'or give the link of their frame as base_link')
 
     def _twist(self, receive_ns: int, sample: TwistSample) -> list[Row]:
         if self.stream.role not in (RATE_INPUT, 'command'):

@@ -257,6 +257,11 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
     if arm.active_mapping.topic and arm.active_mapping.fixed:
         raise ConfigError(f'{where}: {key}.active_mapping has both topic and fixed; keep one.')
     fixed = arm.active_mapping.fixed
+    if len(arm.mappings) > 1 and not (fixed or arm.active_mapping.topic):
+        raise ConfigError(
+            f'{where}: {key} has the mappings {listed(arm.mappings)}; say which is active: give '
+            f'{key}.active_mapping.topic, on which a label comes, or {key}.active_mapping.fixed, '
+            'one of the labels.')
     if fixed and arm.mappings and fixed not in arm.mappings:
         near = nearest(fixed, arm.mappings)
         hint = f'did you mean {near!r}?' if near else 'correct it.'

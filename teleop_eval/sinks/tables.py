@@ -161,7 +161,7 @@ def _arm(arm: str, of_arm: Mapping[str, Any],
         heading.append(f'; arm length: {", ".join(lengths)}', style='not bold')
     mappings = _mapping(of_arm.get('mappings'))
     if not mappings:
-        return [heading, Text('No mapping was active while the arm was evaluated.')]
+        return [heading, Text(_why_nothing(of_arm))]
     parts: list[RenderableType] = [heading]
     remarks = _Remarks()
     labels = list(mappings)
@@ -172,6 +172,17 @@ def _arm(arm: str, of_arm: Mapping[str, Any],
     parts.append(Text('L = arm lengths; further metrics and single joints: metrics.csv',
                       style='dim'))
     return parts + remarks.lines() + _not_configured(mappings)
+
+
+def _why_nothing(of_arm: Mapping[str, Any]) -> str:
+    """Return why an arm has no metrics under any mapping."""
+    if _mapping(of_arm.get('time_base')).get('base'):
+        return 'No mapping was active while the arm was evaluated.'
+    inputs = [_mapping(one) for one in _mapping(of_arm.get('inputs')).values()]
+    silent = [clean(str(one.get('topic'))) for one in inputs if not one.get('messages')]
+    if not silent:
+        return 'Nothing was evaluated: too few usable messages came.'
+    return f'Nothing was evaluated: no message came on {", ".join(silent)}.'
 
 
 def _nowhere(metrics: Any, name: str) -> bool:

@@ -128,12 +128,12 @@ class Feed:
         return self
 
     def poses(self, topic, times, positions, turns=None, *, transport=0.002, ahead=0.0,
-              stamped=True):
+              stamped=True, frame='op'):
         """Add poses (n, 3) and orientations (n, 4); `ahead` is the stamps' clock error, s."""
         for k, t in enumerate(times):
             self.put(t + transport, topic, PoseSample(
                 ns(t + ahead) if stamped else 0, np.array(positions[k], dtype=float),
-                None if turns is None else np.array(turns[k], dtype=float), 'op'))
+                None if turns is None else np.array(turns[k], dtype=float), frame))
         return self
 
     def joints(self, topic, times, values, names=JOINTS, *, transport=0.002, ahead=0.0,

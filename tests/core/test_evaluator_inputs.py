@@ -183,6 +183,35 @@ def test_other_frames_are_left_out():
     assert syn.metrics(summary)['tracking_error_max_norm']['value'] < 2e-3
 
 
+def command_frames(frames):
+    """Return the problems of a pose command whose messages have these frames in turn."""
+    motion = syn.wander()
+    made, t = syn.session(12.0, motion=motion), syn.clock(0.0, 12.0, 100.0)
+    for k, one in enumerate(t):
+        made.poses('/command', [one], syn.SHOULDER_M + syn.REACH_M * motion([one]),
+                   frame=frames[k % len(frames)])
+    return problem_with(run(made, command__topic='/command'), '/command')
+
+
+def test_pose_command_in_another_frame_is_said_once():
+    sentence, = command_frames(['world'])
+    assert 'times' not in sentence
+    for word in ("'world'", "robot.base_link, 'base'", "publish them in 'base'"):
+        assert word in sentence
+
+
+@pytest.mark.parametrize('frames', [['base'], ['/base'], [''], ['', 'base']])
+def test_pose_command_in_the_base_or_no_frame_is_no_problem(frames):
+    assert command_frames(frames) == []
+
+
+def test_hand_without_a_frame_now_and_then_is_no_problem():
+    made = syn.session(12.0, motion=syn.wander())
+    made.put(5.0001, '/hand', syn.PoseSample(
+        syn.ns(5.0), 0.6 * syn.wander()([5.0])[0], None, ''))
+    assert run(made)['problems'] == []
+
+
 def test_message_without_stamp_after_stamps_were_chosen():
     made = syn.session(20.0, motion=syn.wander())
     made.joints('/joints', [10.0011], [np.full(6, 0.9)], stamped=False)

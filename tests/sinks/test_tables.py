@@ -202,3 +202,18 @@ def test_numbers_are_short(value, shown):
 def test_long_text_is_cut_and_says_so():
     assert clean('x' * 10_000, 50) == 'x' * 47 + '...'
     assert clean('a\tb\n c', 50) == 'a b c'
+
+
+@pytest.mark.parametrize('base, inputs, sentence', [
+    (None, {'hand': 0, 'robot_joints': 0, 'command': 4},
+     'Nothing was evaluated: no message came on /hand, /robot_joints.'),
+    (None, {'hand': 1, 'robot_joints': 1}, 'Nothing was evaluated: too few usable messages'),
+    ('stamp', {'hand': 9, 'active_mapping': 0}, 'No mapping was active'),
+])
+def test_arm_without_metrics_says_why(base, inputs, sentence):
+    document = summary()
+    document['arms']['right'] |= {
+        'time_base': {'base': base},
+        'inputs': {role: {'topic': f'/{role}', 'messages': messages}
+                   for role, messages in inputs.items()}}
+    assert sentence in text(document)
