@@ -17,9 +17,15 @@ from teleop_eval.core.joint_range import JointRangeUse
 from teleop_eval.core.manipulability import manipulability_norm
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
+from teleop_eval.core.silence import Heard
 from teleop_eval.core.tracking import ARM_LENGTHS, MagnitudeStatistics, OrientationStatistics
 
 LATENCIES = ('latency_s', 'latency_command_s', 'latency_response_s')
+
+
+def total_unit(units: tuple[str, ...]) -> str:
+    """Return the commoner unit: angles and lengths are never added up."""
+    return max(sorted(set(units)), key=units.count) if units else 'rad'
 
 
 class JointErrorStatistics:
@@ -30,8 +36,7 @@ class JointErrorStatistics:
         self._units = units
         self._single = [MagnitudeStatistics() for _ in names]
         self._all = MagnitudeStatistics()
-        # Angles and lengths are never added up: the total is over the commoner kind.
-        self._total_unit = max(sorted(set(units)), key=units.count) if units else 'rad'
+        self._total_unit = total_unit(units)
         self._total = np.array([unit == self._total_unit for unit in units], dtype=bool)
 
     def add(self, errors: np.ndarray) -> None:
@@ -64,6 +69,7 @@ class MappingAccumulator:
         self._period_s = period_s
         self.engaged_cells = 0
         self.engagements = 0
+        self.heard = Heard()
         self.raw = MagnitudeStatistics()
         self.compensated = MagnitudeStatistics()
         self.spin = MagnitudeStatistics()

@@ -20,7 +20,7 @@ from .correlation import (
 )
 from .delay_filters import Bank, filtered
 from .delay_search import SMOOTHING_HZ
-from .delay_settings import DelaySettings, NoDelay
+from .delay_settings import DelaySettings, NoDelay, Sides
 from .metric import INSUFFICIENT, UNOBSERVABLE
 
 # Half of the range searched around the first peak, in working samples.
@@ -43,7 +43,7 @@ class Outcome:
 
 def refine(
     wide: tuple[Series, Series], lag: int, found_with: tuple[Bank, int], rate: float,
-    settings: DelaySettings,
+    settings: DelaySettings, sides: Sides,
 ) -> Outcome:
     """Choose the filter, interpolate the peak and compute its standard error."""
     taps = _best_filter(wide, lag, found_with, rate)
@@ -54,8 +54,8 @@ def refine(
         if len(index) < settings.min_duration_s * rate:
             raise NoDelay(
                 INSUFFICIENT,
-                f'Only {len(index) / rate:.1f} s of valid data on both sides at a delay of '
-                f'{lag / rate:.2f} s, {settings.min_duration_s:.1f} s are needed.',
+                f'Only {len(index) / rate:.1f} s with valid data of both {sides.both} at a '
+                f'delay of {lag / rate:.2f} s, {settings.min_duration_s:.1f} s are needed.',
             )
         peak = refine_peak(*pair, index, lag, _SEARCH)
         nearest = round(peak.lag)

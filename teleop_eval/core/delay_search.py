@@ -19,7 +19,7 @@ from .correlation import (
     transform,
     variance_of_product_sum,
 )
-from .delay_settings import DelaySettings, NoDelay
+from .delay_settings import DelaySettings, NoDelay, Sides
 from .metric import INSUFFICIENT, UNOBSERVABLE
 
 # Autocovariances are trusted up to about 1 / 0.25 Hz.
@@ -52,7 +52,7 @@ class Search:
 
 
 def search_peak(
-    pair: tuple[Series, Series], rate: float, settings: DelaySettings
+    pair: tuple[Series, Series], rate: float, settings: DelaySettings, sides: Sides
 ) -> Search:
     """Correlate over the search range and a little beyond, to see peaks at its edge."""
     first = math.floor(settings.min_s * rate) - 2
@@ -68,22 +68,33 @@ def search_peak(
             return Search(pair, spectra, found, best)
         longest = int(found.pairs.max())
         if longest >= least:
-            raise NoDelay(UNOBSERVABLE, 'One of the two sides does not move at all.')
+            raise NoDelay(UNOBSERVABLE, _still(pair, sides))
     raise NoDelay(
         INSUFFICIENT,
-        f'Only {longest / rate:.1f} s of valid data on both sides, '
+        f'Only {longest / rate:.1f} s with valid data of both {sides.both}, '
         f'{settings.min_duration_s:.1f} s are needed.',
     )
 
 
-def check_motion(speeds: tuple[float, float], settings: DelaySettings) -> None:
+def _still(pair: tuple[Series, Series], sides: Sides) -> str:
+    """Return the sentence on the side that stands still."""
+    energies = [float(np.sum(_centred(series) ** 2)) for series in pair]
+    if max(energies) == 0.0:
+        return f'Neither {sides.reference} nor {sides.response} moves at all.'
+    which = sides.reference if energies[0] < energies[1] else sides.response
+    return f'The {which} does not move at all.'
+
+
+def check_motion(
+    speeds: tuple[float, float], settings: DelaySettings, sides: Sides
+) -> None:
     """Refuse a side that stands still."""
-    for name, speed in zip(('reference', 'response'), speeds, strict=True):
+    for name, speed in zip((sides.reference, sides.response), speeds, strict=True):
         if not speed >= settings.min_speed:
             raise NoDelay(
                 UNOBSERVABLE,
-                f'The {name} hardly moves: {speed:.4f} RMS in the band, '
-                f'{settings.min_speed:.4f} are needed.',
+                f'The {name} hardly moves: {sides.speed(speed)} RMS in the band, '
+                f'{sides.speed(settings.min_speed)} are needed.',
             )
 
 
@@ -118,7 +129,9 @@ def _centred(series: Series) -> np.ndarray:
     return np.where(series.valid[:, None], series.values - mean, 0.0)
 
 
-def check_single(search: Search, rate: float, settings: DelaySettings) -> None:
+def check_single(
+    search: Search, rate: float, settings: DelaySettings, sides: Sides
+) -> None:
     """Refuse a peak at the edge, a rival peak and periodic motion."""
     found, best = search.found, search.best
     value = np.where(np.isfinite(found.value), found.value, -1.0)
@@ -140,7 +153,8 @@ def check_single(search: Search, rate: float, settings: DelaySettings) -> None:
     # the limit sinks with the peak; not below 0.8, since a low peak has other causes too.
     limit = settings.second_peak * min(1.0, max(0.8, value[best]))
     last = round(settings.periodic_s * rate)
-    for name, spectra in zip(('reference', 'response'), search.spectra, strict=True):
+    for name, spectra in zip(
+            (sides.reference, sides.response), search.spectra, strict=True):
         own = correlate_lags(spectra, spectra, 0, last, min_pairs=round(rate))
         own_value = np.where(np.isfinite(own.value), own.value, -1.0)
         rival = _rival(own_value, 0, limit)

@@ -59,6 +59,24 @@ class DelaySettings:
     context_s: float = 1.5
 
 
+@dataclass(frozen=True)
+class Sides:
+    """What the two motions are called in a sentence, and the unit of their velocities."""
+
+    reference: str = 'reference'
+    response: str = 'response'
+    unit: str = ''
+
+    @property
+    def both(self) -> str:
+        """Return both names."""
+        return f'{self.reference} and {self.response}'
+
+    def speed(self, value: float) -> str:
+        """Return a velocity with its unit."""
+        return f'{value:.4f} {self.unit}'.rstrip()
+
+
 class NoDelay(Exception):
     """Carries status and sentence from the check that failed."""
 

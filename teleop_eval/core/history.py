@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -105,6 +106,15 @@ class History:
         else:
             values = track.values[low] + share[:, None] * (track.values[high] - track.values[low])
         return Track.computed(values, valid)
+
+    def label_delayed(self, count: int, shift: float) -> np.ndarray:
+        """
+        Return the label `shift` cells earlier, for the last `count` cells.
+
+        Between two cells it is that of the earlier one; -1 before the first cell.
+        """
+        where = np.arange(len(self) - count, len(self)) - math.ceil(shift)
+        return np.where(where >= 0, self.label[np.maximum(where, 0)], -1)
 
     def velocity(self, name: str, period_s: float, *, usable_only: bool) -> Track | None:
         """Return the track's velocity on cell edges (m, d), invalid across boundaries."""

@@ -42,10 +42,10 @@ from .correlation import Series
 from .delay_filters import bank, decimate, decimation, filtered
 from .delay_refine import check_outcome, refine
 from .delay_search import check_chance, check_motion, check_single, search_peak
-from .delay_settings import DelaySettings, NoDelay
+from .delay_settings import DelaySettings, NoDelay, Sides
 from .metric import OK
 
-__all__ = ['DelayEstimate', 'DelaySettings', 'estimate_delay']
+__all__ = ['DelayEstimate', 'DelaySettings', 'Sides', 'estimate_delay']
 
 # With a lower correlation than this, the narrow filter gets its turn too.
 _CLEAR = 0.8
@@ -97,6 +97,7 @@ def estimate_delay(
     runs: np.ndarray | None = None,
     window: tuple[int, int] | None = None,
     settings: DelaySettings | None = None,
+    sides: Sides | None = None,
 ) -> DelayEstimate:
     """
     Estimate the delay of one velocity behind another over a window.
@@ -116,6 +117,8 @@ def estimate_delay(
         `settings.context_s` of the data before it are used, none after it.
     settings
         Search range and thresholds.
+    sides
+        What the two motions are called in the reasons.
 
     Returns
     -------
@@ -128,7 +131,7 @@ def estimate_delay(
         If shapes do not fit or the rate is not positive.
 
     """
-    settings = settings or DelaySettings()
+    settings, sides = settings or DelaySettings(), sides or Sides()
     pair = _prepare(
         reference, response, rate_hz, (valid_reference, valid_response), runs, window, settings
     )
@@ -140,18 +143,18 @@ def estimate_delay(
     speeds = (_rms(smooth[0]), _rms(smooth[1]))
     correlation, pairs = math.nan, 0
     try:
-        search = search_peak(smooth, rate, settings)
+        search = search_peak(smooth, rate, settings, sides)
         which = 0
         if search.highest < _CLEAR:
             # Noise above the motion's band may be all that is wrong.
-            again = search_peak(filtered(wide, filters.detection[1]), rate, settings)
+            again = search_peak(filtered(wide, filters.detection[1]), rate, settings, sides)
             if again.highest > search.highest:
                 search, which = again, 1
         correlation, pairs = search.highest, int(search.found.pairs.max())
-        check_motion(speeds, settings)
+        check_motion(speeds, settings, sides)
         check_chance(search, rate, settings)
-        check_single(search, rate, settings)
-        outcome = refine(wide, search.lag, (filters, which), rate, settings)
+        check_single(search, rate, settings, sides)
+        outcome = refine(wide, search.lag, (filters, which), rate, settings, sides)
         correlation, pairs = outcome.height, outcome.pairs
         check_outcome(outcome, settings)
     except NoDelay as answer:

@@ -4,13 +4,13 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from teleop_eval.core import rotations
-from teleop_eval.core.accumulator import MappingAccumulator
+from teleop_eval.core.accumulator import MappingAccumulator, total_unit
+from teleop_eval.core.arm_setup import has_input
 from teleop_eval.core.boundaries import CellStates
 from teleop_eval.core.delays import Observed
 from teleop_eval.core.history import History, Track
@@ -19,6 +19,7 @@ from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
 from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
 from teleop_eval.core.operator_tracks import operator_tracks
 from teleop_eval.core.results import WindowResult
+from teleop_eval.core.silence import Heard, explained
 from teleop_eval.core.streams import Items
 from teleop_eval.core.tracking import JointErrors, joint_errors
 from teleop_eval.core.velocity import velocity_tracks
@@ -30,23 +31,13 @@ from teleop_eval.core.window import (
 )
 from teleop_eval.core.window_budget import POSITION, VELOCITY, Delays, Space, window_budget
 from teleop_eval.core.window_latency import WindowLatency
+from teleop_eval.core.window_limits import LimitState, limit_state, limited_joints
 
 if TYPE_CHECKING:
     from teleop_eval.core.arm import ArmEvaluator
 
 # Motion from which the fixed hand-to-tool rotation is estimated, once per arm.
 TOOL_ROTATION_S = 10.0
-# Time over which the limit margin is compared to tell approaching from leaving.
-APPROACH_S = 0.2
-
-
-@dataclass
-class LimitState:
-    """How near the joints were to their limits at the end of the last window."""
-
-    margin: float | None = None
-    joint: str = ''
-    approaching: bool = False
 
 
 class ArmMeasurement:
@@ -127,6 +118,10 @@ class ArmMeasurement:
                 metrics = found
         if label < 0:
             return None
+        heard = Heard()
+        heard.add(self.history, states.usable & (states.label == label))
+        metrics = explained(metrics, arm, arm.boundaries.labels[label], heard,
+                            where=' in this window')
         metrics |= self.latency.metrics(label)
         self.newest = WindowResult(
             arm.name, arm.boundaries.labels[label], span.start_ns, span.end_ns, receive_ns,
@@ -224,6 +219,7 @@ class ArmMeasurement:
         """Add one mapping's share of the window to its run, and return it as metrics."""
         accumulator = self._accumulator(index)
         here = states.usable & (states.label == index)
+        accumulator.heard.add(self.history, here)
         found = self._track_tool(span, index, here, accumulator)
         budget = window_budget(
             self.history, self.latency, span, index, here, self.space(index), self._period_s)
@@ -232,20 +228,32 @@ class ArmMeasurement:
             found |= budget.metrics
             if index == self.label:
                 self.delays_s = budget.delays_s
-        if robot_items is not None and command_items is not None:
-            found |= self._track_joints(span, index, here, (robot_items, command_items))
+        found |= self._track_joints(span, index, here, (robot_items, command_items))
         self.latency.feed_responses(self.history, span, index, here, accumulator.responses)
         for which, name in (('operator', 'u_o'), ('ideal', 'u_i'), ('robot', 'u_r')):
             track = self.history.last(name, span.count)
             if track is not None:
                 accumulator.add_positions(which, track.values[track.valid & here])
-        joints = self.history.last('q_r', span.count)
-        if joints is not None and self._arm.robot is not None:
-            q = joints.values[joints.valid & here][:, self._columns]
-            accumulator.add_joints(q)
-            if index == self.label:
-                found |= self._limits(q)
+        if self._arm.robot is not None:
+            found |= self._use_joints(span, index, here, accumulator)
         return found
+
+    def _use_joints(self, span: Span, index: int, here: np.ndarray,
+                    accumulator: MappingAccumulator) -> dict[str, Metric]:
+        """Add the joint positions to the run, and return how near a limit they come."""
+        assert self._arm.robot is not None  # asked for only with a robot
+        chain = self._arm.robot.chain
+        joints = self.history.last('q_r', span.count)
+        q = (np.zeros((0, len(chain.joint_names))) if joints is None
+             else joints.values[joints.valid & here][:, self._columns])
+        accumulator.add_joints(q)
+        if not limited_joints(chain).any():
+            return {}
+        state = limit_state(chain, q, self._period_s)
+        if index == self.label:
+            self.limits = state
+        return {'limit_margin_min': _nothing('1') if state.least is None
+                else Metric(state.least, '1', n=1, samples=len(q))}
 
     def _track_tool(self, span: Span, index: int, here: np.ndarray,
                     accumulator: MappingAccumulator) -> dict[str, Metric]:
@@ -254,7 +262,8 @@ class ArmMeasurement:
         ideal = self.history.last(space.ideal, span.count)
         found: dict[str, Metric] = {}
         if robot is None or ideal is None:
-            return found
+            return {f'tracking_error_{which}{space.suffix}': _nothing(space.unit)
+                    for which in ('rms', 'compensated_rms') if self._modelled(index)}
         raw = _norms(robot, ideal, here)
         accumulator.raw.add(raw)
         found[f'tracking_error_rms{space.suffix}'] = _rms(raw, space.unit)
@@ -271,7 +280,7 @@ class ArmMeasurement:
             found[name] = self.latency.why_none(index, space.unit)
             return found
         shift = seen.delay_s / self._period_s
-        earlier = self._label_earlier(span.count, shift) == index
+        earlier = self.history.label_delayed(span.count, shift) == index
         delayed = self.history.delayed(space.ideal, span.count, shift)
         assert delayed is not None  # the ideal command is there
         compensated = _norms(robot, delayed, earlier)
@@ -304,15 +313,22 @@ class ArmMeasurement:
             self.tool_rotation = rotation if rotation[3] >= 0.0 else -rotation
             self._arm.use_tool_rotation(self.tool_rotation)
 
-    def _label_earlier(self, count: int, shift: float) -> np.ndarray:
-        where = np.arange(len(self.history) - count, len(self.history)) - int(np.ceil(shift))
-        return np.where(where >= 0, self.history.label[np.maximum(where, 0)], -1)
+    def _modelled(self, index: int) -> bool:
+        """Tell whether an ideal command is configured for a mapping, though none may come."""
+        model = self._arm.setup.models.get(self._arm.boundaries.labels[index])
+        return model is not None and has_input(
+            model.needs, self._arm.intakes, self._arm.operator)
 
     def _track_joints(self, span: Span, index: int, here: np.ndarray,
-                      items: tuple[Items, Items]) -> dict[str, Metric]:
+                      items: tuple[Items | None, Items | None]) -> dict[str, Metric]:
         """Add joint errors against the command, raw and at the observed response delay."""
         arm, accumulator = self._arm, self._accumulator(index)
         robot, command = items
+        if robot is None or command is None:
+            if 'command' not in arm.intakes or arm.intakes['command'].posed:
+                return {}
+            return {name: _nothing(total_unit(arm.setup.joint_units))
+                    for name in ('joint_error_rms', 'joint_error_compensated_rms')}
         inside = (robot.times_ns >= span.start_ns) & (robot.times_ns < span.end_ns)
         times, values = robot.times_ns[inside], robot.values[inside]
         stream = arm.intakes['command'].stream
@@ -345,33 +361,19 @@ class ArmMeasurement:
         kept = np.maximum(cells, 0)
         return (cells >= 0) & self.history.usable[kept] & (self.history.label[kept] == index)
 
-    def _limits(self, q: np.ndarray) -> dict[str, Metric]:
-        """Return the window's smallest limit margin, and note whether a limit comes nearer."""
-        assert self._arm.robot is not None  # asked for only with a robot
-        chain = self._arm.robot.chain
-        limited = (np.isfinite(chain.lower) & np.isfinite(chain.upper)
-                   & (chain.upper > chain.lower))
-        if not len(q) or not limited.any():
-            return {}
-        low, high = chain.lower[limited], chain.upper[limited]
-        margins = np.clip(np.minimum(q[:, limited] - low, high - q[:, limited]) / (high - low),
-                          0.0, 0.5)
-        names = [name for name, has in zip(chain.joint_names, limited, strict=True) if has]
-        joint = int(margins[-1].argmin())
-        before = margins[max(0, len(margins) - 1 - round(APPROACH_S / self._period_s)), joint]
-        self.limits = LimitState(float(margins[-1, joint]), names[joint],
-                                 bool(margins[-1, joint] < before))
-        return {'limit_margin_min': Metric(float(margins.min()), '1', n=1, samples=len(q))}
-
 
 def _norms(robot: Track, ideal: Track, here: np.ndarray) -> np.ndarray:
     both = here & robot.valid & ideal.valid
     return np.linalg.norm(robot.values[both] - ideal.values[both], axis=1)
 
 
+def _nothing(unit: str) -> Metric:
+    return missing(INSUFFICIENT, unit, 'no engaged and settled sample in this window')
+
+
 def _rms(magnitudes: np.ndarray, unit: str, delay: Observed | None = None) -> Metric:
     if not magnitudes.size:
-        return missing(INSUFFICIENT, unit, 'no engaged and settled sample in this window')
+        return _nothing(unit)
     details: dict[str, object] = {} if delay is None else {
         'delay_s': delay.delay_s, 'delay_age_s': delay.age_s}
     return Metric(float(np.sqrt(np.mean(magnitudes ** 2))), unit, None, 1, magnitudes.size,
@@ -381,6 +383,6 @@ def _rms(magnitudes: np.ndarray, unit: str, delay: Observed | None = None) -> Me
 def _joint_rms(errors: np.ndarray, units: tuple[str, ...],
                delay: Observed | None = None) -> Metric:
     """Return the RMS over the joints of the commoner unit, as over the run."""
-    unit = max(sorted(set(units)), key=units.count) if units else 'rad'
+    unit = total_unit(units)
     chosen = errors[:, np.array([one == unit for one in units], dtype=bool)]
     return _rms(np.abs(chosen[np.isfinite(chosen)]), unit, delay)

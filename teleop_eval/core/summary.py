@@ -17,6 +17,7 @@ from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
 from teleop_eval.core.reachable_cells import ReachableSet
 from teleop_eval.core.response_summary import response_metrics
+from teleop_eval.core.silence import explained, inputs_of, never_came, no_clutch
 from teleop_eval.core.window_budget import VELOCITY
 
 CONDITION = 'teleoperated'
@@ -99,7 +100,7 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
     pairs = measured.latency.pairs(index)
     for name, delay in accumulator.delays.items():
         if pairs[name] is None:
-            found[name] = missing(NOT_CONFIGURED, 's', _why_no_pair(arm, name, no_ideal))
+            found[name] = _no_pair(arm, name, label, no_ideal)
         else:
             found[name] = delay.metric(
                 caveat=caveat, reason='the run is shorter than a latency window')
@@ -150,7 +151,7 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
     if no_ideal and no_ideal == arm.operator.lacking:
         found = {name: missing(INSUFFICIENT, metric.unit, no_ideal)
                  if metric.reason == no_ideal else metric for name, metric in found.items()}
-    return found | _engagement(arm, accumulator)
+    return explained(found, arm, label, accumulator.heard) | _engagement(arm, accumulator)
 
 
 def _joint_metrics(arm: ArmEvaluator, accumulator: MappingAccumulator,
@@ -175,16 +176,26 @@ def _joint_metrics(arm: ArmEvaluator, accumulator: MappingAccumulator,
 
 
 def _engagement(arm: ArmEvaluator, accumulator: MappingAccumulator) -> dict[str, Metric]:
+    """Return engaged time, engagements and their rate, which is per minute of engaged time."""
     seconds, times = accumulator.engaged_s, accumulator.engagements
-    found = {'engaged_time_s': Metric(seconds, 's', samples=accumulator.engaged_cells)}
+    names = {'engaged_time_s': 's', 'engagements': '1', 'engagement_rate_per_min': '1/min'}
     if 'engaged' not in arm.states:
         why = 'engaged.topic is not configured'
-        return {**found, 'engagements': missing(NOT_CONFIGURED, '1', why),
-                'engagement_rate_per_min': missing(NOT_CONFIGURED, '1/min', why)}
-    rate = (Metric(60.0 * times / seconds, '1/min', n=times) if seconds > 0.0 else
-            missing(INSUFFICIENT, '1/min', 'never engaged under this mapping'))
-    return {**found, 'engagements': Metric(float(times), '1', n=times),
-            'engagement_rate_per_min': rate}
+        found = {name: missing(NOT_CONFIGURED, unit, why) for name, unit in names.items()}
+        found['engaged_time_s'] = Metric(
+            seconds, 's', samples=accumulator.engaged_cells,
+            reason=f'{why}, so all time under this mapping counts as engaged')
+        return found
+    if never := no_clutch(arm):
+        return {name: missing(INSUFFICIENT, unit, never) for name, unit in names.items()}
+    return {
+        'engaged_time_s': Metric(seconds, 's', samples=accumulator.engaged_cells),
+        'engagements': Metric(float(times), '1', n=times),
+        'engagement_rate_per_min':
+            Metric(60.0 * times / seconds, '1/min', n=times, reason='per minute of engaged time')
+            if seconds > 0.0 else
+            missing(INSUFFICIENT, '1/min', 'never engaged under this mapping'),
+    }
 
 
 def _why_no_ideal(arm: ArmEvaluator, measured: ArmMeasurement, label: str) -> str:
@@ -216,12 +227,18 @@ def _why_no_delay(accumulator: MappingAccumulator) -> dict[str, str]:
     return {'status': INSUFFICIENT, 'reason': 'no delay was observed to compensate'}
 
 
-def _why_no_pair(arm: ArmEvaluator, name: str, no_ideal: str) -> str:
+def _no_pair(arm: ArmEvaluator, name: str, label: str, no_ideal: str) -> Metric:
+    """Return a latency one of whose sides is not there, with the reason."""
     if name != 'latency_s' and arm.arm.command.topic is None:
-        return 'command.topic is not configured'
+        return missing(NOT_CONFIGURED, 's', 'command.topic is not configured')
+    model = arm.setup.models.get(label)
+    never = never_came(arm, inputs_of(arm, label, name))
+    modelled = name == 'latency_command_s' or (name == 'latency_s' and model is not None)
+    if never and not (modelled and no_ideal):
+        return missing(INSUFFICIENT, 's', never)
     if name != 'latency_response_s' and no_ideal:
-        return no_ideal
-    return 'one of the two inputs never came'
+        return missing(NOT_CONFIGURED, 's', no_ideal)
+    return missing(NOT_CONFIGURED, 's', 'one of the two sides cannot be computed from its input')
 
 
 def _clock_caveat(arm: ArmEvaluator) -> str:

@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -14,9 +15,10 @@ from teleop_eval.core.accumulator import LATENCIES, MappingAccumulator
 from teleop_eval.core.delays import DelayNow, Observed, window_metric
 from teleop_eval.core.frequency_response import FrequencyResponse
 from teleop_eval.core.history import History
-from teleop_eval.core.latency import DelayEstimate, DelaySettings, estimate_delay
+from teleop_eval.core.latency import DelayEstimate, DelaySettings, Sides, estimate_delay
 from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.silence import Heard, inputs_of, never_came, why_no_sample
 from teleop_eval.core.window import Span
 
 if TYPE_CHECKING:
@@ -27,6 +29,10 @@ _RATE_SIDES = {'latency_s': ('w_i', 'w_r'), 'latency_command_s': ('w_i', 'w_c'),
                'latency_response_s': ('w_c', 'w_r')}
 # Share of a window that must have valid pairs: what lags and filters take is a quarter of 10 s.
 MIN_SHARE = 0.4
+# What a user calls the two sides; the operator's is the bare hand where nothing is modelled.
+_NAMES = {'latency_s': ('ideal command', 'robot'),
+          'latency_command_s': ('ideal command', 'command'),
+          'latency_response_s': ('command', 'robot')}
 
 
 @dataclass(frozen=True)
@@ -143,7 +149,9 @@ class WindowLatency:
                 need_s = self._arm.settings.latency.window_s
                 now[name].add(_too_short(len(history) * self._period_s, need_s), span.end_ns)
                 continue
-            estimate = self._estimate(history, pair, label)
+            estimate = self._estimate(history, pair, label, self._sides(name, pair))
+            if estimate.status == INSUFFICIENT:
+                estimate = self._blamed(estimate, name, history, label)
             now[name].add(estimate, span.end_ns)
             accumulator.delays[name].add(estimate, start_ns, span.end_ns, pair.space)
 
@@ -178,22 +186,52 @@ class WindowLatency:
                          else chosen)
         return found
 
-    def _estimate(self, history: History, pair: Pair, label: int) -> DelayEstimate:
+    def _blamed(self, estimate: DelayEstimate, name: str, history: History,
+                label: int) -> DelayEstimate:
+        """Return the estimate with the input that is to blame, if there is one."""
+        heard, last = Heard(), slice(-self.cells, None)
+        heard.add(history, history.usable[last] & (history.label[last] == label))
+        why = why_no_sample(self._arm, self._roles(name, label), heard,
+                            where=' in the latency window')
+        return dataclasses.replace(estimate, reason=why) if why else estimate
+
+    def _roles(self, name: str, label: int) -> tuple[str, ...]:
+        return inputs_of(self._arm, self._arm.boundaries.labels[label], name)
+
+    def _sides(self, name: str, pair: Pair) -> Sides:
+        """Return what the sides of a latency are called, and the unit of their velocities."""
+        reference, response = _NAMES[name]
+        if pair.space == 'hand_to_tool':
+            reference = 'hand'
+        if pair.space != 'joints':
+            return Sides(reference, response, 'arm lengths/s')
+        units = sorted(set(self._arm.setup.joint_units))
+        # Sliding joints are weighted by the arm's length, if that is known.
+        scaled = self._arm.robot is not None
+        return Sides(reference, response, ' or '.join(
+            'rad/s' if unit == 'rad' else 'arm lengths/s' if scaled else 'rad/s or m/s'
+            for unit in reversed(units)))
+
+    def _estimate(self, history: History, pair: Pair, label: int, sides: Sides) -> DelayEstimate:
         if pair.space == 'velocity':
             reference = history.usable_track(pair.reference)
             response = history.get(pair.response)
         else:
             reference = history.velocity(pair.reference, self._period_s, usable_only=True)
             response = history.velocity(pair.response, self._period_s, usable_only=False)
+        lacking = [name for name, track in (
+            (sides.reference, reference), (sides.response, response)) if track is None]
         if reference is None or response is None:
-            return _none('one of the two sides has not come since the last interruption')
-        sides = self._on_one_scale(pair, reference.values, response.values)
+            return _none(f'the {" and the ".join(lacking)} has not come since the last '
+                         'interruption')
+        scaled = self._on_one_scale(pair, reference.values, response.values)
         stop = len(history)
         return estimate_delay(
-            sides[0], sides[1], 1.0 / self._period_s,
+            scaled[0], scaled[1], 1.0 / self._period_s,
             valid_reference=reference.valid & (history.label == label),
             valid_response=response.valid, runs=history.run,
-            window=(stop - self.cells + self._run_in_cells, stop), settings=self._settings)
+            window=(stop - self.cells + self._run_in_cells, stop), settings=self._settings,
+            sides=sides)
 
     def _joint_weights(self, columns: np.ndarray | None) -> np.ndarray:
         """Return weights (n,) that put sliding joints (m) on a scale with angles."""
@@ -206,9 +244,16 @@ class WindowLatency:
     def metrics(self, label: int) -> dict[str, Metric]:
         """Return the newest estimate of each delay as a metric."""
         return {
-            name: missing(NOT_CONFIGURED, 's', 'one of the two sides of this delay is not there')
-            if pair is None else window_metric(self.now(label)[name].estimate, self._spaces[name])
+            name: self._no_pair(name, label) if pair is None
+            else window_metric(self.now(label)[name].estimate, self._spaces[name])
             for name, pair in self.pairs(label).items()}
+
+    def _no_pair(self, name: str, label: int) -> Metric:
+        roles = self._roles(name, label)
+        if all(role in self._arm.intakes for role in roles) and (
+                never := never_came(self._arm, roles)):
+            return missing(INSUFFICIENT, 's', never)
+        return missing(NOT_CONFIGURED, 's', 'one of the two sides of this delay is not there')
 
     def in_use(self, now_ns: int, label: int, names: Sequence[str] = ()) -> Observed | None:
         """

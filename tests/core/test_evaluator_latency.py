@@ -224,7 +224,7 @@ def test_pairs_follow_what_there_is(command):
     if command == 'joints':
         made.joints('/command', t, syn.joints_for(motion(t - 0.04)))
     elif command == 'pose':
-        made.poses('/command', t, syn.SHOULDER_M + syn.REACH_M * motion(t - 0.04))
+        made.poses('/command', t, syn.SHOULDER_M + syn.REACH_M * motion(t - 0.04), frame='base')
     parameters = dict(syn.TASK, command__topic='/command' if command else None)
     target = syn.evaluator(syn.arm_parameters(**parameters))
     syn.feed(target, made.messages())
@@ -267,7 +267,7 @@ def test_still_robot_tells_no_delay():
     windows = syn.feed(target, made.messages())
     found = syn.metrics(syn.closed(target))
     assert found['latency_s']['status'] == 'unobservable'
-    assert 'move' in found['latency_s']['reason']
+    assert found['latency_s']['reason'].startswith('The robot does not move at all (in ')
     assert found['latency_s']['details']['windows'] > 5
     assert found['latency_s']['value'] is None and found['latency_s']['n'] == 0
     assert windows[-1].metrics['latency_s'].status == 'unobservable'
@@ -324,3 +324,30 @@ def test_margin_warns_only_while_approaching():
     assert levels[8].values['joint'] == 'boom'
     assert float(levels[8].values['nearest limit margin (share of span)']) == pytest.approx(
         0.02, abs=2e-3)
+
+
+def test_approaching_is_told_over_the_last_fifth_of_a_second():
+    """
+    The boom's margin rises and falls within the half second before a window closes at 8.003 s.
+
+    Only 0.2 s before the end it was larger (or smaller) than at the end; 0.15 s and 0.25 s
+    before it was the other way round.
+    """
+    end = 8.003
+    for sign in (1.0, -1.0):
+        before = np.array([-9.0, -0.26, -0.23, -0.2, -0.17, -0.14, -0.02, 0.1, 9.0])
+        margin = 0.1 + 0.02 * sign * np.array([-1.0, -1, -1, 1, -1, -1, 0, 0, 0])
+        t = syn.clock(0.0, 10.0, 1000.0)
+        q = np.zeros((len(t), 6))
+        q[:, 2] = syn.REACH_M - (syn.REACH_M - 0.05) * np.interp(t - end, before, margin)
+        target = syn.evaluator(syn.arm_parameters(operator__hand_topic=None),
+                               **{'time.grid_rate_hz': 100.0})
+        state = None
+        for message in syn.Feed().joints('/joints', t, q).messages():
+            target.add(*message)
+            for window in target.poll():
+                if abs(window.end_ns - syn.ns(end)) < 3e6:
+                    state = target.arms['right'].measurement.limits
+        assert state is not None and state.joint == 'boom'
+        assert state.margin == pytest.approx(0.1, abs=2e-3)
+        assert state.approaching is (sign > 0.0)

@@ -9,12 +9,13 @@ import dataclasses
 import numpy as np
 import pytest
 import synthetic_session as syn
+from scipy import stats
 from scipy.spatial.transform import Rotation
 
 from teleop_eval.core import window_latency
 from teleop_eval.core.delays import DelayNow, DelayStatistics
 from teleop_eval.core.geometry import operator_geometry
-from teleop_eval.core.latency import DelayEstimate
+from teleop_eval.core.latency import DelayEstimate, Sides
 
 VALUE = DelayEstimate(
     delay_s=0.1, standard_error_s=0.001, correlation=0.99, status='ok', reason='', samples=900,
@@ -149,3 +150,80 @@ def test_operator_positions_are_turned_into_robot_axes():
     points = np.random.default_rng(1).normal(size=(20, 3))
     assert operator_geometry(settings).normalise(points) == pytest.approx(
         axes.apply((points - [1.0, 2.0, 3.0]) / 0.7))
+
+
+def test_sliding_joints_are_weighed_by_the_arm_length(monkeypatch):
+    """1.25 m of the boom are to the correlation as 1 rad: L_r is 1.25 m."""
+    seen = []
+    estimate = window_latency.estimate_delay
+
+    def spy(reference, response, rate_hz, **more):
+        seen.append((reference, response, more['sides']))
+        return estimate(reference, response, rate_hz, **more)
+
+    monkeypatch.setattr(window_latency, 'estimate_delay', spy)
+    t = syn.clock(0.0, 14.0, 100.0)
+    boom = 0.6 + 0.2 * np.sin(t)
+    q = np.column_stack([0.3 * np.sin(t), 0 * t, boom, 0 * t, 0 * t, 0 * t])
+    made = syn.Feed().joints('/command', t, q).joints('/joints', t + 1e-4, q)
+    target = syn.evaluator(syn.arm_parameters(
+        operator__hand_topic=None, command__topic='/command'))
+    syn.feed(target, made.messages())
+    reach = target.arms['right'].robot.reach.length_m
+    assert reach == pytest.approx(syn.REACH_M, rel=1e-3)
+    for side in seen[-1][:2]:
+        speeds = np.nanmax(np.abs(side), axis=0)
+        assert speeds[0] == pytest.approx(0.3, rel=0.01)
+        assert speeds[2] == pytest.approx(0.2 / reach, rel=0.01)
+    assert seen[-1][2] == Sides('command', 'robot', 'rad/s or arm lengths/s')
+
+
+@pytest.mark.parametrize('parameters, mapping, names, unit', [
+    (dict(syn.TASK), 'direct', ('ideal command', 'robot'), 'arm lengths/s'),
+    ({}, 'unmodelled', ('hand', 'robot'), 'arm lengths/s')])
+def test_reason_of_a_still_side_names_it_and_its_unit(parameters, mapping, names, unit):
+    """Hand or robot creeps."""
+    motion = syn.wander(size=0.12)
+    creep = syn.wander(size=0.0005)
+    for still in (0, 1):
+        made = syn.Feed()
+        t = syn.clock(0.0, 14.0, 100.0)
+        made.poses('/hand', t, 0.6 * (creep if still == 0 else motion)(t))
+        made.joints('/joints', t, syn.joints_for((creep if still == 1 else motion)(t)))
+        target = syn.evaluator(syn.arm_parameters(**parameters))
+        syn.feed(target, made.messages())
+        reason = syn.metrics(syn.closed(target), mapping)['latency_s']['reason']
+        assert reason.startswith(f'The {names[still]} hardly moves: 0.00')
+        assert f' {unit} RMS in the band, 0.0200 {unit} are needed (in ' in reason
+
+
+def test_standard_error_of_a_run_is_that_of_its_median():
+    """With 20 windows from them, with fewer not at all; single windows' errors have their name."""
+    rng = np.random.default_rng(3)
+    delays = 0.1 + 0.004 * rng.normal(size=30)
+    found = DelayStatistics()
+    for k, delay in enumerate(delays):
+        if k == 19:
+            few = found.metric(caveat='', reason='')
+        found.add(dataclasses.replace(VALUE, delay_s=delay), k * 10 ** 10, (k + 1) * 10 ** 10,
+                  'tool')
+    assert few.details['standard_error_s'] is None and few.ci95 is None
+    assert few.details['window_standard_error_s'] == pytest.approx(0.001)
+    metric = found.metric(caveat='', reason='')
+    assert metric.details['window_standard_error_s'] == pytest.approx(0.001)
+    # Of 30 values the interval lies between the 10th and the 21st, with 95.7 %.
+    low, high = np.sort(delays)[[9, 20]]
+    assert metric.ci95 == (low, high)
+    level = 1.0 - 2.0 * stats.binom.cdf(9, 30, 0.5)
+    assert metric.details['standard_error_s'] == pytest.approx(
+        (high - low) / 2.0 / stats.norm.ppf(0.5 + level / 2.0))
+
+
+def test_delays_all_alike_tell_no_interval():
+    found = DelayStatistics()
+    for k in range(25):
+        found.add(VALUE, k * 10 ** 10, (k + 1) * 10 ** 10, 'tool')
+    metric = found.metric(caveat='receive-based', reason='')
+    assert metric.ci95 is None and metric.details['standard_error_s'] is None
+    assert metric.reason == (
+        'receive-based; no interval: all blocks are alike and show no spread')

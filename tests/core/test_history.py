@@ -90,3 +90,22 @@ def test_quantity_that_comes_and_goes():
     assert len(history) == len(found.valid) == 250
     assert found.valid.tolist() == [True] * 50 + [False] * 100 + [True] * 100
     assert history.get('other') is None and history.delayed('other', 10, 0.0) is None
+
+
+@pytest.mark.parametrize('shift, first', [(0.0, 50), (3.0, 53), (2.5, 53), (2.01, 53), (2.0, 52)])
+def test_delayed_label_is_that_of_the_earlier_cell(shift, first):
+    """Read between two cells, a value is under a mapping only from the earlier one on."""
+    history, count = made(), 100
+    history.label = np.where(np.arange(count) < 50, 1, 2)
+    found = history.label_delayed(80, shift)
+    assert np.flatnonzero(np.diff(found)).tolist() == [first - 20 - 1]
+    # It goes with where `delayed` finds a value.
+    history.run = history.label
+    crossing = np.flatnonzero(~history.delayed('u', 80, shift).valid)
+    assert (found[crossing] == 1).all()
+
+
+def test_delayed_label_before_the_beginning_is_none():
+    history = made(50)
+    history.label = np.full(50, 3)
+    assert history.label_delayed(50, 10.5).tolist() == [-1] * 11 + [3] * 39

@@ -11,7 +11,7 @@ import pytest
 from scipy import integrate, optimize
 from scipy.spatial.transform import Rotation
 
-from teleop_eval.core.latency import DelaySettings, estimate_delay
+from teleop_eval.core.latency import DelaySettings, Sides, estimate_delay
 
 sys.path.insert(0, str(Path(__file__).parent))
 motion = importlib.import_module('synthetic_motion')
@@ -193,7 +193,10 @@ def test_period_is_named_in_seconds():
 
 @pytest.mark.parametrize(('reference', 'response', 'status', 'words'), [
     (velocity(), 0.01 * velocity(0.1), 'unobservable', 'response hardly moves: 0.00'),
-    (0.0 * velocity(), velocity(0.1), 'unobservable', 'does not move at all'),
+    (0.0 * velocity(), velocity(0.1), 'unobservable', 'The reference does not move at all.'),
+    (velocity(), 0.0 * velocity(), 'unobservable', 'The response does not move at all.'),
+    (0.0 * velocity(), 0.0 * velocity(), 'unobservable',
+     'Neither reference nor response moves at all.'),
     (velocity(), velocity(0.1, seed=9), 'unobservable', 'Correlation too low'),
     (velocity(), velocity(1.15), 'unobservable', ''),
     (velocity(), velocity(1.01), 'unobservable', 'edge of the search range'),
@@ -210,6 +213,21 @@ def test_each_reason_is_a_sentence_with_numbers(reference, response, status, wor
     assert result.delay_s is None and result.standard_error_s is None
     assert words in result.reason
     assert result.reason.endswith('.')
+
+
+def test_reasons_call_the_sides_by_the_users_names():
+    sides = Sides('ideal command', 'robot', 'arm lengths/s')
+    times = 2.0 * np.pi * np.arange(1200)[:, None] / RATE
+    for reference, response, words in (
+            (velocity(), 0.01 * velocity(0.1), 'The robot hardly moves: 0.00'),
+            (0.01 * velocity(), velocity(0.1), 'The ideal command hardly moves: 0.00'),
+            (0.0 * velocity(), velocity(0.1), 'The ideal command does not move at all.'),
+            (velocity()[:300], velocity(0.1)[:300], 'valid data of both ideal command and robot'),
+            (np.sin(times), np.sin(times - 1.0), 'The ideal command is periodic')):
+        reason = estimate_delay(reference, response, RATE, sides=sides).reason
+        assert words in reason
+        if 'hardly' in reason:
+            assert ' arm lengths/s RMS in the band, 0.0200 arm lengths/s are needed.' in reason
 
 
 def test_one_dimension_and_seven_joints():

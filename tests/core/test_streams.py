@@ -94,6 +94,16 @@ def test_plan_replaces_the_rest_of_the_one_before():
     assert made.counts.out_of_order == 1
 
 
+def test_point_of_a_new_plan_takes_the_place_of_the_one_at_its_time():
+    made = stream([], planned=True)
+    made.add([row(10), row(20), row(30)])
+    made.add([row(20, 1.0), row(40, 1.0)])
+    items = made.items(99)
+    assert items.times_ns.tolist() == [10, 20, 40]
+    assert items.values[:, 0].tolist() == [0.0, 1.0, 1.0]
+    assert made.counts.out_of_order == 0
+
+
 def test_late_held_value_holds_from_the_watermark_on():
     made = stream([0, 50], held=True)
     made.close(100)
