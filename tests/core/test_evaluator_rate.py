@@ -121,9 +121,11 @@ def test_a_velocity_command_is_taken_as_one() -> None:
     made, t, velocities = driven()
     made.twists('/stick', t, velocities).twists('/command', t, velocities)
     one = evaluator(arm_parameters(**RATE, command__topic='/command'))
-    feed(one, made.messages())
+    windows = feed(one, made.messages())
     found = metrics(closed(one))
-    assert one.problems == []
+    assert one.problems == [] and len(windows) > 8
+    assert not any(name.startswith('joint_error') for window in windows
+                   for name in window.metrics)
     assert found['joint_error_rms']['reason'] == 'the command is a tool velocity, not joints'
     assert found['latency_response_s']['status'] == 'ok'
     assert found['latency_response_s']['value'] == pytest.approx(0.0, abs=0.003)

@@ -18,7 +18,11 @@ from teleop_eval.core.settings import Settings
 from teleop_eval.nodes.declared_parameters import check_change, declare, flat_overrides
 
 FLAT = {'arms.right.robot.joints_topic': 'j', 'arms.right.robot.joint_names': ['a'],
-        'time.window_s': 2, 'arms.right.operator.shoulder_m': [0, 0, 1]}
+        'time.window_s': 2, 'arms.right.operator.shoulder_m': [0, 0, 1],
+        'arms.right.mappings.a.kind': 'task_space', 'arms.right.mappings.b.kind': 'relative',
+        'arms.right.mappings.c.kind': 'rate', 'arms.right.mappings.c.gain_xyz': [1, 2, 3],
+        'arms.right.mappings.d.kind': 'joint_space',
+        'arms.right.mappings.d.joints.j.source': 'k', 'arms.right.mappings.e.kind': 'unmodelled'}
 
 
 class Overridden(Node):
@@ -55,6 +59,12 @@ def test_every_parameter_is_declared_with_a_descriptor(domain: int) -> None:
         assert node.get_parameter('time.window_s').value == 2.0
         assert list(node.get_parameter('arms.right.operator.shoulder_m').value) == [0.0, 0.0, 1.0]
         assert math.isnan(node.get_parameter('time.grid_rate_hz').value)
+        of = node.get_parameters_by_prefix('arms.right.mappings.c')
+        assert list(of['gain_xyz'].value) == [1.0, 2.0, 3.0] and of['anchor_s'].value == 5.0
+        assert 'scaling' not in of and node.has_parameter('arms.right.mappings.b.frame')
+        assert set(node.get_parameters_by_prefix('arms.right.mappings.e')) == {'kind'}
+        axes = node.get_parameter('arms.right.operator.joy_axes').value
+        assert list(axes) == [0, 1, 2, 3, 4, 5]
         assert '10 to 1000' in node.describe_parameter('time.grid_rate_hz').additional_constraints
     assert declared.settings.arms['right'].operator.shoulder_m == (0.0, 0.0, 1.0)
 
