@@ -67,13 +67,15 @@ class OfflineRun:
         Whether to show progress.
     simulated_time
         Whether receive times came from a simulated clock.
+    candidates
+        Whether to predict every configured mapping.
 
     """
 
     def __init__(self, recording: Path, settings: Settings, flat: Mapping[str, Any], *,
                  source: str, out: Path, descriptions: Mapping[str, str],
                  resolve: Callable[[str], str], progress: bool,
-                 simulated_time: bool = False) -> None:
+                 simulated_time: bool = False, candidates: bool = False) -> None:
         self._path = recording
         self._settings = settings
         self._flat = flat
@@ -83,6 +85,7 @@ class OfflineRun:
         self._resolve = resolve
         self._progress = progress
         self._simulated_time = simulated_time
+        self._candidates = candidates
         self._first_ns: int | None = None
         self._last_ns: int | None = None
         self._next_diagnostics_ns = 0
@@ -100,7 +103,7 @@ class OfflineRun:
         """
         evaluator = SessionEvaluator(
             self._settings, descriptions=self._descriptions, resolve=self._resolve,
-            simulated_time=self._simulated_time)
+            simulated_time=self._simulated_time, candidates=self._candidates)
         with open_recording(self._path) as recording:
             inputs = RecordedInputs(
                 recording, evaluator.routes, event_topic=EVENT_TOPIC, supported=SUPPORTED,

@@ -29,6 +29,9 @@ _EPILOG = """\
 example:
   teleop_eval summarize my_recording --config evaluator.yaml --out my_results
 
+To see what the other configured mappings would have asked of the robot:
+  teleop_eval summarize my_recording --config evaluator.yaml --candidates
+
 A session folder that the live node wrote with session.record_inputs needs no --config:
   teleop_eval summarize teleop_eval_sessions/2026-01-31_14-05-00 --out again
 
@@ -70,7 +73,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         out=options.out or Path(f'{name.removesuffix(".mcap").removesuffix(".db3")}_summary'),
         descriptions=read_descriptions(settings, config.parent),
         resolve=lambda topic: resolve_topic(topic, namespace), progress=options.progress,
-        simulated_time=parameters.get('use_sim_time') is True)
+        simulated_time=parameters.get('use_sim_time') is True, candidates=options.candidates)
     outcome = run.run()
     report('teleop_eval summarize', outcome.summary, outcome.folder)
     return STATUS_OK if outcome.complete else STATUS_FAILURE
@@ -113,6 +116,10 @@ def _parser() -> argparse.ArgumentParser:
     parser.add_argument(
         '--namespace', default='/', metavar='NS',
         help='namespace in which relative topic names were recorded (default: /)')
+    parser.add_argument(
+        '--candidates', action='store_true',
+        help='also predict what every configured mapping would have asked of the robot for the '
+        "same operator motion (a prediction without the operator's adaptation)")
     parser.add_argument(
         '--no-progress', dest='progress', action='store_false', help='show no progress')
     return parser

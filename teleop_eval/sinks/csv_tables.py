@@ -51,7 +51,11 @@ def number_cell(value: Any) -> str:
 
 
 def metrics_table(summary: Mapping[str, Any]) -> str:
-    """Return the text of metrics.csv: one row for each arm, mapping and metric."""
+    """
+    Return the text of metrics.csv: one row for each arm, mapping and metric.
+
+    A candidate's rows have '(predicted)' behind the mapping's label.
+    """
     stream = io.StringIO(newline='')
     writer = csv.writer(stream, lineterminator='\n')
     writer.writerow(METRIC_COLUMNS)
@@ -59,6 +63,9 @@ def metrics_table(summary: Mapping[str, Any]) -> str:
         for mapping, of_mapping in sorted(of_arm.get('mappings', {}).items()):
             for name, metric in sorted(of_mapping.get('metrics', {}).items()):
                 writer.writerow(_metric_row(arm, mapping, name, metric))
+        for mapping, predicted in sorted(of_arm.get('candidates', {}).items()):
+            for name, metric in sorted(predicted.get('metrics', {}).items()):
+                writer.writerow(_metric_row(arm, f'{mapping} (predicted)', name, metric))
     return stream.getvalue()
 
 

@@ -33,7 +33,8 @@ _ORDER = {key: place for place, key in enumerate((
     'schema_version', 'tool', 'session', 'arms', 'notes', 'problems',
     'name', 'version', 'python', 'libraries',
     'condition', 'operator', 'start_ns', 'end_ns', 'duration_s', 'source',
-    'time_base', 'grid', 'segments', 'geometry', 'inputs', 'mappings',
+    'time_base', 'grid', 'segments', 'geometry', 'inputs', 'mappings', 'candidates',
+    'prediction', 'why_not', 'advice',
     'base', 'topic', 'messages', 'rate_hz',
     'metrics', 'value', 'unit', 'ci95', 'n', 'samples', 'status', 'reason', 'details'))}
 

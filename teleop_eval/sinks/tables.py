@@ -9,37 +9,49 @@ or terminal control.
 
 from __future__ import annotations
 
-import math
 import re
-import unicodedata
 from collections.abc import Mapping, Sequence
-from typing import Any, TypeGuard
+from typing import Any
 
 from rich.box import SIMPLE_HEAD
 from rich.console import Console, Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
+from teleop_eval.sinks.budget_table import advice, budget_tables
+from teleop_eval.sinks.wording import (
+    LONGEST_SENTENCE,
+    Remarks,
+    as_mapping,
+    clean,
+    finite,
+    is_pair,
+    listed,
+    number,
+)
+
 # Mappings side by side that 80 characters hold; further ones follow in a table below.
-ABREAST, ABREAST_WITH_TRUTH = 3, 2
+ABREAST, ABREAST_WITH_TRUTH, CANDIDATES_ABREAST = 3, 2, 2
 NAME_WIDTH, UNIT_WIDTH, TRUTH_WIDTH = 35, 5, 6
 # By the number of mappings abreast; beside a truth column there is less room.
 VALUE_WIDTHS = {1: 18, 2: 18, 3: 12}
 VALUE_WIDTH_BESIDE_TRUTH = 11
-UNIT_SIGNS = {'arm lengths': 'L', 'arm lengths^3': 'L^3'}
-LONGEST_LABEL, LONGEST_SENTENCE = 60, 400
+UNIT_SIGNS = {'arm lengths': 'L', 'arm lengths^3': 'L^3', 'arm lengths/s': 'L/s'}
 NO_ENTRY = '-'
 # Rows in the order in which a practitioner asks; a name of none of these families comes last.
 FAMILIES = (
     ('latency_s', 'latency_command_', 'latency_'),
-    ('tracking_error_', 'orientation_error_', 'joint_error_'),
-    ('workspace_', 'reach_', 'hull_', 'joint_range_', 'limit_', 'manipulability_'),
+    ('bandwidth_', 'phase_delay_', 'coherent_'),
+    ('tracking_error_', 'orientation_error_', 'turn_rate_error_', 'joint_error_'),
+    ('predicted_',),
+    ('workspace_', 'reach_', 'hull_', 'not_reached_', 'joint_range_', 'joint_speed_', 'limit_',
+     'manipulability_'),
     ('engaged_time_', 'engagements', 'engagement_'),
 )
 # Left to metrics.csv: what repeats a row in other words or says little on its own.
 IN_FILE_ONLY = re.compile(
     r'.*\..*|.*_(p95|max)_m|orientation_error_(compensated_)?(p95|max)_rad|reach_p50_norm.*'
-    r'|joint_error_(compensated_)?p95|hull_volume_norm_operator|engagement_rate_per_min')
+    r'|discrepancy_.*|budget_.*|joint_error_(compensated_)?p95|hull_volume_norm_operator|engagement_rate_per_min')
 # Within a family: plain before compensated, robot before operator, then by the first of these
 # words in the name, arm lengths before metres.
 WORDS = ('rms', 'p50', 'p95', 'max', 'p5', 'min', 'static', 'varying')
@@ -70,9 +82,9 @@ def summary_table(summary: Mapping[str, Any], *,
         to metrics.csv.
 
     """
-    parts: list[RenderableType] = [_heading(_mapping(summary.get('session')))]
-    for arm, of_arm in _mapping(summary.get('arms')).items():
-        parts += _arm(str(arm), _mapping(of_arm), _mapping(_mapping(truth).get('mappings')))
+    parts: list[RenderableType] = [_heading(as_mapping(summary.get('session')))]
+    for arm, of_arm in as_mapping(summary.get('arms')).items():
+        parts += _arm(str(arm), as_mapping(of_arm), as_mapping(as_mapping(truth).get('mappings')))
     if len(parts) == 1:
         parts.append(Text('No arm was evaluated.'))
     if truth:
@@ -81,8 +93,8 @@ def summary_table(summary: Mapping[str, Any], *,
         sentences = [clean(str(item), LONGEST_SENTENCE) for item in summary.get(key) or ()]
         if sentences:
             parts.append(Text(f'\n{title}', style=style))
-            parts += [_listed('-', sentence) for sentence in sentences]
-    return Group(*parts)
+            parts += [listed('-', sentence) for sentence in sentences]
+    return Group(*parts, *advice(summary))
 
 
 def print_summary(summary: Mapping[str, Any], *, truth: Mapping[str, Any] | None = None,
@@ -94,51 +106,13 @@ def print_summary(summary: Mapping[str, Any], *, truth: Mapping[str, Any] | None
     console.print(summary_table(summary, truth=truth))
 
 
-def clean(text: str, longest: int = LONGEST_LABEL) -> str:
-    """
-    Return text that cannot move the cursor, change colours or reorder its surroundings.
-
-    Control, format and unassigned characters become a replacement sign, white space one
-    space, and a text longer than `longest` is cut.
-    """
-    shown = ''.join(
-        ' ' if sign.isspace() else '\ufffd' if unicodedata.category(sign)[0] == 'C' else sign
-        for sign in text[:4 * longest])
-    shown = ' '.join(shown.split())
-    return shown if len(shown) <= longest and len(text) <= 4 * longest else (
-        shown[:longest - 3] + '...')
-
-
-def number(value: float) -> str:
-    """Return up to four significant digits, without an exponent where that stays readable."""
-    if abs(value) < 1e6 and value == int(value):
-        return str(int(value))
-    size = math.floor(math.log10(abs(value)))
-    if not -3 <= size < 6:
-        return f'{value:.1e}'
-    return f'{value:.{min(max(3 - size, 0), 4)}f}'
-
-
-class _Remarks:
-    """Numbers the sentences below a table; the same sentence keeps its number."""
-
-    def __init__(self) -> None:
-        self._numbers: dict[str, int] = {}
-
-    def mark(self, sentence: str) -> str:
-        return f'({self._numbers.setdefault(sentence, len(self._numbers) + 1)})'
-
-    def lines(self) -> list[RenderableType]:
-        return [_listed(f'({place})', sentence) for sentence, place in self._numbers.items()]
-
-
 def _heading(session: Mapping[str, Any]) -> Text:
     text = Text()
     text.append(clean(str(session.get('name') or 'session without a name')), style='bold')
     duration = session.get('duration_s')
     facts = [clean(str(session[key])) for key in ('condition', 'operator', 'source')
              if session.get(key)]
-    if _finite(duration):
+    if finite(duration):
         facts.append(f'{duration:.1f} s')
     if facts:
         text.append('  ' + ', '.join(facts))
@@ -148,37 +122,60 @@ def _heading(session: Mapping[str, Any]) -> Text:
 def _arm(arm: str, of_arm: Mapping[str, Any],
          true_mappings: Mapping[str, Any]) -> list[RenderableType]:
     heading = Text(f'\nArm {clean(arm)}', style='bold')
-    base = _mapping(of_arm.get('time_base'))
+    base = as_mapping(of_arm.get('time_base'))
     if base.get('base'):
         reason = clean(str(base.get('reason') or ''), LONGEST_SENTENCE)
         heading.append(f'  time base: {clean(str(base["base"]))}'
                        + (f' ({reason})' if reason else ''), style='not bold')
-    geometry = _mapping(of_arm.get('geometry'))
+    geometry = as_mapping(of_arm.get('geometry'))
     lengths = [f'{whose} {number(float(geometry[key]))} m' for whose, key in (
         ('robot', 'robot_reach_m'), ('operator', 'operator_arm_length_m'))
-        if _finite(geometry.get(key))]
+        if finite(geometry.get(key))]
     if lengths:
         heading.append(f'; arm length: {", ".join(lengths)}', style='not bold')
-    mappings = _mapping(of_arm.get('mappings'))
+    mappings = as_mapping(of_arm.get('mappings'))
     if not mappings:
         return [heading, Text(_why_nothing(of_arm))]
     parts: list[RenderableType] = [heading]
-    remarks = _Remarks()
+    remarks = Remarks()
     labels = list(mappings)
     abreast = ABREAST_WITH_TRUTH if true_mappings else ABREAST
     for first in range(0, len(labels), abreast):
-        shown = {label: _mapping(mappings[label]) for label in labels[first:first + abreast]}
+        shown = {label: as_mapping(mappings[label]) for label in labels[first:first + abreast]}
         parts.append(_table(shown, true_mappings, remarks))
     parts.append(Text('L = arm lengths; further metrics and single joints: metrics.csv',
                       style='dim'))
-    return parts + remarks.lines() + _not_configured(mappings)
+    return [*parts, *remarks.lines(), *_not_configured(mappings), *budget_tables(mappings),
+            *_candidates(of_arm)]
+
+
+def _candidates(of_arm: Mapping[str, Any]) -> list[RenderableType]:
+    """Return the predictions for the configured mappings, side by side."""
+    candidates = {label: as_mapping(one) for label, one in as_mapping(
+        of_arm.get('candidates')).items()}
+    if not candidates:
+        return []
+    first = next(iter(candidates.values()))
+    parts: list[RenderableType] = [
+        Text('\nCandidate mappings', style='bold'),
+        Text(clean(str(first.get('prediction', '')), LONGEST_SENTENCE), style='yellow')]
+    known = {label: one for label, one in candidates.items() if one.get('metrics')}
+    remarks, labels = Remarks(), list(known)
+    for start in range(0, len(labels), CANDIDATES_ABREAST):
+        shown = {label: known[label] for label in labels[start:start + CANDIDATES_ABREAST]}
+        parts.append(_table(shown, {}, remarks))
+    parts += remarks.lines()
+    parts += [listed('-', f'{clean(label)}: not predicted: '
+                     + clean(str(one['why_not']), LONGEST_SENTENCE))
+              for label, one in candidates.items() if one.get('why_not')]
+    return parts
 
 
 def _why_nothing(of_arm: Mapping[str, Any]) -> str:
     """Return why an arm has no metrics under any mapping."""
-    if _mapping(of_arm.get('time_base')).get('base'):
+    if as_mapping(of_arm.get('time_base')).get('base'):
         return 'No mapping was active while the arm was evaluated.'
-    inputs = [_mapping(one) for one in _mapping(of_arm.get('inputs')).values()]
+    inputs = [as_mapping(one) for one in as_mapping(of_arm.get('inputs')).values()]
     silent = [clean(str(one.get('topic'))) for one in inputs if not one.get('messages')]
     if not silent:
         return 'Nothing was evaluated: too few usable messages came.'
@@ -187,20 +184,20 @@ def _why_nothing(of_arm: Mapping[str, Any]) -> str:
 
 def _nowhere(metrics: Any, name: str) -> bool:
     """Tell whether a metric is not configured under any mapping: no row for it."""
-    return all(_mapping(of.get(name)).get('status', 'not_configured') == 'not_configured'
+    return all(as_mapping(of.get(name)).get('status', 'not_configured') == 'not_configured'
                for of in metrics)
 
 
 def _not_configured(mappings: Mapping[str, Any]) -> list[RenderableType]:
     """Return a sentence for each reason why metrics are not configured anywhere."""
-    metrics = [_mapping(_mapping(of).get('metrics')) for of in mappings.values()]
+    metrics = [as_mapping(as_mapping(of).get('metrics')) for of in mappings.values()]
     by_reason: dict[str, list[str]] = {}
     for name in _names(metrics):
-        found = [_mapping(of[name]) for of in metrics if name in of]
+        found = [as_mapping(of[name]) for of in metrics if name in of]
         if _nowhere(metrics, name) and found:
             reason = clean(str(found[0].get('reason') or 'no reason given'), LONGEST_SENTENCE)
             by_reason.setdefault(reason, []).append(clean(name))
-    return [_listed('-', f'not configured: {_families(names)}: {reason}')
+    return [listed('-', f'not configured: {_families(names)}: {reason}')
             for reason, names in by_reason.items()]
 
 
@@ -213,7 +210,7 @@ def _families(names: Sequence[str]) -> str:
 
 
 def _table(shown: Mapping[str, Mapping[str, Any]], true_mappings: Mapping[str, Any],
-           remarks: _Remarks) -> Table:
+           remarks: Remarks) -> Table:
     table = Table(box=SIMPLE_HEAD, show_edge=False, pad_edge=False, padding=0)
     table.add_column('metric', width=NAME_WIDTH, overflow='fold')
     table.add_column('unit', width=UNIT_WIDTH, overflow='fold')
@@ -226,7 +223,7 @@ def _table(shown: Mapping[str, Mapping[str, Any]], true_mappings: Mapping[str, A
         table.add_column(title, justify='right', overflow='fold', width=width)
         if true_mappings:
             table.add_column('truth', justify='right', style='cyan', width=TRUTH_WIDTH)
-    metrics = {label: _mapping(of_mapping.get('metrics')) for label, of_mapping in shown.items()}
+    metrics = {label: as_mapping(of_mapping.get('metrics')) for label, of_mapping in shown.items()}
     group = None
     for name in _names(metrics.values()):
         if IN_FILE_ONLY.fullmatch(name) or _nowhere(metrics.values(), name):
@@ -234,28 +231,29 @@ def _table(shown: Mapping[str, Mapping[str, Any]], true_mappings: Mapping[str, A
         if group is not None and _group(name) != group:
             table.add_row()
         group = _group(name)
-        units = [str(_mapping(of[name]).get('unit', '')) for of in metrics.values() if name in of]
+        units = [str(as_mapping(of[name]).get('unit', ''))
+                 for of in metrics.values() if name in of]
         unit = UNIT_SIGNS.get(units[0], clean(units[0], 24))
         row: list[RenderableType] = [Text(_broken(clean(name))), Text(unit)]
         for label, of in metrics.items():
             row.append(_cell(of.get(name), remarks))
             if true_mappings:
-                row.append(_true_cell(_mapping(true_mappings.get(label)), name))
+                row.append(_true_cell(as_mapping(true_mappings.get(label)), name))
         table.add_row(*row)
     return table
 
 
-def _cell(metric: Any, remarks: _Remarks) -> Text:
-    metric = _mapping(metric)
+def _cell(metric: Any, remarks: Remarks) -> Text:
+    metric = as_mapping(metric)
     if not metric:
         return Text(NO_ENTRY)
     value, reason = metric.get('value'), str(metric.get('reason') or '')
-    if metric.get('status') == 'ok' and _finite(value):
+    if metric.get('status') == 'ok' and finite(value):
         text = Text(number(value))
         if reason:  # a caveat
             text.append(f' {remarks.mark(clean(reason, LONGEST_SENTENCE))}', style='yellow')
         interval = metric.get('ci95')
-        if _is_pair(interval):
+        if is_pair(interval):
             low, high = (number(float(end)) for end in interval)
             text.append(f'\n{low}..{high}', style='dim')
         return text
@@ -268,8 +266,8 @@ def _cell(metric: Any, remarks: _Remarks) -> Text:
 
 
 def _true_cell(of_mapping: Mapping[str, Any], name: str) -> Text:
-    value = _mapping(of_mapping.get('metrics')).get(name)
-    return Text(number(value)) if _finite(value) else Text('')
+    value = as_mapping(of_mapping.get('metrics')).get(name)
+    return Text(number(value)) if finite(value) else Text('')
 
 
 def _truth_sentence(truth: Mapping[str, Any]) -> Text:
@@ -277,8 +275,8 @@ def _truth_sentence(truth: Mapping[str, Any]) -> Text:
     named = (('processing', 'processing_delay_s'), ('transport', 'transport_delay_s'),
              ('servo lag 2 zeta/omega_n', 'servo_lag_s'))
     shown = [f'{label} {number(float(truth[key]))} s' for label, key in named
-             if _finite(truth.get(key))]
-    if shown and _finite(truth.get('sum_s')):
+             if finite(truth.get(key))]
+    if shown and finite(truth.get('sum_s')):
         text.append(f'  {" + ".join(shown)} = {number(float(truth["sum_s"]))} s.',
                     style='not bold')
     text.append(' The truth column holds what the same estimator finds on the same motion '
@@ -318,26 +316,3 @@ def _broken(name: str) -> str:
             lines.append('  ')
         lines[-1] += part
     return '\n'.join(lines)
-
-
-def _listed(mark: str, sentence: str) -> Table:
-    """Return a sentence with a hanging indent behind its mark."""
-    line = Table.grid(padding=(0, 1))
-    line.add_column(no_wrap=True)
-    line.add_column(overflow='fold')
-    line.add_row(Text(mark), Text(sentence))
-    return line
-
-
-def _mapping(value: Any) -> Mapping[str, Any]:
-    return value if isinstance(value, Mapping) else {}
-
-
-def _finite(value: Any) -> TypeGuard[float]:
-    return (isinstance(value, int | float) and not isinstance(value, bool)
-            and math.isfinite(value))
-
-
-def _is_pair(value: Any) -> bool:
-    return (isinstance(value, Sequence) and not isinstance(value, str) and len(value) == 2
-            and all(_finite(end) for end in value))

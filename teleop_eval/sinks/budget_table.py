@@ -1,0 +1,115 @@
+# Copyright 2026 The teleop_eval authors
+# SPDX-License-Identifier: Apache-2.0
+"""The error budget for a terminal: one small table for each mapping, and what to fix first."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from rich.box import SIMPLE_HEAD
+from rich.console import RenderableType
+from rich.table import Table
+from rich.text import Text
+
+from teleop_eval.sinks.wording import (
+    LONGEST_SENTENCE,
+    Remarks,
+    as_mapping,
+    clean,
+    finite,
+    is_pair,
+    listed,
+    number,
+)
+
+# Row titles by the beginning of the metrics' names, in the order of the chain.
+ROWS = {
+    'discrepancy': 'discrepancy (sum)',
+    'budget_mapping': 'mapping',
+    'budget_processing_delay': 'processing delay',
+    'budget_command': 'command',
+    'budget_response_delay': 'response delay',
+    'budget_residual': 'residual',
+}
+PARTS = ('rms', 'static', 'varying')
+
+
+def budget_tables(mappings: Mapping[str, Any]) -> list[RenderableType]:
+    """Return the error budget of each mapping that has one."""
+    parts: list[RenderableType] = []
+    remarks = Remarks()
+    for label, of_mapping in mappings.items():
+        metrics = as_mapping(as_mapping(of_mapping).get('metrics'))
+        if any(as_mapping(metrics.get(f'{start}_rms{end}')).get('status') not in (
+                None, 'not_configured') for start in ROWS for end in ('_norm', '_norm_s')):
+            parts.append(_table(clean(str(label)), metrics, remarks))
+    if not parts:
+        return []
+    title = Text('\nError budget', style='bold')
+    title.append('  tool minus hand, in the axes of the robot: whose part is how large',
+                 style='not bold')
+    return [title, *parts, *remarks.lines()]
+
+
+def _table(label: str, metrics: Mapping[str, Any], remarks: Remarks) -> Table:
+    rate = 'budget_residual_rms_norm_s' in metrics
+    end, unit = ('_norm_s', 'L/s') if rate else ('_norm', 'L')
+    table = Table(box=SIMPLE_HEAD, show_edge=False, pad_edge=False, padding=(0, 1))
+    table.add_column(Text(label, overflow='fold'), width=18, overflow='fold')
+    for name, width in ((f'RMS {unit}', 17), (f'static {unit}', 9), (f'varying {unit}', 10),
+                        ('share', 19)):
+        table.add_column(name, justify='right', width=width, overflow='fold')
+    for start, title in ROWS.items():
+        row: list[RenderableType] = [Text(title)]
+        row += [_cell(metrics.get(f'{start}_{part}{end}'), remarks, short=part != 'rms')
+                for part in PARTS]
+        row.append(Text('') if start == 'discrepancy' else
+                   _cell(metrics.get(f'{start}_share'), remarks, percent=True))
+        table.add_row(*row)
+    return table
+
+
+def _cell(metric: Any, remarks: Remarks, *, short: bool = False, percent: bool = False) -> Text:
+    metric = as_mapping(metric)
+    value, reason = metric.get('value'), str(metric.get('reason') or '')
+    if metric.get('status') != 'ok' or not finite(value):
+        status = clean(str(metric.get('status') or 'no value').replace('_', ' '))
+        if short or not reason:
+            return Text('-', style='yellow')
+        mark = remarks.mark(f'{status}: {clean(reason, LONGEST_SENTENCE)}')
+        return Text(f'{status if percent or len(status) < 13 else "none"} {mark}',
+                    style='yellow')
+    text = Text(_shown(value, percent=percent))
+    if reason and not short:
+        text.append(f' {remarks.mark(clean(reason, LONGEST_SENTENCE))}', style='yellow')
+    interval = metric.get('ci95')
+    if is_pair(interval) and not short:
+        low, high = (_shown(float(one), percent=percent) for one in interval)
+        text.append(f'\n{low}..{high}', style='dim')
+    other = as_mapping(metric.get('details')).get('partly_cancels')
+    if percent and other and value < -0.0005:
+        text.append(f'\npartly cancels {clean(str(other)).replace("_", " ")}', style='dim')
+    return text
+
+
+def _shown(value: float, *, percent: bool) -> str:
+    if percent:
+        return f'{100.0 * value:.1f} %'
+    # A ten-thousandth of an arm length is less than a tenth of a millimetre.
+    return number(value) if abs(value) >= 5e-5 else '0.0000'
+
+
+def advice(summary: Mapping[str, Any]) -> list[RenderableType]:
+    """Return one sentence for each mapping, with the arm where there are several."""
+    arms = as_mapping(summary.get('arms'))
+    sentences = [
+        (f'{clean(str(arm))}, ' if len(arms) > 1 else '')
+        + clean(str(as_mapping(of_mapping)['advice']), LONGEST_SENTENCE)
+        for arm, of_arm in arms.items()
+        for of_mapping in as_mapping(as_mapping(of_arm).get('mappings')).values()
+        if as_mapping(of_mapping).get('advice')]
+    if not sentences:
+        return []
+    return [Text('\nWhat to fix first', style='bold'),
+            *(listed('-', sentence) for sentence in sentences)]
