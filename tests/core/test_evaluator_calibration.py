@@ -299,3 +299,14 @@ def test_an_angle_of_sweeps_that_is_too_small_is_told():
     assert 30.0 < spread < 60.0 and math.isfinite(spread)
     assert any(f'the sweeps span {spread:.0f} deg, but more than 60 deg are needed' in text
                for text in summary['problems'])
+
+
+def test_what_was_wrong_during_the_sweeps_is_still_told_after_them():
+    messages = session(50.0).messages()
+    at = next(i for i, (_, topic, _) in enumerate(messages) if topic == '/hand' and i > 2000)
+    receive_ns, topic, one = messages[at]
+    messages[at] = (receive_ns, topic, PoseSample(
+        one.stamp_ns, np.array([np.nan, 0.0, 0.0]), None, 'op'))
+    _, summary = run(messages)
+    assert summary['arms']['right']['geometry']['operator_calibration']['samples'] == 2999
+    assert any('hand (/hand): x = nan came' in text for text in summary['problems'])
