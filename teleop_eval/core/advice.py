@@ -32,7 +32,7 @@ def largest_term(metrics: Mapping[str, Metric], suffix: str = '_norm', *,
 
 
 def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float | None],
-                cancels: str = '', suffix: str = '_norm') -> str:
+                cancels: str = '', suffix: str = '_norm', has_command: bool = True) -> str:
     """
     Return the largest term in plain words, '' if there is none.
 
@@ -44,6 +44,8 @@ def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float |
         Seconds by 'processing_delay' and 'response_delay', None where not known.
     cancels
         Term that the largest one partly cancels, '' if its share is positive.
+    has_command
+        Whether the robot's delay is that behind a command, not behind the ideal command.
 
     """
     name = largest_term(metrics, suffix)
@@ -53,7 +55,8 @@ def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float |
     text = f'{WORDS[name]}: {metric.number:.3f} {_UNITS.get(metric.unit, metric.unit)}'
     delay = delays_s.get(name)
     if delay is not None:
-        behind = 'the command' if name == 'response_delay' else 'the ideal command'
+        behind = ('the command' if name == 'response_delay' and has_command
+                  else 'the ideal command')
         text += f', {delay * 1e3:.0f} ms behind {behind}'
     if cancels:
         text += f'; partly cancels {WORDS[cancels]}'

@@ -145,7 +145,8 @@ class ArmStatus:
             return ''
         cancels = measured.accumulators[measured.label].budget.cancels(largest)
         return 'mostly ' + plain_words(
-            metrics, delays_s=measured.delays_s, cancels=cancels, suffix=space.suffix)
+            metrics, delays_s=measured.delays_s, cancels=cancels, suffix=space.suffix,
+            has_command=measured.latency.has(space.command))
 
     def _workspace(self, now_ns: int, thresholds: ThresholdSettings) -> StatusLine:
         measured = self._arm.measurement

@@ -149,6 +149,8 @@ def test_plain_words_rank_by_rms():
     assert text == ('response delay: 0.060 arm lengths, 92 ms behind the command; '
                     'partly cancels mapping')
     assert plain_words({}, delays_s={}) == ''
+    alone = plain_words(metrics, delays_s={'response_delay': 0.092}, has_command=False)
+    assert alone.endswith('92 ms behind the ideal command')
 
 
 def measured(mapping, response, ci=None, n=30):
