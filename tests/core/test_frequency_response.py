@@ -266,3 +266,16 @@ def test_overlap_takes_a_little_of_the_effective_segments():
         batches.add(row, index)
     # 1 + 2 / 36 x 18 / 19 for Hann windows that overlap by half.
     assert batches.effective_segments()[0] == pytest.approx(19.0 / (1.0 + 18.0 / 18.0 / 19.0))
+
+
+def test_joining_batches_loses_no_segment():
+    batches = SpectraBatches(1)
+    row = np.ones((1, 9))
+    for index in range(4001):
+        batches.add(row, index)
+        if index % 400 == 399:
+            assert batches.total.sums[0, 0] == index + 1 == batches.segments
+    sizes = [4001.0 - one.sums[0, 0] for one in batches.left_out()]
+    assert 20 <= len(sizes) <= 40 and sum(sizes) == 4001.0
+    # All as long as each other but the last.
+    assert len(set(sizes[:-1])) == 1 and 0.5 * sizes[0] <= sizes[-1] <= 1.5 * sizes[0]
