@@ -190,6 +190,16 @@ def test_time_at_a_limit_is_the_share_for_tool_mappings() -> None:
     assert found['limit_margin_min'].value == 0.0
 
 
+def test_a_locked_joint_is_not_at_a_limit() -> None:
+    kind = 'revolute'
+    arm = robot((kind, Z, '0 0 0'), (kind, Z, f'{L1} 0 0'), (kind, Z, f'{L2} 0 0'),
+                tool='0.1 0 0', reach=0.65)
+    arm.chain.lower[2] = arm.chain.upper[2] = 0.4
+    found = predicted(arm, Ideal(circle(0.45, 0.2 * seconds(2.0))))['limit_violation_share']
+    assert found.value == 0.0
+    assert set(found.details['joints']) == {'q0', 'q1'}
+
+
 def test_discrepancy_is_the_rms_of_the_difference() -> None:
     time = seconds(60.0)
     targets = circle(0.35, 0.2 * np.sin(time))

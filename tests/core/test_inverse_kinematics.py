@@ -254,12 +254,53 @@ def test_a_sliding_joint_is_measured_in_arm_lengths() -> None:
 
 
 def test_continuous_joints_are_not_unwound() -> None:
-    angles = np.linspace(0.3, 0.3 + 3.0 * TURN, 900)
-    chain = two_links(kind='continuous')
-    result = solver(chain, rest=[0.0, 1.0], pull=0.05).solve(arc(0.4, angles))
+    kind = 'continuous'
+    chain = arm((kind, Z, '0 0 0', 0, 0), (kind, Z, f'{L1} 0 0', 0, 0),
+                (kind, Z, f'{L2} 0 0', 0, 0), tool=f'{L3} 0 0')
+    turns = np.arange(4 * 300 + 1) / 300.0
+    result = solver(chain, rest=[0.0, 1.0, 0.5], pull=0.05).solve(arc(0.5, TURN * turns))
     assert result.reached.all()
     assert_array_equal(np.flatnonzero(result.jumped), [0])
-    assert_allclose(result.joints[-1, 0] - result.joints[0, 0], 3.0 * TURN, atol=1e-5)
+    # Free motion is the same in each turn, however many came before.
+    assert_allclose(result.joints[-1] - result.joints[-301], [TURN, 0.0, 0.0], atol=1e-4)
+
+
+def test_a_pose_missed_by_its_angle_alone_is_not_reached() -> None:
+    # Three slides and a wrist about one point: position and orientation are independent.
+    slide, turn = ('prismatic', '0 0 0', -1.0, 1.0), ('revolute', '0 0 0', -0.5, 0.5)
+    chain = arm(*((kind, axis, xyz, low, high) for (kind, xyz, low, high), axis in (
+        (slide, '1 0 0'), (slide, '0 1 0'), (slide, Z),
+        (turn, Z), (turn, '0 1 0'), (turn, '1 0 0'))), tool='0 0 0')
+    assert orientation_possible(chain)
+    path = PathSolver(chain, reach_m=1.0, with_orientation=True)
+    angles = np.array([0.4, 0.5 + 1e-5, 0.8])
+    turned = np.stack([np.sin(angles / 2), 0 * angles, 0 * angles, np.cos(angles / 2)], axis=1)
+    result = path.solve(np.tile([0.3, -0.2, 0.1], (3, 1)), turned)
+    assert_allclose(result.position_error_m, 0.0, atol=1e-7)
+    assert_allclose(result.orientation_error_rad, [0.0, 1e-5, 0.3], atol=1e-7)
+    assert_array_equal(result.reached, [True, False, False])
+    with pytest.raises(ValueError, match=r'orientations must have shape \(1, 4\), got None'):
+        path.solve([[0.0, 0.0, 0.0]])
+    unknown = path.solve([[0.3, -0.2, 0.1]], [[np.nan, 0.0, 0.0, 1.0]])
+    assert not unknown.asked[0]
+
+
+def test_other_branches_are_tried_again_while_targets_stay_out_of_reach() -> None:
+    # Out of the plane, round to where only the other elbow serves, and into the plane again.
+    angles = np.concatenate([
+        np.linspace(1.8, 2.0, 30), np.linspace(2.0, 3.0, 20), np.full(70, 3.0)])
+    targets = arc(0.35, angles)
+    targets[30:50, 2] = 0.05
+    chain = two_links()
+    result = solver(chain, rest=[0.0, -1.0]).solve(targets)
+    assert result.reached[:30].all()
+    assert not result.reached[30:52].any()
+    assert np.all(result.joints[:52, 1] < 0.0)
+    back = int(np.argmax(result.reached[50:])) + 50
+    assert back == 80  # the 50th target since the last search
+    assert result.reached[back:].all()
+    assert_array_equal(np.flatnonzero(result.jumped), [0, back])
+    assert np.all(result.joints[back:, 1] > 0.0)
 
 
 def test_rows_without_target_ask_nothing() -> None:
