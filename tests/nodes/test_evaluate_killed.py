@@ -112,6 +112,10 @@ class Victim:
         """Return the turns that have ended."""
         return [Turn(*numbers) for numbers in self._numbers(0, 4)]
 
+    def ended_with(self, inputs: int) -> int | None:
+        """Return when the first turn ended that had handed over so many inputs, None before."""
+        return next((turn.ended for turn in self.turns() if turn.inputs >= inputs), None)
+
     def rows(self) -> list[int]:
         """Return the log times of the inputs handed over."""
         return [number for number, in self._numbers(1, 1)]
@@ -197,13 +201,14 @@ def content(bag: Path) -> list[tuple[int, str, bytes]]:
     return found
 
 
-def check_as_left(victim: Victim, stack: Stack, killed_ns: int) -> None:
+def check_as_left(victim: Victim, stack: Stack) -> None:
     """Compare what the killed node left with its account and with what was published."""
     turns, rows = victim.turns(), victim.rows()
     bags = {name: content(victim.session / name) for name in BAGS}
     earlier = [turn for turn in turns if turn.ended <= turns[-1].begun - SECOND]
-    assert len(bags['inputs']) >= earlier[-1].inputs > 0
-    assert len(bags['summary']) >= earlier[-1].summary > 0
+    # A node that was held up since its first second owes nothing yet.
+    assert len(bags['inputs']) >= max((turn.inputs for turn in earlier), default=0)
+    assert len(bags['summary']) >= max((turn.summary for turn in earlier), default=0)
     # What is there is what was handed over, from the first one on, without a hole. The node
     # may have been killed before it had noted the last ones.
     there = [log_ns for log_ns, _, _ in bags['inputs']]
@@ -214,21 +219,20 @@ def check_as_left(victim: Victim, stack: Stack, killed_ns: int) -> None:
         numbers = [message.pose.position.x if kind is PoseStamped else message.position[0]
                    for message in messages]
         assert numbers == sorted(set(numbers)) and numbers[-1] < stack.sent
-    assert victim.process.returncode == -signal.SIGKILL
     assert not (victim.session / 'summary.json').exists()
 
 
 @pytest.mark.parametrize('seed', range(3))
 def test_killed_at_a_random_moment_while_messages_come(
         victim: Victim, stack: Stack, seed: int) -> None:
-    """Later than a second after the first message."""
-    moment_ns = round(random.Random(seed).uniform(1.2, 4.0) * SECOND)
+    """Later than a second after the first message; not tied to the turns of the node's loop."""
+    moment_ns = round(random.Random(seed).uniform(1.2, 2.8) * SECOND)
     wait_until(stack.heard)
-    stack.publish_until(lambda: bool(victim.rows()))
-    first = next(turn.ended for turn in victim.turns() if turn.inputs)
-    stack.publish_until(lambda: victim.turns()[-1].begun > first + moment_ns)
+    stack.publish_until(lambda: victim.ended_with(1) is not None)
+    moment_ns += time.monotonic_ns()
+    stack.publish_until(lambda: time.monotonic_ns() > moment_ns)
     killed_ns = victim.kill()
-    check_as_left(victim, stack, killed_ns)
+    check_as_left(victim, stack)
     newest_ns = content(victim.session / 'inputs')[-1][0]
     assert killed_ns - newest_ns <= SECOND + FLUSH + victim.held_up_ns(killed_ns)
 
@@ -244,14 +248,14 @@ def test_killed_in_the_silence_after_messages(
     """
     wait_until(stack.heard)
     # A first message on its own makes the topics known; its commit starts the interval.
-    stack.publish_until(lambda: bool(victim.rows()))
+    stack.publish_until(lambda: victim.ended_with(1) is not None)
     for _ in range(8):
         stack.publish()
         time.sleep(1.0 / RATE_HZ)
-    wait_until(lambda: len(victim.rows()) == 2 * stack.sent)
-    last = next(turn.ended for turn in victim.turns() if turn.inputs == 2 * stack.sent)
-    moment_ns = last + round(random.Random(seed).uniform(1.05, 2.0) * SECOND)
+    last_ns = wait_until(lambda: victim.ended_with(2 * stack.sent))
+    moment_ns = last_ns + round(random.Random(seed).uniform(1.05, 2.0) * SECOND)
+    # The node must have been awake since, or it could not have flushed.
     wait_until(lambda: victim.turns()[-1].begun > moment_ns)
-    killed_ns = victim.kill()
-    check_as_left(victim, stack, killed_ns)
+    victim.kill()
+    check_as_left(victim, stack)
     assert len(content(victim.session / 'inputs')) == 2 * stack.sent
