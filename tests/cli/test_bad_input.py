@@ -291,6 +291,18 @@ def test_one_malformed_message_is_counted_and_dated(bench, sound):
         assert done.metrics()[name]['status'] == 'ok'
 
 
+def test_a_clock_that_is_ahead_is_a_problem_and_marks_its_numbers(bench, sound):
+    done = bench.run(right('joint_states', lambda event: faulty.stamped(
+        event, faulty.stamp_ns(event) + 30_000_000)))
+    assert done.status == 0
+    done.sentence('right: robot_joints (/right/joint_states): smallest transport age is ',
+                  'below zero', 'not synchronised')
+    rows = [line for line in done.out.splitlines() if line.startswith('latency_s ')]
+    left, mine = rows if done.out.index('Arm left') < done.out.index('Arm right') else rows[::-1]
+    assert '(' not in left and '(' in mine
+    done.check_left_arm(sound)
+
+
 def test_a_session_begins_with_its_first_message_even_if_that_is_none(bench, sound):
     first = min(event.log_ns for event in faulty.healthy())
     topic = next(event.topic for event in faulty.healthy() if event.log_ns == first)
