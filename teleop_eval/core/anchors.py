@@ -25,11 +25,14 @@ class AnchorBook:
     An anchor is read between the two cells around the beginning of its stretch. Of a stretch
     that began before there was data, or in a gap, it cannot be read. Only the very first one is
     then anchored at the first cell that has hand and tool: `from_first_cell` tells so.
+
+    `ends` are the poses at the end of each stretch that ended in the last window.
     """
 
     def __init__(self) -> None:
         self.from_first_cell = False
         self.unknown = 0
+        self.ends: dict[int, Anchor] = {}
         self._last: tuple[int, Anchor | None] | None = None
         self._seen = False
         self.interrupt()
@@ -66,6 +69,9 @@ class AnchorBook:
                 self._last, self._seen = (stretch, anchor), True
             if (known := self._last[1]) is not None:
                 found[stretch] = known
+        self.ends = {
+            stretch: end for stretch, time_ns in states.ended_ns.items()
+            if (end := self._at(span, time_ns, tracks)) is not None}
         self._before = {name: Track(track.values[-1:], track.valid[-1:])
                         for name, track in tracks.items() if name in _SOURCES.values()}
         self._end_ns = span.end_ns
@@ -74,15 +80,16 @@ class AnchorBook:
     def _read(self, span: Span, states: CellStates, stretch: int,
               tracks: Mapping[str, Track]) -> Anchor | None:
         began_ns = states.began_ns.get(stretch)
+        anchor = None if began_ns is None else self._at(span, began_ns, tracks)
+        if anchor is None and not self._seen:
+            return self._first(states.stretch == stretch, tracks)
+        return anchor
+
+    def _at(self, span: Span, time_ns: int, tracks: Mapping[str, Track]) -> Anchor | None:
+        """Read at a time, None where there is no cell on both sides of it."""
+        place = (time_ns - span.start_ns) / span.period_ns - 0.5
         follows = self._end_ns == span.start_ns
-        # Twice the place of the beginning among the cells' centres is a whole number of ns.
-        first_ns = span.start_ns + span.period_ns / 2.0
-        place = None if began_ns is None else (began_ns - first_ns) / span.period_ns
-        if place is not None and place >= (-1.0 if follows else 0.0):
-            return self._between(place, tracks)
-        if self._seen:
-            return None
-        return self._first(states.stretch == stretch, tracks)
+        return self._between(place, tracks) if place >= (-1.0 if follows else 0.0) else None
 
     def _between(self, place: float, tracks: Mapping[str, Track]) -> Anchor | None:
         """Read at a place among the cells' centres, -1 being the last one before the window."""

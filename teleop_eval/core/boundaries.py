@@ -23,7 +23,8 @@ class CellStates:
     arm's mapping labels, -1 for none. `engagements`: labels under which one began; engaged
     at the very start counts as one. `stretch`: number of the engagement or mapping a cell lies
     in, which a gap of the data does not change, -1 outside of any; `began_ns`: when each of
-    them began, None if it was so from the start.
+    them began, None if it was so from the start; `ended_ns`: when those ended that ended in this
+    window.
     """
 
     engaged: np.ndarray
@@ -33,6 +34,7 @@ class CellStates:
     engagements: tuple[int, ...]
     stretch: np.ndarray
     began_ns: dict[int, int | None]
+    ended_ns: dict[int, int]
 
 
 class Boundaries:
@@ -92,7 +94,8 @@ class Boundaries:
         stretch = np.where(engaged & (label >= 0), self._stretch_at(starts), -1)
         return CellStates(engaged, usable, run, label,
                           self._labelled(begun, int(known[0]) if len(known) else -1),
-                          stretch, self._began(stretch, starts))
+                          stretch, self._began(stretch, starts),
+                          self._ended(self._changes(span.start_ns, span.end_ns)))
 
     def _stretch_at(self, times_ns: np.ndarray) -> np.ndarray:
         total = np.zeros(len(times_ns), dtype=np.int64)
@@ -100,6 +103,13 @@ class Boundaries:
             if state is not None:
                 total += state.changed_before(times_ns)
         return total
+
+    def _ended(self, changes: list[int]) -> dict[int, int]:
+        """Return when each stretch ended that one of the changes ended."""
+        before = np.array(changes, dtype=np.int64) - 1
+        lasted = self._engaged_at(before) & (self._label_at(before) >= 0)
+        return {int(number): time_ns for number, time_ns, one in zip(
+            self._stretch_at(before), changes, lasted, strict=True) if one}
 
     def _began(self, stretch: np.ndarray, starts: np.ndarray) -> dict[int, int | None]:
         """Return when each stretch of the cells (m,) began."""

@@ -64,15 +64,19 @@ class CandidateRun:
             one.model.take_tool_rotation(hand_to_tool)
 
     def add(self, states: CellStates, tracks: dict[str, Track], robot_joints: np.ndarray,
-            anchors: dict[int, Anchor]) -> None:
-        """Add one window; `robot_joints` (m, n) of the chain carry a moving shoulder."""
+            anchors: dict[int, Anchor], ends: dict[int, Anchor]) -> None:
+        """
+        Add one window; `robot_joints` (m, n) of the chain carry a moving shoulder.
+
+        `anchors` and `ends` are the poses at beginning and end of its stretches.
+        """
         cells = operator_cells(
             tracks, self._arm.setup.operator_joint_names, robot_joints,
             stretch=states.stretch, anchors=anchors, period_s=self._period_s)
         operator = tracks.get('u_o')
         for one in self._candidates.values():
             if one.model.needs in tracks:
-                one.add(cells, states, None if operator is None else operator.values)
+                one.add(cells, states, ends, None if operator is None else operator.values)
 
     def summary(self, reachable: ReachableSet | None) -> dict[str, Any]:
         """Return the predictions by mapping, in plain types."""
@@ -107,9 +111,9 @@ class _Candidate:
         if self.accumulator is not None:
             self.accumulator.restart()
 
-    def add(self, cells: OperatorCells, states: CellStates,
+    def add(self, cells: OperatorCells, states: CellStates, ends: dict[int, Anchor],
             operator: np.ndarray | None) -> None:
-        ideal = self._ideal(cells)
+        ideal = self._ideal(cells, ends)
         if isinstance(ideal, str):
             self.why_not = ideal
             self.interrupt()
@@ -136,25 +140,40 @@ class _Candidate:
             with_orientation=turns and not self.model.estimates_tool_rotation,
             gives_velocity=self.model.gives == VELOCITY)
 
-    def _ideal(self, cells: OperatorCells) -> Ideal | str:
+    def _ideal(self, cells: OperatorCells, ends: dict[int, Anchor]) -> Ideal | str:
         """Return the ideal command, stretch after stretch for a mapping that is anchored."""
         if not self.model.anchored or cells.stretch is None:
             return checked_ideal(self.model, cells)
-        stretches = [one for one in dict.fromkeys(cells.stretch.tolist()) if one >= 0]
-        if not stretches:
-            return checked_ideal(self.model, cells)
+        here = {one for one in cells.stretch.tolist() if one >= 0}
         joined: Ideal | None = None
-        for stretch in stretches:
+        for stretch in sorted(here | ends.keys()):
             self._anchor(stretch, cells.anchors)
+            if stretch not in here:
+                self._end(stretch, ends)
+                continue
             part = checked_ideal(self.model, dataclasses.replace(
                 cells, stretch=np.where(cells.stretch == stretch, stretch, -1),
                 anchors=self._anchors))
             if isinstance(part, str):
                 return part
             self._remember(part)
+            self._end(stretch, ends)
             joined = part if joined is None else _joined(joined, part, cells.stretch == stretch)
-        assert joined is not None  # there is at least one stretch
-        return joined
+        return checked_ideal(self.model, cells) if joined is None else joined
+
+    def _end(self, stretch: int, ends: dict[int, Anchor]) -> None:
+        """Predict the pose at the very end of a stretch, which lies between two cells."""
+        end, robot = ends.get(stretch), self._arm.robot
+        if end is None or end.hand_m is None or stretch not in self._anchors or robot is None or (
+                self.model.gives == VELOCITY):
+            return
+        turn = None if end.hand_xyzw is None else end.hand_xyzw[None]
+        part = checked_ideal(self.model, OperatorCells(
+            hand_m=end.hand_m[None], hand_xyzw=turn, joints=None, joint_names=(),
+            robot_joints=np.zeros((1, len(robot.chain.joint_names))), period_s=self._period_s,
+            stretch=np.array([stretch]), anchors=self._anchors))
+        if not isinstance(part, str):
+            self._remember(part)
 
     def _anchor(self, stretch: int, measured: dict[int, Anchor] | Any) -> None:
         """Anchor a new stretch: the hand where it was, the robot where the prediction is."""

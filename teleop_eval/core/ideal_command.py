@@ -74,7 +74,7 @@ class IdealCommand:
                     shoulder + arm.robot.reach.length_m * u_r.values, u_r.valid)}
             anchors = self.anchors.of_window(span, states, tracks)
         if self.candidates is not None:
-            self.candidates.add(states, tracks, robot_joints, anchors)
+            self.candidates.add(states, tracks, robot_joints, anchors, self.anchors.ends)
         for index in np.unique(states.label[states.label >= 0]):
             label = arm.boundaries.labels[index]
             model = arm.setup.models.get(label)

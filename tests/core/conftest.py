@@ -27,6 +27,7 @@ def _load(name):
 
 _load('synthetic_session')
 _load('mapping_cells')
+_load('synthetic_chain')
 
 
 @pytest.fixture(scope='session')
