@@ -69,7 +69,7 @@ def _latency_error(latency: Metric) -> float:
     """Return the standard error of the median over windows, 0 where nothing is known."""
     if latency.ci95 is not None:
         return (latency.ci95[1] - latency.ci95[0]) / (2.0 * _T95)
-    single = max(_number(latency, 'standard_error_s'), _number(latency, 'spread_s'))
+    single = max(_number(latency, 'window_standard_error_s'), _number(latency, 'spread_s'))
     return _MEDIAN * single / math.sqrt(max(latency.n, 1))
 
 

@@ -4,10 +4,12 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Mapping
 
 from teleop_eval.core import frequency_metrics
 from teleop_eval.core.accumulator import MappingAccumulator
+from teleop_eval.core.delay_opinion import second_opinion
 from teleop_eval.core.metric import NOT_CONFIGURED, Metric, missing
 
 # Ends of the metrics' names by the latency that has the same two sides.
@@ -20,7 +22,8 @@ def response_metrics(accumulator: MappingAccumulator,
     Return bandwidth, phase delay and coherent band of both responses.
 
     `latencies` are the run's metrics; where one is not configured, its response is not
-    either, for the same reason.
+    either, for the same reason. Where phase and correlation tell different delays, the phase
+    delay carries the sentence on what that means.
     """
     found: dict[str, Metric] = {}
     for name, response in accumulator.responses.items():
@@ -32,4 +35,7 @@ def response_metrics(accumulator: MappingAccumulator,
                 f'coherent_up_to{end}_hz': missing(NOT_CONFIGURED, 'Hz', latency.reason)}
             continue
         found |= frequency_metrics.metrics(response, of=end)
+        if opinion := second_opinion(found[f'phase_delay{end}_s'], latency):
+            found[f'phase_delay{end}_s'] = dataclasses.replace(
+                found[f'phase_delay{end}_s'], reason=opinion)
     return found

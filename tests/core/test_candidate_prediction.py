@@ -101,7 +101,7 @@ def test_the_predicted_discrepancy_is_that_of_the_run(both):
     rms, largest = errors(motion)
     found = predicted['metrics']
     assert found['predicted_discrepancy_rms_norm']['value'] == pytest.approx(
-        float(np.sqrt(np.mean(driven ** 2))), abs=rms + 5e-4)
+        float(np.sqrt(np.mean(driven ** 2))), abs=rms + 1e-3)
     assert found['predicted_discrepancy_max_norm']['value'] == pytest.approx(
         float(driven.max()), abs=largest + 2e-3)
     assert found['predicted_discrepancy_rms_norm']['details']['predicted'] is True
