@@ -18,6 +18,7 @@ WORDS = {
     'residual': 'residual',
 }
 _UNITS = {'arm lengths': 'arm lengths', 'arm lengths/s': 'arm lengths/s'}
+_JOINTS = "the mapping's own geometry (joint offsets, or links of unlike lengths)"
 # A static part above this share of the power is called an offset.
 _OFFSET_SHARE = 0.5
 
@@ -64,7 +65,7 @@ def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float |
 
 
 def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm', *,
-               clutched: bool = False) -> str:
+               clutched: bool = False, between_joints: bool = False) -> str:
     """
     Return one sentence on a mapping: what to fix first, and how sure that is.
 
@@ -77,6 +78,8 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
     clutched
         Whether the mapping is anchored anew at each engagement. Hand and tool are then meant
         to be apart, and the mapping's own term holds that offset.
+    between_joints
+        Whether the mapping sets joints by joints: it has no centre or scale in space.
 
     """
     total = metrics.get(f'discrepancy_rms{suffix}')
@@ -101,7 +104,9 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
     if meant and (offset := metrics.get(f'budget_mapping_rms{suffix}')) and offset.value:
         aside = (f'; the {offset.value:.3f} of the mapping hold the offset between hand and '
                  'tool that clutching leaves, which is meant')
-    return (f'{label}: fix first {_what(name, metrics, suffix)} ({metric.number:.3f} '
+    what = (_JOINTS if name == 'mapping' and between_joints
+            else _what(name, metrics, suffix))
+    return (f'{label}: fix first {what} ({metric.number:.3f} '
             f'{metric.unit} RMS{part}); {_how_sure(name, metrics, suffix, but=meant)}{aside}.')
 
 

@@ -12,6 +12,7 @@ from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
 from teleop_eval.core.budget_summary import budget_metrics
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
+from teleop_eval.core.mappings.base import OPERATOR_JOINTS
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
@@ -38,7 +39,7 @@ def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
             mappings[label] = {
                 'condition': CONDITION,
                 'advice': what_first(label, metrics, measured.space(index).suffix,
-                                     clutched=_anchored(arm, label)),
+                                     **_kind(arm, label)),
                 'metrics': {name: metrics[name].to_dict() for name in metrics},
             }
     base = arm.chosen
@@ -66,9 +67,11 @@ def _candidates(measured: ArmMeasurement | None,
     return {} if run is None else {'candidates': run.summary(reachable)}
 
 
-def _anchored(arm: ArmEvaluator, label: str) -> bool:
+def _kind(arm: ArmEvaluator, label: str) -> dict[str, bool]:
+    """Return what the advice must know of a mapping's kind."""
     model = arm.setup.models.get(label)
-    return model is not None and model.anchored
+    return {} if model is None else {
+        'clutched': model.anchored, 'between_joints': model.needs == OPERATOR_JOINTS}
 
 
 def _receive_dependent(arm: ArmEvaluator, mappings: dict[str, Any]) -> list[str]:

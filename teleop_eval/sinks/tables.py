@@ -55,6 +55,8 @@ IN_FILE_ONLY = re.compile(
 # Within a family: plain before compensated, robot before operator, then by the first of these
 # words in the name, arm lengths before metres.
 WORDS = ('rms', 'p50', 'p95', 'max', 'p5', 'min', 'static', 'varying')
+# A frequency response needs long runs: rows without any number would crowd the short ones.
+SENTENCE_IF_NOWHERE = ('bandwidth_', 'phase_delay_', 'coherent_')
 STATUS_WORDS = {
     'unobservable': 'unobservable',
     'insufficient': 'insufficient',
@@ -183,22 +185,28 @@ def _why_nothing(of_arm: Mapping[str, Any]) -> str:
 
 
 def _nowhere(metrics: Any, name: str) -> bool:
-    """Tell whether a metric is not configured under any mapping: no row for it."""
-    return all(as_mapping(of.get(name)).get('status', 'not_configured') == 'not_configured'
-               for of in metrics)
+    """Tell whether a metric says nothing under any mapping: no row for it, but a sentence."""
+    found = {as_mapping(of.get(name)).get('status', 'not_configured') for of in metrics}
+    return 'ok' not in found if name.startswith(SENTENCE_IF_NOWHERE) else (
+        found == {'not_configured'})
 
 
 def _not_configured(mappings: Mapping[str, Any]) -> list[RenderableType]:
     """Return a sentence for each reason why metrics are not configured anywhere."""
     metrics = [as_mapping(as_mapping(of).get('metrics')) for of in mappings.values()]
-    by_reason: dict[str, list[str]] = {}
+    by_reason: dict[tuple[str, str], list[str]] = {}
     for name in _names(metrics):
         found = [as_mapping(of[name]) for of in metrics if name in of]
         if _nowhere(metrics, name) and found:
-            reason = clean(str(found[0].get('reason') or 'no reason given'), LONGEST_SENTENCE)
-            by_reason.setdefault(reason, []).append(clean(name))
-    return [listed('-', f'not configured: {_families(names)}: {reason}')
-            for reason, names in by_reason.items()]
+            for one in found:
+                status = str(one.get('status') or 'unobservable')
+                reason = clean(str(one.get('reason') or 'no reason given'), LONGEST_SENTENCE)
+                names = by_reason.setdefault(
+                    (STATUS_WORDS.get(status, clean(status)), reason), [])
+                if name not in names:
+                    names.append(clean(name))
+    return [listed('-', f'{words}: {_families(names)}: {reason}')
+            for (words, reason), names in by_reason.items()]
 
 
 def _families(names: Sequence[str]) -> str:

@@ -7,12 +7,20 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 
+from diagnostic_msgs.msg import DiagnosticArray
 from std_msgs.msg import Float64
 
 from teleop_eval.teardown_cell.cell_node import LATCHED, SAMPLED, CellNode, take
-from teleop_eval.teardown_cell.plan import ARM_NAME, LATENESS_TOPIC, NAMESPACE, Plan
+from teleop_eval.teardown_cell.plan import (
+    ARM_NAME,
+    DIAGNOSTICS_TOPIC,
+    LATENESS_TOPIC,
+    NAMESPACE,
+    Plan,
+)
 
 LATENCY, TRACKING = 'latency_s', 'tracking_error_rms_norm'
+_MOSTLY = '; mostly '
 
 
 def phase(plan: Plan, t: float) -> str:
@@ -50,6 +58,11 @@ def live_line(plan: Plan, t: float, values: Mapping[str, float]) -> str:
     return f'{clock}  {plan.mapping(t):<6}  {phase(plan, t)};  ' + ',  '.join(shown)
 
 
+def largest_part(message: str) -> str:
+    """Return what a tracking line of /diagnostics calls the largest part, '' if nothing."""
+    return message.partition(_MOSTLY)[2]
+
+
 class LiveValues:
     """The evaluator's metrics and the lateness of commands as they are published."""
 
@@ -61,6 +74,16 @@ class LiveValues:
             for name in (LATENCY, TRACKING)}
         self._lateness = cell.subscribe(Float64, LATENESS_TOPIC, LATCHED)
         self.lateness_s = 0.0
+        self._diagnostics = cell.subscribe(DiagnosticArray, DIAGNOSTICS_TOPIC, SAMPLED)
+        self._part = self._shown = ''
+
+    def news(self) -> str:
+        """Return the largest part of the tracking error when another one has become it."""
+        name = self._part.partition(':')[0]
+        if not name or name == self._shown:
+            return ''
+        self._shown = name
+        return f'    largest part now: {self._part}'
 
     def update(self) -> None:
         """Take what has been published."""
@@ -69,3 +92,7 @@ class LiveValues:
                 self.values[name] = float(message.data)
         for message in take(self._lateness):
             self.lateness_s = float(message.data)
+        for message in take(self._diagnostics):
+            for status in message.status:
+                if status.name.endswith(f'{ARM_NAME}: tracking'):
+                    self._part = largest_part(status.message)

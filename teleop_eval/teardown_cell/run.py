@@ -231,6 +231,8 @@ def _watch(children: Children, cell: CellNode, plan: Plan, live: LiveValues,
         if over or next_line <= t < plan.seconds:
             next_line += LINE_EVERY_S
             _say(live_line(plan, t, live.values))
+            if news := live.news():
+                _say(news)
         if over:
             return True
         time.sleep(0.05)
