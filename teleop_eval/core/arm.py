@@ -166,7 +166,8 @@ class ArmEvaluator:
             if self.next_check_ns == NEVER_NS:
                 self._segment.plan_next()
                 self.next_check_ns = self._segment.next_check_ns
-            if stream.last_ns is not None and stream.last_ns >= self._segment.end_ns:
+            if receive_ns > self.next_check_ns or (
+                    stream.last_ns is not None and stream.last_ns >= self._segment.end_ns):
                 self._close_ready(receive_ns)
 
     def _step_back(self, intake: Intake, receive_ns: int, back_ns: int) -> None:

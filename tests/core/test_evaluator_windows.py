@@ -9,7 +9,7 @@ import json
 import numpy as np
 import pytest
 import synthetic_session as syn
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 NAMES = ('a', 'b')
@@ -122,6 +122,10 @@ def feed_of(made):
 
 @settings(max_examples=60, deadline=None)
 @given(st.integers(0, 10 ** 9), st.sampled_from([0.0, 0.1, 0.5, 1.5]), st.booleans())
+# The first sample after a silence comes when its window is overdue already.
+@example(1468, 0.0, False)
+# A sample comes for a window that was left out.
+@example(1468, 0.5, False)
 def test_windows_close_exactly_by_the_rule(seed, lateness_s, pause):
     made = arrivals(seed, lateness_s, pause=pause)
     target = syn.evaluator(
