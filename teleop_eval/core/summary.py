@@ -12,7 +12,6 @@ from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
 from teleop_eval.core.budget_summary import budget_metrics
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
-from teleop_eval.core.mappings.base import OPERATOR_JOINTS
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
