@@ -96,18 +96,18 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
     share = metrics.get(f'budget_{name}_share')
     part = ''
     if share is not None and share.value is not None:
-        part = f', {share.value:.0%} of the discrepancy'
+        part = f', {100.0 * share.value:.0f} % of the discrepancy'
         if share.value < 0.0:
             other = WORDS.get(str(share.details.get('partly_cancels', '')), 'other terms')
-            part = f', which partly cancels {other}'
+            part = f', and partly cancels {other}'
     aside = ''
     if meant and (offset := metrics.get(f'budget_mapping_rms{suffix}')) and offset.value:
         aside = (f'; the {offset.value:.3f} of the mapping hold the offset between hand and '
                  'tool that clutching leaves, which is meant')
     what = (_JOINTS if name == 'mapping' and between_joints
             else _what(name, metrics, suffix))
-    return (f'{label}: fix first {what} ({metric.number:.3f} '
-            f'{metric.unit} RMS{part}); {_how_sure(name, metrics, suffix, but=meant)}{aside}.')
+    return (f'{label}: fix first {what}, which is {metric.number:.3f} '
+            f'{metric.unit} RMS{part}; {_how_sure(name, metrics, suffix, but=meant)}{aside}.')
 
 
 def _what(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
@@ -146,8 +146,8 @@ def _how_sure(name: str, metrics: Mapping[str, Metric], suffix: str, *, but: str
     second = max(others, key=lambda other: others[other].number)
     interval = others[second].ci95
     if first.ci95 is None or interval is None:
-        return (f'not sure: {first.n} windows are too few for an interval, and {WORDS[second]} '
-                f'has {others[second].number:.3f}')
+        return (f'not sure: {first.n} windows are too few for an interval; the next, '
+                f'{WORDS[second]}, is {others[second].number:.3f}')
     low, high = first.ci95
     if low > interval[1]:
         return (f'sure: its 95 % interval {low:.3f} to {high:.3f} lies above that of the next, '

@@ -144,7 +144,9 @@ class ArmStatus:
         if not largest:
             return ''
         cancels = measured.accumulators[measured.label].budget.cancels(largest)
-        return 'mostly ' + plain_words(
+        # The mapping's own part is none of the tracking error that the line begins with.
+        ends = 'hand and tool' if space is POSITION else 'input and tool'
+        return (f'between {ends} ' if largest == 'mapping' else '') + 'mostly ' + plain_words(
             metrics, delays_s=measured.delays_s, cancels=cancels, suffix=space.suffix,
             has_command=measured.latency.has(space.command))
 

@@ -33,6 +33,10 @@ ROWS = {
     'budget_residual': 'residual',
 }
 PARTS = ('rms', 'static', 'varying')
+LEGEND = ('static: length of the mean; varying: RMS about it; the shares of all parts add up '
+          'to 100 %, their RMS do not')
+# A share nearer to zero than this is not worth a word on what it cancels.
+LEAST_CANCELLED = 0.005
 
 
 def budget_tables(mappings: Mapping[str, Any]) -> list[RenderableType]:
@@ -43,13 +47,13 @@ def budget_tables(mappings: Mapping[str, Any]) -> list[RenderableType]:
         metrics = as_mapping(as_mapping(of_mapping).get('metrics'))
         if any(as_mapping(metrics.get(f'{start}_rms{end}')).get('status') not in (
                 None, 'not_configured') for start in ROWS for end in ('_norm', '_norm_s')):
-            parts.append(_table(clean(str(label)), metrics, remarks))
+            parts += [Text(''), _table(clean(str(label)), metrics, remarks)]
     if not parts:
         return []
     title = Text('\nError budget', style='bold')
-    title.append('  tool minus hand, in the axes of the robot: whose part is how large',
+    title.append('  tool minus hand, in arm lengths of each: which part causes how much',
                  style='not bold')
-    return [title, *parts, *remarks.lines()]
+    return [title, *parts[1:], Text(LEGEND, style='dim'), *remarks.lines()]
 
 
 def _table(label: str, metrics: Mapping[str, Any], remarks: Remarks) -> Table:
@@ -88,16 +92,16 @@ def _cell(metric: Any, remarks: Remarks, *, short: bool = False, percent: bool =
         low, high = (_shown(float(one), percent=percent) for one in interval)
         text.append(f'\n{low}..{high}', style='dim')
     other = as_mapping(metric.get('details')).get('partly_cancels')
-    if percent and other and value < -0.0005:
+    if percent and other and value < -LEAST_CANCELLED:
         text.append(f'\npartly cancels {clean(str(other)).replace("_", " ")}', style='dim')
     return text
 
 
 def _shown(value: float, *, percent: bool) -> str:
     if percent:
-        return f'{100.0 * value:.1f} %'
+        return f'{round(100.0 * value, 1) + 0.0:.1f} %'  # never -0.0
     # A ten-thousandth of an arm length is less than a tenth of a millimetre.
-    return number(value) if abs(value) >= 5e-5 else '0.0000'
+    return f'{value:.4f}' if abs(value) < 10.0 else number(value)
 
 
 def advice(summary: Mapping[str, Any]) -> list[RenderableType]:

@@ -36,7 +36,13 @@ def clean(text: str, longest: int = LONGEST_LABEL) -> str:
 
 
 def number(value: float) -> str:
-    """Return up to four significant digits, without an exponent where that stays readable."""
+    """
+    Return up to four significant digits, without an exponent where that stays readable.
+
+    What only rounding can have left is 0.
+    """
+    if abs(value) < 1e-12:
+        return '0'
     if abs(value) < 1e6 and value == int(value):
         return str(int(value))
     size = math.floor(math.log10(abs(value)))

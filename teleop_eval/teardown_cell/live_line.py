@@ -20,7 +20,7 @@ from teleop_eval.teardown_cell.plan import (
 )
 
 LATENCY, TRACKING = 'latency_s', 'tracking_error_rms_norm'
-_MOSTLY = '; mostly '
+_MOSTLY = 'mostly '
 
 
 def phase(plan: Plan, t: float) -> str:
@@ -78,12 +78,12 @@ class LiveValues:
         self._part = self._shown = ''
 
     def news(self) -> str:
-        """Return the largest part of the tracking error when another one has become it."""
+        """Return the largest part of the error budget when another one has become it."""
         name = self._part.partition(':')[0]
         if not name or name == self._shown:
             return ''
         self._shown = name
-        return f'    largest part now: {self._part}'
+        return f'    between hand and tool, largest part now: {self._part}'
 
     def update(self) -> None:
         """Take what has been published."""

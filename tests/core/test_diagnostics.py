@@ -48,6 +48,22 @@ def test_running_well_is_numbers_and_nothing_else():
     assert re.fullmatch(r'\w+ is \d+\.\d% of its span from a limit', lines['workspace'].message)
 
 
+def test_the_mapping_s_part_is_said_to_be_between_hand_and_tool():
+    """It is none of the tracking error before it in the line, and can be larger than that."""
+    made = syn.session(30.0, motion=syn.wander(), delay=0.1, follow=lambda u: 1.5 * u)
+    line = asked(fed(made, mappings__direct__scale=1.5), 30.0)['tracking']
+    found = re.fullmatch(r'tracking error (0\.\d{3}) arm lengths RMS, 0\.\d{3} with the delay '
+                         r'taken out; between hand and tool mostly mapping: (0\.\d{3}) arm '
+                         r'lengths', line.message)
+    assert found, line.message
+    # Half of the hand's distance from the shoulder, which is about 0.48 arm lengths.
+    assert float(found[2]) == pytest.approx(0.24, abs=0.02)
+    assert float(found[1]) < 0.5 * float(found[2])
+    assert float(line.values['mapping RMS (arm lengths)']) == pytest.approx(
+        float(found[2]), abs=6e-4)
+    assert set(line.values) >= {'response delay RMS (arm lengths)', 'residual RMS (arm lengths)'}
+
+
 @pytest.mark.parametrize(('settings', 'limits'), [
     ({}, {'tracking': 3.5, 'latency': 3.5, 'workspace': 3.5}),
     ({'time.window_s': 1.0, 'latency.hop_s': 3.0, 'time.lateness_s': 0.25,
