@@ -33,8 +33,7 @@ ROWS = {
     'budget_residual': 'residual',
 }
 PARTS = ('rms', 'static', 'varying')
-LEGEND = ('static: length of the mean; varying: RMS about it; the shares of all parts add up '
-          'to 100 %, their RMS do not')
+LEGEND = 'static: mean; varying: RMS about it; shares of all parts add up, RMS do not'
 # A share nearer to zero than this is not worth a word on what it cancels.
 LEAST_CANCELLED = 0.005
 
@@ -51,7 +50,7 @@ def budget_tables(mappings: Mapping[str, Any]) -> list[RenderableType]:
     if not parts:
         return []
     title = Text('\nError budget', style='bold')
-    title.append('  tool minus hand, in arm lengths of each: which part causes how much',
+    title.append('  tool minus hand: which part of the chain causes how much',
                  style='not bold')
     return [title, *parts[1:], Text(LEGEND, style='dim'), *remarks.lines()]
 
@@ -59,17 +58,18 @@ def budget_tables(mappings: Mapping[str, Any]) -> list[RenderableType]:
 def _table(label: str, metrics: Mapping[str, Any], remarks: Remarks) -> Table:
     rate = 'budget_residual_rms_norm_s' in metrics
     end, unit = ('_norm_s', 'L/s') if rate else ('_norm', 'L')
-    table = Table(box=SIMPLE_HEAD, show_edge=False, pad_edge=False, padding=(0, 1))
+    table = Table(box=SIMPLE_HEAD, show_edge=False, pad_edge=False, padding=0)
     table.add_column(Text(label, overflow='fold'), width=18, overflow='fold')
-    for name, width in ((f'RMS {unit}', 17), (f'static {unit}', 9), (f'varying {unit}', 10),
-                        ('share', 19)):
+    for name, width in ((f'RMS {unit}', 18), (f'static {unit}', 10), (f'varying {unit}', 11),
+                        ('share', 18)):
         table.add_column(name, justify='right', width=width, overflow='fold')
     for start, title in ROWS.items():
         row: list[RenderableType] = [Text(title)]
         row += [_cell(metrics.get(f'{start}_{part}{end}'), remarks, short=part != 'rms')
                 for part in PARTS]
+        there = as_mapping(metrics.get(f'{start}_rms{end}')).get('status') == 'ok'
         row.append(Text('') if start == 'discrepancy' else
-                   _cell(metrics.get(f'{start}_share'), remarks, percent=True))
+                   _cell(metrics.get(f'{start}_share'), remarks, short=not there, percent=True))
         table.add_row(*row)
     return table
 
@@ -82,15 +82,14 @@ def _cell(metric: Any, remarks: Remarks, *, short: bool = False, percent: bool =
         if short or not reason:
             return Text('-', style='yellow')
         mark = remarks.mark(f'{status}: {clean(reason, LONGEST_SENTENCE)}')
-        return Text(f'{status if percent or len(status) < 13 else "none"} {mark}',
-                    style='yellow')
+        return Text(f'{status} {mark}', style='yellow')
     text = Text(_shown(value, percent=percent))
     if reason and not short:
         text.append(f' {remarks.mark(clean(reason, LONGEST_SENTENCE))}', style='yellow')
     interval = metric.get('ci95')
     if is_pair(interval) and not short:
         low, high = (_shown(float(one), percent=percent) for one in interval)
-        text.append(f'\n{low}..{high}', style='dim')
+        text.append(f'\n{low.removesuffix(" %")}..{high}', style='dim')
     other = as_mapping(metric.get('details')).get('partly_cancels')
     if percent and other and value < -LEAST_CANCELLED:
         text.append(f'\npartly cancels {clean(str(other)).replace("_", " ")}', style='dim')

@@ -144,10 +144,13 @@ def _arm(arm: str, of_arm: Mapping[str, Any],
     abreast = ABREAST_WITH_TRUTH if true_mappings else ABREAST
     for first in range(0, len(labels), abreast):
         shown = {label: as_mapping(mappings[label]) for label in labels[first:first + abreast]}
-        parts.append(_table(shown, true_mappings, remarks))
+        parts += [Text('')] * (first > 0) + [_table(shown, true_mappings, remarks)]
     parts.append(Text('L = arm lengths; further metrics and single joints: metrics.csv',
                       style='dim'))
-    return [*parts, *remarks.lines(), *_not_configured(mappings), *budget_tables(mappings),
+    budget = budget_tables(mappings)
+    # What the budget's own tables say is not said twice.
+    elsewhere = ('budget_', 'discrepancy_') if budget else ()
+    return [*parts, *remarks.lines(), *_not_configured(mappings, but=elsewhere), *budget,
             *_candidates(of_arm)]
 
 
@@ -165,7 +168,7 @@ def _candidates(of_arm: Mapping[str, Any]) -> list[RenderableType]:
     remarks, labels = Remarks(), list(known)
     for start in range(0, len(labels), CANDIDATES_ABREAST):
         shown = {label: known[label] for label in labels[start:start + CANDIDATES_ABREAST]}
-        parts.append(_table(shown, {}, remarks))
+        parts += [Text('')] * (start > 0) + [_table(shown, {}, remarks)]
     parts += remarks.lines()
     parts += [listed('-', f'{clean(label)}: not predicted: '
                      + clean(str(one['why_not']), LONGEST_SENTENCE))
@@ -191,13 +194,14 @@ def _nowhere(metrics: Any, name: str) -> bool:
         found == {'not_configured'})
 
 
-def _not_configured(mappings: Mapping[str, Any]) -> list[RenderableType]:
+def _not_configured(mappings: Mapping[str, Any], *,
+                    but: tuple[str, ...]) -> list[RenderableType]:
     """Return a sentence for each reason why metrics are not configured anywhere."""
     metrics = [as_mapping(as_mapping(of).get('metrics')) for of in mappings.values()]
     by_reason: dict[tuple[str, str], list[str]] = {}
     for name in _names(metrics):
         found = [as_mapping(of[name]) for of in metrics if name in of]
-        if _nowhere(metrics, name) and found:
+        if _nowhere(metrics, name) and found and not name.startswith(but):
             for one in found:
                 status = str(one.get('status') or 'unobservable')
                 reason = clean(str(one.get('reason') or 'no reason given'), LONGEST_SENTENCE)
