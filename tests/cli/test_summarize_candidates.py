@@ -66,7 +66,9 @@ def test_every_configured_mapping_is_predicted(summarize):
     assert list(arm['mappings']) == ['direct']
     found = arm['candidates']
     assert set(found) == {'direct', 'bent', 'far', 'vendor'}
+    assert list(arm).index('candidates') == list(arm).index('mappings') + 1
     for of in found.values():
+        assert list(of) == ['prediction', 'why_not', 'metrics']
         assert 'without the adaptation of the operator' in of['prediction']
         assert all(metric['details']['predicted'] for metric in of['metrics'].values())
     assert {label: bool(of['why_not']) for label, of in found.items()} == {

@@ -45,6 +45,22 @@ def test_metrics_table_read_by_pandas(tmp_path):
     assert hull.status == 'insufficient'
 
 
+def test_predictions_follow_the_measured_rows_and_are_marked(tmp_path):
+    value = {'value': 0.25, 'unit': '1', 'ci95': [0.125, 0.5], 'n': 20, 'samples': 800,
+             'status': 'ok', 'reason': ''}
+    summary = {'arms': {'right': {
+        'candidates': {label: {'prediction': 'x', 'why_not': '', 'metrics': of} for label, of in (
+            ('reach', {'not_reached_share': value, 'limit_violation_share': value}),
+            ('=cmd|x', {'not_reached_share': value}), ('vendor', {}))},
+        'mappings': {'reach': {'metrics': {'latency_s': Metric(0.1, 's').to_dict()}}}}}}
+    csv_tables.write_metrics(tmp_path / 'metrics.csv', summary)
+    table = pandas.read_csv(tmp_path / 'metrics.csv')
+    assert list(zip(table.mapping, table.metric, strict=True)) == [
+        ('reach', 'latency_s'), ("'=cmd|x (predicted)", 'not_reached_share'),
+        ('reach (predicted)', 'limit_violation_share'), ('reach (predicted)', 'not_reached_share')]
+    assert table.iloc[-1].tolist()[3:9] == [0.25, '1', 0.125, 0.5, 20, 800]
+
+
 @pytest.mark.parametrize('text', ['=1+1', '+1', '-1', '@SUM(A1)', '\t=1', '\r=1', ' =1', '\x00=1'])
 def test_text_that_a_spreadsheet_would_run_is_marked(text):
     """The signs are those of OWASP's page on CSV injection (common practice)."""

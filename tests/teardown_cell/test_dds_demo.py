@@ -133,6 +133,8 @@ def _run_once(domain: int, out: Path) -> bool:
     assert ('too busy' in output) == (truth['largest_command_lateness_s'] > 0.4)
     if 'too busy' in output:
         return False
+    assert 'largest part now: mapping: 0.' in output  # arm and operator have unlike links
+    assert output.count('fix first') == 2
     _check_numbers(summary, truth)
     return True
 
