@@ -86,8 +86,8 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
     meant = 'mapping' if clutched and suffix == '_norm' else ''
     name = largest_term(metrics, suffix, but=meant)
     if not name:
-        reason = next((metric.reason for key, metric in metrics.items()
-                       if key.startswith('budget_residual_rms')), 'nothing was measured')
+        residual = metrics.get(f'budget_residual_rms{suffix}')
+        reason = 'nothing was measured' if residual is None else residual.reason
         return f'{label}: cannot say what to fix first: {reason}.'
     if total is not None and total.value is not None and total.value < LEAST_DISCREPANCY:
         return (f'{label}: nothing to fix first: hand and tool differ by {total.value:.4f} '

@@ -392,7 +392,7 @@ class ArmEvaluator:
     def all_notes(self) -> list[str]:
         """Return every note, those on the beginnings of engagements last."""
         return self.notes.texts() + (
-            [] if self.measurement is None else self.measurement.ideal.anchors.notes(self.name))
+            [] if self.measurement is None else self.measurement.ideal.notes())
 
     def all_problems(self) -> list[str]:
         """Return every problem sentence, each with how often it was met if more than once."""

@@ -6,9 +6,9 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from teleop_eval.core.budget import TERMS
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric
-from teleop_eval.core.window_budget import POSITION, Space
+from teleop_eval.core.budget import PARTS, TERMS
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.window_budget import POSITION, VELOCITY, Space
 
 if TYPE_CHECKING:
     from teleop_eval.core.arm import ArmEvaluator
@@ -16,6 +16,8 @@ if TYPE_CHECKING:
 
 # Terms that need the ideal command.
 _OF_MODEL = ('mapping', 'processing_delay', 'command')
+ONLY_VELOCITIES = (
+    'a rate mapping commands velocities: positions and orientations follow from no input')
 
 
 def budget_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int, *, no_ideal: str,
@@ -39,6 +41,11 @@ def budget_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int, *, n
         if caveat:
             found[name] = Metric(metric.value, metric.unit, metric.ci95, metric.n,
                                  metric.samples, reason=caveat, details=metric.details)
+    if space is VELOCITY:
+        names = ('discrepancy', *(f'budget_{term}' for term in TERMS))
+        found |= {f'{name}_{part}{POSITION.suffix}':
+                  missing(NOT_CONFIGURED, POSITION.unit, ONLY_VELOCITIES)
+                  for name in names for part in PARTS}
     return found
 
 
@@ -51,10 +58,8 @@ def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Spa
         return dict.fromkeys(why, (NOT_CONFIGURED, 'this arm has no usable robot description'))
     has_command = measured.latency.has(space.command)
     if not has_command:
-        reason = ('command.topic is not configured' if arm.arm.command.topic is None
-                  else f'{arm.arm.command.topic} gives no tool '
-                  f'{"position" if space is POSITION else "velocity"}')
-        why |= dict.fromkeys(('processing_delay', 'command'), (NOT_CONFIGURED, reason))
+        why |= dict.fromkeys(('processing_delay', 'command'),
+                             (NOT_CONFIGURED, _why_no_command(arm, space)))
     if no_ideal:
         # Without a command either there is nothing that drives the robot.
         lost = (*_OF_MODEL, 'discrepancy') if has_command else (*TERMS, 'discrepancy')
@@ -64,6 +69,17 @@ def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Spa
         why |= dict.fromkeys(('mapping', 'discrepancy'),
                              (NOT_CONFIGURED, f'needs {lacking}'))
     return why
+
+
+def _why_no_command(arm: ArmEvaluator, space: Space) -> str:
+    command = arm.arm.command
+    if command.topic is None:
+        return 'command.topic is not configured'
+    if space is POSITION:
+        return f'{command.topic} gives no tool position'
+    held = command.hold and not arm.intakes['command'].velocities
+    return f'{command.topic} gives no tool velocity' + (
+        ', since positions that are held (command.hold) only step' if held else '')
 
 
 def _no_delay(measured: ArmMeasurement, index: int) -> tuple[str, str]:

@@ -15,7 +15,7 @@ from teleop_eval.core.geometry import RobotGeometry
 from teleop_eval.core.history import Track
 from teleop_eval.core.mapping_input import operator_cells
 from teleop_eval.core.mappings import Anchor, Ideal, MappingModel
-from teleop_eval.core.mappings.base import HAND, VELOCITY
+from teleop_eval.core.mappings.base import HAND, RATE_INPUT, VELOCITY
 from teleop_eval.core.mappings.guarded import checked_ideal
 from teleop_eval.core.window import Span
 
@@ -47,6 +47,12 @@ class IdealCommand:
         self.faults: dict[str, str] = {}
         self.made: set[str] = set()
         self.candidates = CandidateRun(arm, period_s) if arm.predicts else None
+
+    def notes(self) -> list[str]:
+        """Return the sentences on anchors, if errors of any mapping depend on them."""
+        depends = any(model.anchored and model.needs != RATE_INPUT
+                      for model in self._arm.setup.models.values())
+        return self.anchors.notes(self._arm.name) if depends else []
 
     def interrupt(self) -> None:
         """Pass over a stretch without data."""

@@ -325,7 +325,8 @@ class ArmMeasurement:
         arm, accumulator = self._arm, self._accumulator(index)
         robot, command = items
         if robot is None or command is None:
-            if 'command' not in arm.intakes or arm.intakes['command'].posed:
+            intake = arm.intakes.get('command')
+            if intake is None or intake.posed or intake.velocities:
                 return {}
             return {name: _nothing(total_unit(arm.setup.joint_units))
                     for name in ('joint_error_rms', 'joint_error_compensated_rms')}

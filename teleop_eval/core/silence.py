@@ -12,20 +12,23 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from teleop_eval.core.history import History
+from teleop_eval.core.mappings.base import VELOCITY
 from teleop_eval.core.metric import INSUFFICIENT, Metric
 
 if TYPE_CHECKING:
     from teleop_eval.core.arm import ArmEvaluator
 
-# Tracks that show whether an input is there, by role; a command is joints or a pose.
-_TRACKS = {'hand': ('hand',), 'operator_joints': ('operator_joints',), 'robot_joints': ('q_r',),
-           'command': ('q_c', 'u_c')}
+# Tracks that show whether an input is there, by role; a command is joints, a pose or a velocity.
+_TRACKS = {'hand': ('hand',), 'operator_joints': ('operator_joints',),
+           'rate_input': ('rate_input',), 'robot_joints': ('q_r',),
+           'command': ('q_c', 'u_c', 'w_c')}
 # What begins so is made of these inputs, 'ideal' being the operator's; the first match counts.
 _MADE_OF = (
     ('latency_command_', ('ideal', 'command')), ('latency_response_', ('command', 'robot_joints')),
     ('latency_', ('ideal', 'robot_joints')), ('joint_error_', ('command', 'robot_joints')),
     ('tracking_error_', ('ideal', 'robot_joints')),
     ('orientation_error_', ('ideal', 'robot_joints')),
+    ('turn_rate_error_', ('ideal', 'robot_joints')),
     ('workspace_coverage_operator', ('hand',)), ('workspace_overlap', ('ideal', 'robot_joints')),
     ('workspace_coverage_robot', ('robot_joints',)), ('joint_range_', ('robot_joints',)),
     ('limit_', ('robot_joints',)), ('manipulability_', ('robot_joints',)),
@@ -98,10 +101,16 @@ def why_no_sample(arm: ArmEvaluator, roles: Sequence[str], heard: Heard, *,
     if not heard.usable:
         return f'no engaged and settled sample{where}'
     silent = [f'{arm.intakes[role].stream.topic} ({role})' for role in roles
-              if role in arm.intakes and role in _TRACKS and not heard.cells[role]]
+              if role in arm.intakes and not heard.cells[role] and _has_track(arm, role)]
     if not silent:
         return ''
     return f'{" and ".join(silent)} gave no sample while engaged{where}'
+
+
+def _has_track(arm: ArmEvaluator, role: str) -> bool:
+    """Tell whether what comes for a role is counted: velocities are for rate mappings only."""
+    return role in _TRACKS and (not arm.intakes[role].velocities or role != 'command' or any(
+        model.gives == VELOCITY for model in arm.setup.models.values()))
 
 
 def explained(metrics: Mapping[str, Metric], arm: ArmEvaluator, label: str, heard: Heard, *,

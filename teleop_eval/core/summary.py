@@ -10,7 +10,7 @@ from teleop_eval.core.accumulator import MappingAccumulator
 from teleop_eval.core.advice import what_first
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
-from teleop_eval.core.budget_summary import budget_metrics
+from teleop_eval.core.budget_summary import ONLY_VELOCITIES, budget_metrics
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
@@ -18,12 +18,12 @@ from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, 
 from teleop_eval.core.reachable_cells import ReachableSet
 from teleop_eval.core.response_summary import response_metrics
 from teleop_eval.core.silence import explained, inputs_of, never_came, no_clutch
+from teleop_eval.core.tracking import ARM_LENGTHS
 from teleop_eval.core.window_budget import VELOCITY
 
 CONDITION = 'teleoperated'
 _TOPIC_OF = {HAND: 'operator.hand_topic', OPERATOR_JOINTS: 'operator.joints_topic',
              RATE_INPUT: 'operator.rate_topic'}
-_RATE = 'a rate mapping commands velocities: positions and orientations follow from no input'
 
 
 def arm_summary(arm: ArmEvaluator, reachable: ReachableSet | None, *,
@@ -126,9 +126,9 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
     found |= accumulator.turn_compensated.metrics(
         'orientation_error_compensated', absorbed=absorbed, reason=no_turn, caveat=caveat)
     if space is VELOCITY:
-        found = {name: missing(NOT_CONFIGURED, metric.unit, _RATE)
+        found = {name: missing(NOT_CONFIGURED, metric.unit, ONLY_VELOCITIES)
                  if name.startswith('orientation_error') else metric
-                 for name, metric in found.items()}
+                 for name, metric in found.items()} | _no_positions()
         found |= accumulator.spin.metrics(
             'turn_rate_error', '_rad_s', 'rad/s',
             reason='turn rates of input and tool are not both known')
@@ -149,11 +149,19 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
         arm.operator, reachable, has_operator=not (arm.operator.missing or
                                                      arm.operator.lacking)
         and has_input('hand', arm.intakes, arm.operator),
-        has_ideal=no_ideal or (_RATE if space is VELOCITY else ''))
+        has_ideal=no_ideal or (ONLY_VELOCITIES if space is VELOCITY else ''))
     if no_ideal and no_ideal == arm.operator.lacking:
         found = {name: missing(INSUFFICIENT, metric.unit, no_ideal)
                  if metric.reason == no_ideal else metric for name, metric in found.items()}
     return explained(found, arm, label, accumulator.heard) | _engagement(arm, accumulator)
+
+
+def _no_positions() -> dict[str, Metric]:
+    """Return the tracking errors in positions, of which a rate mapping has none."""
+    return {f'{prefix}_{which}_{end}': missing(NOT_CONFIGURED, unit, ONLY_VELOCITIES)
+            for prefix in ('tracking_error', 'tracking_error_compensated')
+            for which in ('rms', 'p95', 'max')
+            for end, unit in (('norm', ARM_LENGTHS), ('m', 'm'))}
 
 
 def _joint_metrics(arm: ArmEvaluator, accumulator: MappingAccumulator,

@@ -22,12 +22,11 @@ from teleop_eval.core.streams import Items
 from teleop_eval.core.window import Span, on_grid
 
 
-def at_edges(items: Items, span: Span, *, max_gap_ns: int, hold: bool = False) -> Track:
+def at_edges(items: Items, span: Span, *, max_gap_ns: int) -> Track:
     """
     Return a stream's values at the edges of the span's cells (count + 1, d).
 
-    Sampled streams are interpolated linearly over no more than `max_gap_ns`; a held one keeps
-    its value.
+    They are interpolated linearly over no more than `max_gap_ns`.
     """
     edges = span.start_ns + np.arange(span.count + 1, dtype=np.int64) * span.period_ns
     times, values = items.times_ns, items.values
@@ -36,8 +35,6 @@ def at_edges(items: Items, span: Span, *, max_gap_ns: int, hold: bool = False) -
                      np.zeros(len(edges), dtype=bool))
     before = np.searchsorted(times, edges, side='right') - 1
     left = np.maximum(before, 0)
-    if hold:
-        return Track.computed(values[left], before >= 0)
     right = np.minimum(left + 1, len(times) - 1)
     length = times[right] - times[left]
     exact = times[left] == edges
@@ -83,7 +80,7 @@ def velocity_tracks(inputs: Mapping[str, Intake], span: Span, robot: RobotGeomet
     """
     Return w_r, w_c and spin_r, spin_c of one window, as far as the inputs tell them.
 
-    `hold` is the command's.
+    `hold` is the command's. Positions that are held have none: between steps they stand still.
     """
     tracks: dict[str, Track] = {}
     for role, prefix, held in (('robot_joints', 'r', False), ('command', 'c', hold)):
@@ -99,7 +96,9 @@ def velocity_tracks(inputs: Mapping[str, Intake], span: Span, robot: RobotGeomet
                 mean.values[:, :3] / robot.reach.length_m, mean.valid)
             tracks[f'spin_{prefix}'] = Track.computed(mean.values[:, 3:], mean.valid)
             continue
-        edges = at_edges(items, span, max_gap_ns=stream.max_gap_ns, hold=held)
+        if held:
+            continue
+        edges = at_edges(items, span, max_gap_ns=stream.max_gap_ns)
         if intake.posed:
             tracks[f'w_{prefix}'] = mean_velocity(
                 Track.computed(edges.values / robot.reach.length_m, edges.valid), period_s)

@@ -131,6 +131,35 @@ def test_a_velocity_command_is_taken_as_one() -> None:
     assert found['latency_response_s']['value'] == pytest.approx(0.0, abs=0.003)
 
 
+def test_a_stick_that_falls_silent_is_named() -> None:
+    """It comes until 4 s and the evaluation begins at 5 s, so no engaged cell has an input."""
+    made, t, velocities = driven()
+    one = evaluator(arm_parameters(**RATE, engaged__topic='/clutch'))
+    made.flag(0.0, '/clutch', False).flag(6.0, '/clutch', True)
+    feed(one, made.twists('/stick', t[t < 4.0], velocities[t < 4.0]).messages())
+    found = metrics(closed(one))
+    for name in ('tracking_error_rms_norm_s', 'turn_rate_error_rms_rad_s'):
+        assert (found[name]['status'], found[name]['reason']) == (
+            'insufficient', '/stick (rate_input) gave no sample while engaged'), name
+
+
+def test_velocity_commands_under_a_pose_mapping_are_not_called_silent() -> None:
+    """The robot rests, so no delay is seen; the command that comes is not to blame for that."""
+    made = session(20.0, motion=lambda times: np.tile([0.5, 0.1, 0.1], (len(times), 1)))
+    for moment in clock(0.0, 20.0, 100.0):
+        made.put(moment + 0.002, '/command', TwistSample(
+            ns(moment), np.array([0.1, 0.0, 0.0]), np.zeros(3), 'base'))
+    one = evaluator(arm_parameters(mappings__direct__kind='task_space',
+                                   active_mapping__fixed='direct', command__topic='/command'))
+    windows = feed(one, made.messages())
+    found = metrics(closed(one))
+    assert found['budget_residual_rms_norm']['value'] is None
+    assert found['budget_command_rms_norm']['reason'] == '/command gives no tool position'
+    assert not [name for name, metric in found.items() if 'gave no sample' in metric['reason']]
+    assert not [name for window in windows for name, metric in window.metrics.items()
+                if 'gave no sample' in metric.reason]
+
+
 @pytest.mark.parametrize(('topic', 'sample', 'words'), [
     ('/stick', PoseSample(ns(1), np.zeros(3), None, 'a'),
      'poses came where velocities or joystick states are expected'),
