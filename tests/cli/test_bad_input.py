@@ -139,7 +139,7 @@ FAULTS = {
         lambda: right('engaged', lambda event: replace(
             event, type_name=TEXT, data=faulty.text('yes'))),
         ('Topic /right/engaged', 'engaged of arm right', 'std_msgs/msg/String',
-         'expected is std_msgs/msg/Bool'), []),
+         'expected is sensor_msgs/msg/Joy or std_msgs/msg/Bool'), []),
     'command of a wrong size': Fault(
         lambda: right('command', lambda event: replace(
             event, type_name=ARRAY, data=faulty.array([1.0, 2.0, 3.0]))),

@@ -74,7 +74,7 @@ def test_no_configured_topic_at_all_is_an_error_that_lists_what_there_is(recordi
 def test_wrong_type_names_topic_type_and_what_is_expected(recording):
     with pytest.raises(InputError, match='Topic /image is configured as engaged of arm right, '
                                          'but has the type std_msgs/msg/String, .*expected is '
-                                         'std_msgs/msg/Bool'):
+                                         'sensor_msgs/msg/Joy or std_msgs/msg/Bool'):
         inputs(recording, {'/image': (Route('right', 'engaged'),)})
 
 
