@@ -7,7 +7,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 from teleop_eval.core.budget import LEAST_DISCREPANCY, TERMS
-from teleop_eval.core.metric import Metric
+from teleop_eval.core.metric import NOT_CONFIGURED, Metric
+from teleop_eval.core.sentences import listed
 
 # How a term is called in a sentence.
 WORDS = {
@@ -104,6 +105,7 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
     if meant and (offset := metrics.get(f'budget_mapping_rms{suffix}')) and offset.value:
         aside = (f'; the {offset.value:.3f} of the mapping hold the offset between hand and '
                  'tool that clutching leaves, which is meant')
+    aside += _unknown(total, metrics, suffix)
     what = (_JOINTS if name == 'mapping' and between_joints
             else _what(name, metrics, suffix))
     return (f'{label}: fix first {what}, which is {metric.number:.3f} '
@@ -128,6 +130,16 @@ def _what(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
         return ('the time the robot takes to follow'
                 + _milliseconds(metrics, 'latency_response_s' if has_command else 'latency_s'))
     return "the robot's following beside its delay (servo lag, limits, noise)"
+
+
+def _unknown(total: Metric | None, metrics: Mapping[str, Metric], suffix: str) -> str:
+    """Return of which terms nothing is known, and why, '' if that does not spoil the sum."""
+    if total is None or total.status != NOT_CONFIGURED:
+        return ''
+    terms = [WORDS[name] for name in TERMS
+             if (metric := metrics.get(f'budget_{name}_rms{suffix}')) is not None
+             and metric.value is None and metric.reason == total.reason]
+    return f'; nothing is known of {listed(terms)}: {total.reason}' if terms else ''
 
 
 def _milliseconds(metrics: Mapping[str, Metric], name: str) -> str:

@@ -142,7 +142,7 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
             for name, metric in found.items():
                 if name.startswith('tracking_error') and metric.value is not None:
                     metric.details['scale_uncertainty'] = uncertainty
-    found |= response_metrics(accumulator, found)
+    found |= response_metrics(accumulator, found, no_ideal=no_ideal)
     found |= budget_metrics(arm, measured, index, no_ideal=no_ideal, caveat=caveat)
     found |= _joint_metrics(arm, accumulator, caveat)
     found |= accumulator.workspace_metrics(

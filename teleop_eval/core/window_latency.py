@@ -17,6 +17,7 @@ from teleop_eval.core.frequency_response import FrequencyResponse
 from teleop_eval.core.history import History
 from teleop_eval.core.latency import DelayEstimate, DelaySettings, Sides, estimate_delay
 from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
+from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
 from teleop_eval.core.silence import Heard, inputs_of, never_came, why_no_sample
 from teleop_eval.core.window import Span
@@ -27,6 +28,7 @@ if TYPE_CHECKING:
 
 _RATE_SIDES = {'latency_s': ('w_i', 'w_r'), 'latency_command_s': ('w_i', 'w_c'),
                'latency_response_s': ('w_c', 'w_r')}
+HAND_TO_TOOL = 'hand_to_tool'
 # Share of a window that must have valid pairs: what lags and filters take is a quarter of 10 s.
 MIN_SHARE = 0.4
 # What a user calls the two sides; the operator's is the bare hand where nothing is modelled.
@@ -126,7 +128,7 @@ class WindowLatency:
         elif has_ideal and 'u_r' in have:
             found['latency_s'] = Pair('u_i', 'u_r', 'tool')
         elif model is None and {'u_o', 'u_r'} <= have:
-            found['latency_s'] = Pair('u_o', 'u_r', 'hand_to_tool')
+            found['latency_s'] = Pair('u_o', 'u_r', HAND_TO_TOOL)
         if joints_ideal and 'q_c' in have:
             found['latency_command_s'] = Pair('q_i', 'q_c', 'joints', (None, chain))
         elif has_ideal and 'u_c' in have:
@@ -165,8 +167,8 @@ class WindowLatency:
         pairs = self.pairs(label)
         for name, response in responses.items():
             pair = pairs[name]
-            if pair is None:
-                continue
+            if pair is None or pair.space == HAND_TO_TOOL:
+                continue  # the response to a command is asked for, not to the bare hand
             reference, robot = (history.last(side, span.count)
                                 for side in (pair.reference, pair.response))
             if reference is None or robot is None:
@@ -201,7 +203,7 @@ class WindowLatency:
     def _sides(self, name: str, pair: Pair) -> Sides:
         """Return what the sides of a latency are called, and the unit of their velocities."""
         reference, response = _NAMES[name]
-        if pair.space == 'hand_to_tool':
+        if pair.space == HAND_TO_TOOL:
             reference = 'hand'
         if pair.space != 'joints':
             return Sides(reference, response, 'arm lengths/s')
@@ -253,6 +255,10 @@ class WindowLatency:
         if all(role in self._arm.intakes for role in roles) and (
                 never := never_came(self._arm, roles)):
             return missing(INSUFFICIENT, 's', never)
+        mapping = self._arm.arm.mappings.get(self._arm.boundaries.labels[label])
+        if name == 'latency_command_s' and 'command' in self._arm.intakes and (
+                mapping is not None and mapping.kind == UNMODELLED):
+            return missing(NOT_CONFIGURED, 's', NOT_MODELLED)
         return missing(NOT_CONFIGURED, 's', 'one of the two sides of this delay is not there')
 
     def in_use(self, now_ns: int, label: int, names: Sequence[str] = ()) -> Observed | None:
