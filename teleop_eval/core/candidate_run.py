@@ -73,6 +73,8 @@ class CandidateRun:
         cells = operator_cells(
             tracks, self._arm.setup.operator_joint_names, robot_joints,
             stretch=states.stretch, anchors=anchors, period_s=self._period_s)
+        # Where the robot was driven is not where this mapping would have taken it.
+        cells = dataclasses.replace(cells, robot_m=None, robot_xyzw=None)
         operator = tracks.get('u_o')
         for one in self._candidates.values():
             if one.model.needs in tracks:
