@@ -159,8 +159,10 @@ class BudgetStatistics:
             return {key: missing(status, self.unit, reason) for key in names}
         mean = one.mean
         values = (one.rms, float(np.linalg.norm(mean)), one.varying)
-        found = {key: Metric(value, self.unit, one.interval() if place == 0 else None,
-                             one.blocks, one.samples)
+        interval = one.squares.root_mean_ci()
+        found = {key: Metric(value, self.unit, interval if place == 0 else None,
+                             one.squares.n_blocks, one.samples,
+                             reason=one.squares.why_none(interval) if place == 0 else '')
                  for place, (key, value) in enumerate(zip(names, values, strict=True))}
         found[names[1]].details['xyz'] = [float(part) for part in mean]
         return found
@@ -176,7 +178,10 @@ class BudgetStatistics:
             return missing(
                 INSUFFICIENT, '1', f'the discrepancy is {self._discrepancy.rms:.4f} {self.unit} '
                 f'RMS; below {LEAST_DISCREPANCY:g} its shares are those of noise')
-        metric = Metric(shares.mean, '1', shares.ci95(), shares.n_blocks, self.samples)
+        # A term is often close to the discrepancy's rate times a delay: its products telescope.
+        interval = shares.ci95(telescoping=True)
+        metric = Metric(shares.mean, '1', interval, shares.n_blocks, self.samples,
+                        reason=shares.why_none(interval))
         if metric.number < 0.0 and (other := self.cancelled(name)):
             metric.details['partly_cancels'] = other
         return metric
@@ -188,18 +193,14 @@ class _Magnitude:
     def __init__(self) -> None:
         self.samples = 0
         self._sum: np.ndarray | None = None
-        self._squares = BatchMeans()
+        self.squares = BatchMeans()
 
     def add(self, values: np.ndarray) -> None:
         """Add one window's vectors (m, d)."""
         self.samples += len(values)
         total = values.sum(axis=0)
         self._sum = total if self._sum is None else self._sum + total
-        self._squares.add(float(np.sum(values * values)), len(values))
-
-    @property
-    def blocks(self) -> int:
-        return self._squares.n_blocks
+        self.squares.add(float(np.sum(values * values)), len(values))
 
     @property
     def mean(self) -> np.ndarray:
@@ -209,15 +210,12 @@ class _Magnitude:
 
     @property
     def rms(self) -> float:
-        return math.sqrt(self._squares.mean) if self.samples else 0.0
+        return math.sqrt(self.squares.mean) if self.samples else 0.0
 
     @property
     def varying(self) -> float:
         """Return the RMS about the mean."""
         return math.sqrt(max(self.rms ** 2 - float(self.mean @ self.mean), 0.0))
-
-    def interval(self) -> tuple[float, float] | None:
-        return self._squares.root_mean_ci()
 
 
 _NO_SAMPLE = (INSUFFICIENT, 'no engaged and settled sample')

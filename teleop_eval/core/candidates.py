@@ -22,7 +22,7 @@ from teleop_eval.core.joint_range import MARGIN_MIN, JointRangeUse
 from teleop_eval.core.joint_speed import JointSpeedDemand
 from teleop_eval.core.manipulability import manipulability_norm
 from teleop_eval.core.mappings.base import Ideal
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, joined, missing
 from teleop_eval.core.reachable_cells import ReachableSet
 from teleop_eval.core.tracking import ARM_LENGTHS, MagnitudeStatistics
 
@@ -250,11 +250,9 @@ class CandidateAccumulator:
 
     def _share(self, blocks: BatchMeans, samples: int, details: dict[str, object],
                note: str = '') -> Metric:
-        interval = blocks.ci95()
-        if interval is not None:
-            interval = max(interval[0], 0.0), min(interval[1], 1.0)
+        interval = blocks.share_ci()
         return Metric(blocks.mean, '1', ci95=interval, n=blocks.n_blocks, samples=samples,
-                      reason=note, details=details)
+                      reason=joined(note, blocks.why_none(interval)), details=details)
 
     def _manipulability_metrics(self) -> dict[str, Metric]:
         histogram, blocks = self._manipulability, self._limit.n_blocks

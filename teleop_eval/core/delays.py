@@ -11,8 +11,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from teleop_eval.core.blocks import ALIKE, MIN_BLOCKS, median_ci, median_error
+from teleop_eval.core.blocks import ALIKE, MIN_BLOCKS
 from teleop_eval.core.latency import DelayEstimate
+from teleop_eval.core.medians import median_ci, median_error, why_none
 from teleop_eval.core.metric import INSUFFICIENT, UNOBSERVABLE, Metric, joined, missing
 
 # The level on /diagnostics follows the median of so many valid windows in a row.
@@ -135,10 +136,12 @@ class DelayStatistics:
             'space': self._space,
         }
         interval = median_ci(delays)
-        alike = ALIKE if interval is None and len(delays) >= MIN_BLOCKS else ''
+        why = why_none(delays)
+        if interval is None and len(delays) >= MIN_BLOCKS and not why:
+            why = ALIKE
         return Metric(
             float(np.median(delays)), 's', interval, len(delays),
-            self._samples, reason=joined(caveat, alike), details=details)
+            self._samples, reason=joined(caveat, why), details=details)
 
 
 def window_metric(estimate: DelayEstimate | None, space: str) -> Metric:

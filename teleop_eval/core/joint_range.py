@@ -214,13 +214,11 @@ class JointRangeUse:
         values = _values(joints, LIMIT_SHARE)
         if not values:
             return self._too_few()
-        interval = self._near_any.ci95()
-        if interval is not None:
-            interval = max(interval[0], 0.0), min(interval[1], 1.0)
+        interval = self._near_any.share_ci()
         fault = max(values, key=values.__getitem__)
         return Metric(
             self._near_any.mean, '1', ci95=interval, n=self._near_any.n_blocks,
-            samples=self._samples, reason=self._near_any.caveat, details={
+            samples=self._samples, reason=self._near_any.why_none(interval), details={
                 'joints': values, 'joint': fault if values[fault] > 0.0 else None,
                 'near_share_of_span': NEAR_SHARE})
 

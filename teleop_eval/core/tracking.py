@@ -48,6 +48,7 @@ class MagnitudeStatistics:
             return {name: missing(status, unit, reason or 'no valid samples')
                     for name in names}
         interval = self._blocks.root_mean_ci()
+        why_none = self._blocks.why_none(interval)
         if interval is not None:
             interval = (interval[0] * factor, interval[1] * factor)
         values = (math.sqrt(self._blocks.mean), self._histogram.percentile(95.0),
@@ -55,7 +56,7 @@ class MagnitudeStatistics:
         return {
             name: Metric(float(value) * factor, unit, interval if which == 0 else None,
                          self._blocks.n_blocks, self.samples,
-                         reason=joined(caveat, self._blocks.caveat if which == 0 else ''))
+                         reason=joined(caveat, why_none if which == 0 else ''))
             for which, (name, value) in enumerate(zip(names, values, strict=True))
         }
 

@@ -1,6 +1,6 @@
 # Copyright 2026 The teleop_eval authors
 # SPDX-License-Identifier: Apache-2.0
-"""Batch means and the interval of the median: published values, closed forms, coverage."""
+"""Intervals from blocks: closed forms, the jackknife by hand, coverage."""
 
 import math
 
@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from scipy import signal, stats
 
-from teleop_eval.core.blocks import BatchMeans, median_ci, median_error, median_ranks
+from teleop_eval.core.blocks import ALIKE, TOO_SHORT, BatchMeans
 
 
 def batches(values, weights=None, max_batches=64):
@@ -36,13 +36,25 @@ def test_independent_blocks_give_students_interval():
     assert (low, high) == pytest.approx(expected, rel=1e-12)
 
 
-def test_unequal_weights_give_the_ratio_estimator():
-    # Closed form for two kinds of blocks, weights 1 and 3, m = (10*1*2 + 10*3*4) / 40 = 3.5:
-    # residuals 1*(2 - 3.5) = -1.5 and 3*(4 - 3.5) = 1.5, all of square 2.25.
+def test_unequal_weights_give_the_jackknife_of_the_ratio():
+    # By hand for two kinds of blocks, weights 1 and 3, m = (10*1*2 + 10*3*4) / 40 = 3.5: without
+    # one of the first kind it is 138/39, without one of the second 128/37.
     means = batches(np.tile([2.0, 4.0], 10), np.tile([1.0, 3.0], 10))
     assert means.mean == 3.5
-    half = stats.t.ppf(0.975, 19) * math.sqrt(20 / 19 * 20 * 2.25) / 40.0
+    square = 10 * (138 / 39 - 3.5) ** 2 + 10 * (128 / 37 - 3.5) ** 2
+    half = stats.t.ppf(0.975, 19) * math.sqrt(19 / 20 * square)
     assert means.ci95() == pytest.approx((3.5 - half, 3.5 + half), rel=1e-12)
+
+
+def test_jackknife_is_leaving_out_block_after_block():
+    rng = np.random.default_rng(5)
+    weights = rng.uniform(0.5, 5.0, 30)
+    values = np.where(np.arange(30) % 2, 2.0, 1.0) + rng.normal(0.0, 0.02, 30)
+    sums, keep = values * weights, ~np.eye(30, dtype=bool)
+    without = np.array([sums[one].sum() / weights[one].sum() for one in keep])
+    mean = sums.sum() / weights.sum()
+    half = stats.t.ppf(0.975, 29) * math.sqrt(29 / 30 * np.sum((without - mean) ** 2))
+    assert batches(values, weights).ci95() == pytest.approx((mean - half, mean + half))
 
 
 def lag_one(values):
@@ -64,8 +76,10 @@ def test_what_correlation_is_left_widens_the_interval():
     values = signal.lfilter([1.0], [1.0, -0.25], np.random.default_rng(12).normal(size=30))
     lag1 = lag_one(values)
     assert 0.05 < lag1 < 0.3
-    factor = (1 + lag1 + 1 / 30) / (1 - lag1 - 1 / 30)
-    half = stats.t.ppf(0.975, 29 / factor) * stats.sem(values) * math.sqrt(factor)
+    freed = (30 * lag1 + 2) / 26
+    factor = (1 + freed) / (1 - freed)
+    half = stats.t.ppf(0.975, 29 / factor) * stats.sem(values) * math.sqrt(
+        factor * 29 / (30 - factor))
     expected = values.mean() - half, values.mean() + half
     assert batches(values).ci95() == pytest.approx(expected, rel=1e-12)
 
@@ -77,8 +91,10 @@ def test_a_batch_less_than_half_full_joins_its_neighbour():
     ends = np.append(np.arange(0, 124, 4), 124)
     sums = np.add.reduceat(values, ends)
     sizes = np.diff(np.append(ends, 129))
-    residual = sums - values.mean() * sizes
-    half = stats.t.ppf(0.975, 31) * math.sqrt(32 / 31 * np.sum(residual**2)) / 129
+    # The jackknife, each batch left out in turn.
+    without = (values.sum() - sums) / (129 - sizes)
+    half = stats.t.ppf(0.975, 31) * math.sqrt(
+        31 / 32 * np.sum((without - values.mean()) ** 2))
     expected = values.mean() - half, values.mean() + half
     assert batches(values).ci95() == pytest.approx(expected, rel=1e-12)
 
@@ -116,19 +132,82 @@ def test_blocks_that_are_all_alike_tell_no_interval(value):
     for means in (batches(np.full(50, value)), batches(np.full(50, value), weights)):
         assert means.mean == pytest.approx(value, rel=1e-12)
         assert means.ci95() is None and means.root_mean_ci() is None
-        assert 'all blocks are alike' in means.caveat
+        assert means.share_ci() is None and means.ci95(telescoping=True) is None
+        assert means.why_none(None) == ALIKE and 'all blocks are alike' in ALIKE
         # One that differs is a spread.
         means.add(2.0 + value)
-        assert means.ci95() is not None and means.caveat == ''
-    assert batches(np.full(19, value)).caveat == ''
+        assert means.why_none(means.ci95()) == ''
+    assert batches(np.full(19, value)).why_none(None) == ''
 
 
-def test_root_mean_interval_is_the_root_of_both_ends():
+def test_root_mean_interval_is_formed_on_the_log():
+    # Half the relative half width of the mean square, on the log of its root.
     means = batches(np.random.default_rng(6).exponential(1.0, 40))
-    low, high = means.ci95()
-    assert means.root_mean_ci() == pytest.approx((math.sqrt(low), math.sqrt(high)))
+    half = means.ci95()[1] / means.mean - 1.0
+    root = math.sqrt(means.mean)
+    assert means.root_mean_ci() == pytest.approx(
+        (root * math.exp(-half / 2), root * math.exp(half / 2)))
+    # A single burst: Student's interval would end below 0.
     rare = batches(np.concatenate([np.zeros(39), [100.0]]))
-    assert rare.ci95()[0] < 0.0 and rare.root_mean_ci()[0] == 0.0
+    low, high = rare.root_mean_ci()
+    assert rare.ci95()[0] < 0.0 < low < math.sqrt(2.5) < high
+
+
+def test_an_rms_known_to_no_better_than_a_factor_of_ten_has_no_interval():
+    # Nothing for half the run, then a rise: neighbours depend on each other over all of it.
+    means = batches(np.concatenate([np.zeros(11), np.linspace(0.0, 3.0, 11) ** 3]))
+    assert means.root_mean_ci() is None and means.why_none(None) == TOO_SHORT
+    assert means.ci95() is not None
+
+
+def test_wilsons_interval_of_a_share_for_independent_blocks():
+    # 40 blocks of one sample, 16 hits, no positive correlation: the variance of the batches is
+    # that of 39 independent samples, and Wilson's formula (written out as its quadratic's roots)
+    # takes Student's quantile for 39 degrees of freedom, twice 15.6 excursions being fewer.
+    hits = np.tile([1.0, 0.0, 1.0, 0.0, 0.0], 8)
+    z = stats.t.ppf(0.975, 2 * 39 * 0.4)
+    roots = np.roots([1 + z**2 / 39, -(2 * 0.4 + z**2 / 39), 0.4**2])
+    assert batches(hits).share_ci() == pytest.approx(sorted(roots), rel=1e-9)
+
+
+def test_a_share_of_a_single_excursion_is_told_with_care():
+    hits = np.zeros(100)
+    hits[37] = 1.0
+    low, high = batches(hits, max_batches=100).share_ci()
+    assert 0.0 < low < 0.01
+    # The exact binomial interval of 1 in 100 ends at 5.4 %; the variance too is from one event.
+    assert high > stats.beta.ppf(0.975, 2, 99)
+    assert batches(np.append(np.ones(39), 0.0)).share_ci()[1] < 1.0
+
+
+def test_blocks_that_cancel_their_neighbours_have_a_narrower_interval():
+    # Differences of independent ends: the mean of 60 is known far better than 60 blocks that
+    # are independent would tell.
+    ends = np.random.default_rng(7).normal(size=61)
+    means = batches(np.diff(ends) + 5.0)
+    assert lag_one(np.diff(ends)) < -0.3
+    plain, telescoped = means.ci95(), means.ci95(telescoping=True)
+    assert np.diff(telescoped) < 0.75 * np.diff(plain)
+    low, high = telescoped
+    assert low < 5.0 < high
+    # Where neighbours do not cancel it is the same interval.
+    values = signal.lfilter([1.0], [1.0, -0.25], np.random.default_rng(12).normal(size=30))
+    assert batches(values).ci95(telescoping=True) == batches(values).ci95()
+
+
+def test_coverage_of_blocks_that_telescope():
+    # 1000 runs of a lag-1 correlation of -0.4: without regard to its sign the intervals are too
+    # wide.
+    noise = np.random.default_rng(9).normal(size=(1000, 160))
+    runs = signal.lfilter([1.0], [1.0, 0.4], noise, axis=1)[:, 100:]
+    hits = {True: 0, False: 0}
+    for run in runs:
+        means = batches(run)
+        for telescoping in hits:
+            low, high = means.ci95(telescoping=telescoping)
+            hits[telescoping] += low <= 0.0 <= high
+    assert hits[False] > 985
+    assert 920 <= hits[True] <= 980
 
 
 def autoregressive_windows(tau, minutes, runs, rng):
@@ -143,18 +222,19 @@ def autoregressive_windows(tau, minutes, runs, rng):
 @pytest.mark.parametrize('minutes', [2, 5, 10])
 @pytest.mark.parametrize('tau', [0.2, 1.0, 3.0])
 def test_coverage_under_correlation_is_near_the_nominal(tau, minutes):
-    # 1000 runs: the standard error of 95 % is 0.7 %. True mean 0, true mean square 1.
+    # 1000 runs: the standard error of 95 % is 0.7 %. True mean 0, true mean square 1. Measured
+    # with other seeds (3000 runs): 93 to 97 %.
     rng = np.random.default_rng([20, minutes, round(10 * tau)])
-    hits_mean = hits_rms = 0
+    hits_mean, hits_rms, given = 0, 0, 0
     for run in autoregressive_windows(tau, minutes, 1000, rng):
         low, high = batches(run.mean(axis=1)).ci95()
         hits_mean += low <= 0.0 <= high
-        low, high = batches((run**2).mean(axis=1)).root_mean_ci()
-        hits_rms += low <= 1.0 <= high
-    assert 0.90 <= hits_mean / 1000 <= 0.98
-    # Squares are skewed: their short runs stay below the nominal (89.8 % of 3000 runs at
-    # 2 minutes and 3 s).
-    assert 0.88 <= hits_rms / 1000 <= 0.98
+        interval = batches((run**2).mean(axis=1)).root_mean_ci()
+        if interval is not None:
+            given += 1
+            hits_rms += interval[0] <= 1.0 <= interval[1]
+    assert 0.92 <= hits_mean / 1000 <= 0.98
+    assert given >= 975 and 0.92 <= hits_rms / given <= 0.98
 
 
 def test_treating_correlated_blocks_as_independent_would_fail():
@@ -167,57 +247,3 @@ def test_treating_correlated_blocks_as_independent_would_fail():
         low, high = batches(values).ci95()
         guarded += low <= 0.0 <= high
     assert plain / 400 < 0.80 < 0.90 <= guarded / 400
-
-
-@pytest.mark.parametrize(('n', 'ranks', 'level'), [
-    # Table A.7 'Confidence intervals for the population median' of a statistics textbook,
-    # seen second-hand on a public course page: x(k), x(n+1-k) with their level in per cent.
-    (6, (1, 6), 96.9), (8, (1, 8), 99.2), (9, (2, 8), 96.1), (12, (3, 10), 96.1),
-    (15, (4, 12), 96.5), (17, (5, 13), 95.1), (18, (5, 14), 96.9), (19, (5, 15), 98.1),
-    (20, (6, 15), 95.9),
-])
-def test_ranks_equal_the_published_table(n, ranks, level):
-    assert median_ranks(n) == ranks
-    inside = stats.binom.cdf(n - ranks[0], n, 0.5) - stats.binom.cdf(ranks[0] - 1, n, 0.5)
-    assert 100.0 * inside == pytest.approx(level, abs=0.051)
-
-
-def test_ranks_are_the_narrowest_that_hold_the_level():
-    for n in (*range(6, 400), 1000, 20001, 1000000):
-        k = median_ranks(n)[0]
-        assert 1.0 - 2.0 * stats.binom.cdf(k - 1, n, 0.5) >= 0.95, n
-        assert 1.0 - 2.0 * stats.binom.cdf(k, n, 0.5) < 0.95, n
-
-
-def test_too_few_values_have_no_interval():
-    assert [median_ranks(n) for n in range(6)] == [None] * 6
-    assert median_ci(np.arange(19.0)) is None
-    assert median_ci(np.array([])) is None
-    assert median_ci(np.append(np.arange(19.0), np.nan)) is None
-    assert median_ci(np.arange(20.0)[::-1]) == (5.0, 14.0)
-
-
-def test_median_of_values_all_alike_has_no_interval():
-    assert median_ci(np.full(30, 0.1)) is None and median_error(np.full(30, 0.1)) is None
-    assert median_error(np.arange(19.0)) is None
-
-
-@pytest.mark.parametrize('n', [20, 60, 400])
-def test_error_of_the_median_is_its_spread_over_repetitions(n):
-    """Normal values: also sqrt(pi / 2) / sqrt(n), the asymptotic closed form, within 10 %."""
-    rng = np.random.default_rng(11)
-    runs = rng.normal(0.0, 3.0, (1500, n))
-    spread = np.std(np.median(runs, axis=1))
-    told = np.sqrt(np.mean([median_error(run) ** 2 for run in runs]))
-    assert told == pytest.approx(spread, rel=0.12)
-    assert told == pytest.approx(3.0 * math.sqrt(math.pi / 2.0 / n), rel=0.1)
-
-
-def test_median_interval_covers_at_its_exact_level():
-    # Lognormal, true median 1; n = 20 covers 95.86 %, standard error 0.45 % over 2000 runs.
-    rng = np.random.default_rng(8)
-    hits = 0
-    for _ in range(2000):
-        low, high = median_ci(rng.lognormal(0.0, 1.0, 20))
-        hits += low <= 1.0 <= high
-    assert hits / 2000 == pytest.approx(0.9586, abs=0.0135)

@@ -200,7 +200,11 @@ def test_reason_of_a_still_side_names_it_and_its_unit(parameters, mapping, names
 def test_standard_error_of_a_run_is_that_of_its_median():
     """With 20 windows from them, with fewer not at all; single windows' errors have their name."""
     rng = np.random.default_rng(3)
-    delays = 0.1 + 0.004 * rng.normal(size=30)
+    ordered = np.sort(0.1 + 0.004 * rng.normal(size=30))
+    # Below and above the median in turns of two: 14 neighbours alike, 15 not, no correlation.
+    above = np.isin(np.arange(30) % 4, (0, 3))
+    delays = np.empty(30)
+    delays[above], delays[~above] = rng.permutation(ordered[15:]), rng.permutation(ordered[:15])
     found = DelayStatistics()
     for k, delay in enumerate(delays):
         if k == 19:
@@ -211,12 +215,15 @@ def test_standard_error_of_a_run_is_that_of_its_median():
     assert few.details['window_standard_error_s'] == pytest.approx(0.001)
     metric = found.metric(caveat='', reason='')
     assert metric.details['window_standard_error_s'] == pytest.approx(0.001)
-    # Of 30 values the interval lies between the 10th and the 21st, with 95.7 %.
-    low, high = np.sort(delays)[[9, 20]]
-    assert metric.ci95 == (low, high)
-    level = 1.0 - 2.0 * stats.binom.cdf(9, 30, 0.5)
+    # Of 30 values, 10th to 21st hold the median with 95.7 %, 11th to 20th with 90.1 %;
+    # interpolated to 95 % as Hettmansperger and Sheather 1986 do.
+    wide, narrow = 1.0 - 2.0 * stats.binom.cdf([9, 10], 30, 0.5)
+    part = (wide - 0.95) / (wide - narrow)
+    share = 20.0 * part / (10.0 + 10.0 * part)
+    low, high = (1.0 - share) * ordered[[9, 20]] + share * ordered[[10, 19]]
+    assert metric.ci95 == pytest.approx((low, high), rel=1e-9)
     assert metric.details['standard_error_s'] == pytest.approx(
-        (high - low) / 2.0 / stats.norm.ppf(0.5 + level / 2.0))
+        (high - low) / 2.0 / stats.norm.ppf(0.975))
 
 
 def test_delays_all_alike_tell_no_interval():
