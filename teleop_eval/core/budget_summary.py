@@ -7,7 +7,14 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from teleop_eval.core.budget import PARTS, TERMS
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.metric import (
+    INSUFFICIENT,
+    NOT_CONFIGURED,
+    UNOBSERVABLE,
+    Metric,
+    joined,
+    missing,
+)
 from teleop_eval.core.window_budget import POSITION, VELOCITY, Space
 
 if TYPE_CHECKING:
@@ -40,7 +47,8 @@ def budget_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int, *, n
             metric.details['scale_uncertainty'] = uncertainty
         if caveat:
             found[name] = Metric(metric.value, metric.unit, metric.ci95, metric.n,
-                                 metric.samples, reason=caveat, details=metric.details)
+                                 metric.samples, reason=joined(caveat, metric.reason),
+                                 details=metric.details)
     if space is VELOCITY:
         names = ('discrepancy', *(f'budget_{term}' for term in TERMS))
         found |= {f'{name}_{part}{POSITION.suffix}':
