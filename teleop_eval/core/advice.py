@@ -90,10 +90,11 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
         residual = metrics.get(f'budget_residual_rms{suffix}')
         reason = 'nothing was measured' if residual is None else residual.reason
         return f'{label}: cannot say what to fix first: {reason}.'
-    if total is not None and total.value is not None and total.value < LEAST_DISCREPANCY:
-        return (f'{label}: nothing to fix first: hand and tool differ by {total.value:.4f} '
-                f'{total.unit} RMS only.')
     metric = metrics[f'budget_{name}_rms{suffix}']
+    if total is not None and total.value is not None and total.value < LEAST_DISCREPANCY:
+        ends = 'hand and tool' if suffix == '_norm' else 'input and tool'
+        return (f'{label}: nothing to fix first: {ends} differ by {total.value:.4f} '
+                f'{total.unit} RMS only{_cancelled(name, metric)}.')
     share = metrics.get(f'budget_{name}_share')
     part = ''
     if share is not None and share.value is not None:
@@ -110,6 +111,14 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
             else _what(name, metrics, suffix))
     return (f'{label}: fix first {what}, which is {metric.number:.3f} '
             f'{metric.unit} RMS{part}; {_how_sure(name, metrics, suffix, but=meant)}{aside}.')
+
+
+def _cancelled(name: str, metric: Metric) -> str:
+    """Return the warning that parts cancel each other, '' where they are small themselves."""
+    if metric.number < 2.0 * LEAST_DISCREPANCY:
+        return ''
+    return (f'; but other parts cancel {WORDS[name]}, which is {metric.number:.3f}: see whether '
+            'the parameters of the mapping are those of your stack')
 
 
 def _what(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:

@@ -50,7 +50,7 @@ def budget_tables(mappings: Mapping[str, Any]) -> list[RenderableType]:
     if not parts:
         return []
     title = Text('\nError budget', style='bold')
-    title.append('  tool minus hand: which part of the chain causes how much',
+    title.append('  robot minus operator: which part of the chain causes how much',
                  style='not bold')
     return [title, *parts[1:], Text(LEGEND, style='dim'), *remarks.lines()]
 

@@ -185,6 +185,11 @@ def test_what_to_fix_first_and_how_sure():
     nothing = what_first('reach', measured(0.001, 0.001, ci=0.1))
     assert nothing == 'reach: nothing to fix first: hand and tool differ by 0.0020 ' \
                       'arm lengths RMS only.'
+    cancelled = what_first('reach', measured(0.2, 0.05) | {
+        'discrepancy_rms_norm': Metric(0.001, 'arm lengths')})
+    assert cancelled == ('reach: nothing to fix first: hand and tool differ by 0.0010 arm '
+                         'lengths RMS only; but other parts cancel mapping, which is 0.200: see '
+                         'whether the parameters of the mapping are those of your stack.')
     none = {f'budget_{name}_rms_norm': missing('unobservable', 'arm lengths', 'no delay')
             for name in TERMS}
     assert what_first('reach', none) == 'reach: cannot say what to fix first: no delay.'
