@@ -167,6 +167,17 @@ def _standard_error(
     size = next_fast_len(2 * shape[0], True)
     smoothing = max(1, round(SMOOTHING_HZ * size / rate))
     variance = variance_of_product_sum(derivative, residual, smoothing, size)
+    # A stamp that is off moves all axes at once, by the more the faster the motion: a residual
+    # along the derivative that grows with it. The axes taken for independent, its variance would
+    # be too small by about their number.
+    length = np.linalg.norm(derivative, axis=1, keepdims=True)
+    along = np.sum(derivative * residual, axis=1, keepdims=True) / np.maximum(length, 1e-300)
+    together = variance_of_product_sum(length, along, smoothing, size)
+    scale = float(np.sum(length**2) * np.sum(along**2)) / len(index)
+    if scale > 0.0:
+        # White 1980, Econometrica 48:817-838 (from memory): the spread depends on the motion.
+        together *= float(np.sum((length * along) ** 2)) / scale
+    variance = max(variance, together)
     error = math.sqrt(variance * len(index) / everything) / (gain * bend) / rate
     return error, math.sqrt(bend / product) * rate / (2.0 * math.pi)
 

@@ -178,6 +178,10 @@ def _coverage(
     }
     if seen.size == 0:
         return missing(INSUFFICIENT, '1', _NO_SAMPLES, **details)
+    if cells.size == 0:
+        return missing(
+            INSUFFICIENT, '1', 'No cube of edge 0.1 arm lengths is reachable inside the joint '
+            'limits.', **details)
     fractions = np.arange(1, _CURVE_POINTS + 1) / _CURVE_POINTS
     details['rarefied'] = {
         'duration_s': (fractions * visited.duration_s).tolist(),

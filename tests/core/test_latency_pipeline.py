@@ -181,9 +181,6 @@ def test_latency_is_unbiased_and_knows_its_error(mapping, rate_hz: float, delay_
     assert 0.7 < np.sqrt(np.mean(claimed ** 2)) / spread < 1.4
 
 
-@pytest.mark.xfail(strict=True, reason=(
-    'the standard error takes the axes for independent, but a false stamp moves them all at '
-    'once: it is too small by about the square root of their number'))
 def test_standard_error_knows_of_stamps_that_are_off():
     """Stamps off by 1 ms at 50 Hz spread the delay more than the noise of the values does."""
     rng, delay_s = np.random.default_rng(5), 0.0613

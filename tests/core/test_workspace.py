@@ -437,3 +437,12 @@ def test_nothing_seen_is_insufficient_everywhere():
 def test_metrics_are_plain_documents():
     metric = coverage_operator(visits(random_walk(500) / 0.1), engaged_s=10.0)
     assert json.loads(json.dumps(metric.to_dict()))['value'] == metric.value
+
+
+def test_an_arm_that_reaches_no_cube_has_no_coverage():
+    """Joint limits so tight that no cube is reached: a reason, not a division by zero."""
+    visited = VisitedCells(period_s=0.02)
+    visited.add(np.array([[2.0, 0.0, 0.0]]))
+    nothing = ReachableSet(visited.grid, np.zeros(0, dtype=np.int64), 1, (0,), True)
+    metric = coverage_robot(visited, nothing, engaged_s=0.02)
+    assert metric.status == 'insufficient'
