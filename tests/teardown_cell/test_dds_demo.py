@@ -134,7 +134,7 @@ def _run_once(domain: int, out: Path) -> bool:
     if 'too busy' in output:
         return False
     assert 'largest part now: mapping: 0.' in output  # arm and operator have unlike links
-    assert output.count('fix first') == 2
+    assert output.count(': fix first ') == 2
     _check_numbers(summary, truth)
     return True
 
