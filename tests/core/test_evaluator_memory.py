@@ -12,6 +12,9 @@ import numpy as np
 import pytest
 import synthetic_session as syn
 
+from teleop_eval.core.evaluator import SessionEvaluator
+from teleop_eval.core.samples import TwistSample
+from teleop_eval.core.settings import from_parameters
 from teleop_eval.core.streams import MOST_ROWS
 
 
@@ -72,6 +75,70 @@ def test_state_does_not_grow_with_the_run():
     assert size_of(delays) < 20_000
     assert len(delays._delays) <= 30 * 2
     assert delays._delays.itemsize == 8
+
+
+LABELS = ('reach', 'ratchet', 'driven')
+RATE_HZ = 20.0
+
+
+def turn(begin, seconds, label):
+    """Return one turn under a mapping: hand, robot, command, stick, and the clutch twice."""
+    motion, rate = syn.wander(), RATE_HZ
+    made = syn.session(begin + seconds, motion=motion, delay=0.1, start=begin, hand_rate=rate,
+                       robot_rate=rate)
+    t = syn.clock(begin, begin + seconds, rate, phase=0.5)
+    made.joints('/command', t, syn.joints_for(motion(t - 0.04)))
+    velocities = syn.REACH_M * (motion(t + 0.01) - motion(t - 0.01)) / 0.02
+    for moment, row in zip(t, velocities, strict=True):
+        made.put(moment + 0.002, '/stick', TwistSample(
+            syn.ns(moment), row, np.zeros(3), 'base'))
+    made.text(begin, '/mapping', label).flag(begin, '/clutch', False)
+    made.flag(begin + 1.0, '/clutch', True).flag(begin + 5.0, '/clutch', False)
+    return made.flag(begin + 6.0, '/clutch', True)
+
+
+def predicted_run(turns):
+    """Feed turns of all mapping kinds with predictions; return sizes by number of turns."""
+    target = SessionEvaluator(from_parameters(syn.arm_parameters(
+        operator__rate_topic='/stick', command__topic='/command', engaged__topic='/clutch',
+        active_mapping__topic='/mapping', mappings__reach__kind='task_space',
+        mappings__ratchet__kind='relative', mappings__driven__kind='rate',
+        mappings__pushed__kind='rate', mappings__pushed__input='displacement',
+        ) | {'time.grid_rate_hz': RATE_HZ}), descriptions={'right': syn.urdf()}, candidates=True)
+    begin, sizes = 0.0, {}
+    for number in range(1, turns + 1):
+        # First a long one each: frequency responses fill up to 40 batches.
+        seconds = 84.0 if number <= len(LABELS) else 12.0
+        label = LABELS[number % len(LABELS)]
+        for message in turn(begin, seconds, label).messages():
+            target.add(*message)
+        target.poll()
+        begin += seconds + 20.0
+        if number % len(LABELS) == 0:
+            arm = target.arms['right']
+            sizes[number] = {
+                'all': size_of(arm), 'history': size_of(arm.measurement.history),
+                'anchors': size_of(arm.measurement.ideal.anchors)}
+    return target, sizes
+
+
+def test_mapping_kinds_and_predictions_do_not_grow_with_the_run():
+    """Engagement after engagement under each kind; every mapping predicted all the time."""
+    target, sizes = predicted_run(15)
+    # Histograms fill up as above; one turn's cells alone would be half a per cent.
+    assert sizes[15]['all'] < 1.02 * sizes[6]['all']
+    for part in ('history', 'anchors'):
+        assert sizes[15][part] <= 1.001 * sizes[6][part], part
+    measured = target.arms['right'].measurement
+    assert len(measured.accumulators) == len(LABELS)
+    for index, accumulator in measured.accumulators.items():
+        # Had nothing come of a mapping, nothing could grow.
+        assert accumulator.budget.samples > 200, index
+        assert accumulator.responses['latency_s'].result().segments >= 10
+    for label, one in measured.ideal.candidates._candidates.items():
+        assert one.accumulator is not None and one.accumulator._visited.samples > 200, label
+        assert len(one._anchors) <= 1, label
+    assert len(target.problems) == 0 and len(target.notes) <= 3
 
 
 def test_one_clock_far_ahead_does_not_pile_up():
