@@ -27,12 +27,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from teleop_eval.core.blocks import BatchMeans
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
 
 TERMS = ('mapping', 'processing_delay', 'command', 'response_delay', 'residual')
 # Below this discrepancy (RMS, arm lengths) shares are shares of noise.
 LEAST_DISCREPANCY = 0.005
 PARTS = ('rms', 'static', 'varying')
+NO_SAMPLE = 'no engaged and settled sample in this window'
 
 
 @dataclass(frozen=True)
@@ -239,8 +240,8 @@ def window_metrics(cells: Terms, *, suffix: str = '_norm',
 
 
 def _no_sample(unit: str) -> tuple[str, str, str]:
-    return INSUFFICIENT, unit, 'no engaged and settled sample in this window'
+    return INSUFFICIENT, unit, NO_SAMPLE
 
 
-__all__ = ['LEAST_DISCREPANCY', 'NOT_CONFIGURED', 'PARTS', 'TERMS', 'BudgetStatistics',
-           'Positions', 'Terms', 'split', 'window_metrics']
+__all__ = ['LEAST_DISCREPANCY', 'NO_SAMPLE', 'PARTS', 'TERMS', 'BudgetStatistics', 'Positions',
+           'Terms', 'split', 'window_metrics']

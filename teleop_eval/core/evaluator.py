@@ -148,7 +148,8 @@ class SessionEvaluator:
     def _tell_status(self) -> None:
         """Tell of the windows that the message just taken has closed."""
         # Levels follow windows, not questions: so they are the same however often one asks.
-        closed = dict.fromkeys(result.arm for result in self._results[self._told:])
+        closed = dict.fromkeys(
+            result.arm for result in self._results[self._told:] if result.mapping)
         self._told = len(self._results)
         for name in closed:
             self._status[name].window_closed(self._receive_ns, self._thresholds)

@@ -16,7 +16,7 @@ from teleop_eval.core.delays import Observed
 from teleop_eval.core.history import History, Track
 from teleop_eval.core.ideal_command import IdealCommand
 from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
-from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, missing
 from teleop_eval.core.operator_tracks import operator_tracks
 from teleop_eval.core.results import WindowResult
 from teleop_eval.core.silence import Heard, explained
@@ -55,6 +55,7 @@ class ArmMeasurement:
             model.gives == GIVES_VELOCITY for model in arm.setup.models.values())
         self.accumulators: dict[int, MappingAccumulator] = {}
         self.delays_s: Delays = {}
+        self._published: dict[str, str] = {}
         self.limits = LimitState()
         self.label = -1
         self.tool_rotation: np.ndarray | None = None
@@ -91,7 +92,7 @@ class ArmMeasurement:
         return round(max(settling_s, 0.0 if seen is None else seen.delay_s) * 1e9)
 
     def window(self, span: Span, receive_ns: int) -> WindowResult | None:
-        """Measure one window; None while no mapping is known."""
+        """Measure one window; None before any mapping was known."""
         arm = self._arm
         tracks, robot_items, command_items = self._tracks(span)
         states = arm.boundaries.states(span, settling_ns=self._settling_ns(span.start_ns))
@@ -117,12 +118,21 @@ class ArmMeasurement:
             if index == label:
                 metrics = found
         if label < 0:
-            return None
+            # What was published must not stand as if it were of now.
+            return None if not self._published else WindowResult(
+                arm.name, '', span.start_ns, span.end_ns, receive_ns,
+                {name: missing(INSUFFICIENT, unit, 'no mapping is active')
+                 for name, unit in self._published.items()})
         heard = Heard()
         heard.add(self.history, states.usable & (states.label == label))
         metrics = explained(metrics, arm, arm.boundaries.labels[label], heard,
                             where=' in this window')
         metrics |= self.latency.metrics(label)
+        for name, unit in self._published.items():
+            if name not in metrics:
+                metrics[name] = missing(
+                    NOT_CONFIGURED, unit, 'this metric is that of another mapping')
+        self._published |= {name: metric.unit for name, metric in metrics.items()}
         self.newest = WindowResult(
             arm.name, arm.boundaries.labels[label], span.start_ns, span.end_ns, receive_ns,
             metrics)

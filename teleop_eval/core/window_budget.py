@@ -8,10 +8,10 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from teleop_eval.core.budget import Positions, Terms, split, window_metrics
+from teleop_eval.core.budget import NO_SAMPLE, Positions, Terms, split, window_metrics
 from teleop_eval.core.delays import Observed
 from teleop_eval.core.history import History, Track
-from teleop_eval.core.metric import Metric
+from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
 from teleop_eval.core.tracking import ARM_LENGTHS
 from teleop_eval.core.window import Span
 from teleop_eval.core.window_latency import WindowLatency
@@ -64,15 +64,19 @@ def window_budget(history: History, latency: WindowLatency, span: Span, label: i
 
     Returns
     -------
-    None if nothing drives the robot here; without an observed delay the RMS are missing, with
-    the reason.
+    None if nothing drives the robot; without samples or an observed delay the RMS are missing,
+    with the reason.
 
     """
     robot = history.last(space.robot, span.count)
     ideal, command = (history.last(name, span.count) for name in (space.ideal, space.command))
     driver = ideal if command is None else command
-    if robot is None or driver is None:
+    formed = _formed(latency, space)
+    if not formed:
         return None
+    if robot is None or driver is None:
+        why = missing(INSUFFICIENT, space.unit, NO_SAMPLE)
+        return WindowBudget(Terms({}, None), dict.fromkeys(formed, why))
     stages = {'response_delay': 'latency_s' if command is None else 'latency_response_s'}
     if command is not None and ideal is not None:
         stages['processing_delay'] = 'latency_command_s'
@@ -81,8 +85,7 @@ def window_budget(history: History, latency: WindowLatency, span: Span, label: i
         known = latency.in_use(span.end_ns, label, (name,))
         if known is None:
             why = latency.why_none(label, space.unit, (name,))
-            return WindowBudget(Terms({}, None), {
-                f'budget_{one}_rms{space.suffix}': why for one in stages})
+            return WindowBudget(Terms({}, None), dict.fromkeys(formed, why))
         seen[term] = known
     kept = here.copy()
 
@@ -108,6 +111,19 @@ def window_budget(history: History, latency: WindowLatency, span: Span, label: i
     return WindowBudget(
         terms, window_metrics(terms, suffix=space.suffix, unit=space.unit),
         {term: one.delay_s for term, one in seen.items()})
+
+
+def _formed(latency: WindowLatency, space: Space) -> list[str]:
+    """Return the names of the metrics that the tracks met so far can give."""
+    ideal, command = latency.has(space.ideal), latency.has(space.command)
+    if not latency.has(space.robot) or not (ideal or command):
+        return []
+    names = ['budget_response_delay', 'budget_residual']
+    if ideal and command:
+        names += ['budget_processing_delay', 'budget_command']
+    if ideal and latency.has(space.operator):
+        names += ['budget_mapping', 'discrepancy']
+    return [f'{name}_rms{space.suffix}' for name in names]
 
 
 def _same_run(history: History, track: Track | None, count: int, shift: float) -> Track | None:

@@ -132,3 +132,39 @@ def test_metric_that_is_not_configured_is_in_no_window():
     for window in windows:
         assert 'joint_error_rms' in window.metrics
         assert not {'limit_margin_min', 'tracking_error_rms_norm'} & set(window.metrics)
+
+
+BUDGET = tuple(f'{name}_rms_norm' for name in (
+    'discrepancy', 'budget_mapping', 'budget_processing_delay', 'budget_command',
+    'budget_response_delay', 'budget_residual'))
+
+
+def test_every_window_has_the_budget_while_no_delay_is_known():
+    """Before the first latency window, and when the last delay is too old, it is missing."""
+    moving = syn.wander()
+
+    def stops(times):
+        return moving(np.minimum(times, 20.0))
+
+    _, windows, _ = run(full(96.0, motion=stops))
+    assert len(windows) > 40
+    for window in windows:
+        assert set(BUDGET) <= set(window.metrics), window.start_ns
+    for window in (windows[0], windows[-1]):
+        assert {window.metrics[name].value for name in BUDGET} == {None}
+    assert windows[8].metrics['budget_residual_rms_norm'].value is not None
+
+
+@pytest.mark.parametrize('label', ['', 'idle'])
+def test_no_number_stands_when_another_mapping_or_none_is_active(label):
+    """What was once published goes on as NaN under a label that does not have it."""
+    made = full(30.0).text(0.0, '/mapping', 'direct').text(20.0, '/mapping', label)
+    _, windows, _ = run(made, active_mapping__fixed=None, active_mapping__topic='/mapping')
+    before = set().union(*(w.metrics for w in windows if w.end_ns < syn.ns(20.0)))
+    after = [w for w in windows if w.start_ns >= syn.ns(20.0)]
+    assert len(after) >= 4
+    for window in after:
+        assert window.mapping == label
+        assert before <= set(window.metrics)
+        assert window.metrics['tracking_error_rms_norm'].value is None
+        assert window.metrics['budget_command_rms_norm'].value is None
