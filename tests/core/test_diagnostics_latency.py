@@ -180,5 +180,5 @@ def test_reasons_are_in_the_names_of_the_two_sides():
     for message in messages:
         target.add(*message)
     line = target.diagnostics(messages[-1][0])[2]
-    assert re.fullmatch(r'unobservable: the robot hardly moves: \d\.\d{4} arm lengths/s RMS in the '
-                        r'band, 0\.0200 arm lengths/s are needed', line.message)
+    assert re.fullmatch(r'unobservable: the robot hardly moves: \d\.\d{4} arm lengths/s RMS in '
+                        r'the band, 0\.0200 arm lengths/s are needed', line.message)
