@@ -36,7 +36,7 @@ MIN_BLOCKS = 20
 # Neighbours are joined while their correlation exceeds this ...
 _LAG1_LIMIT = 0.3
 # ... and at least this many batches are left.
-_MIN_BATCHES = 10
+_MIN_BATCHES = 20
 # The inflation has a pole at 1; an estimate beyond this is no estimate.
 _LAG1_CAP = 0.8
 # So far may negative correlation narrow an interval: to a third of the variance ...
@@ -44,7 +44,7 @@ _LAG1_FLOOR = -0.5
 # ... and only where it exceeds so many standard errors, 1 / sqrt(batches).
 _SURELY_NEGATIVE = 1.3
 # The variance of a share is known as well as so many degrees of freedom for each excursion.
-_FREEDOM_OF_EXCURSION = 2.0
+_FREEDOM_OF_EXCURSION = 4.0
 # An RMS that is not known to within this factor is not known.
 _MAX_FACTOR = 10.0
 _LEVEL = 0.95
@@ -78,7 +78,7 @@ class BatchMeans:
 
     The interval is Student's t on the jackknife variance of the ratio over the batches. Three
     steps guard against correlation that outlasts a block: (1) neighbouring batches are joined
-    while their lag-1 correlation r exceeds 0.3 and 10 are left; (2) the variance is multiplied
+    while their lag-1 correlation r exceeds 0.3 and 20 are left; (2) the variance is multiplied
     by f = (1 + r) / (1 - r), exact for a first-order autoregressive sequence, and by
     (n - 1) / (n - f) for what the residuals of n batches lack; r is freed of its bias (the first
     order of Marriott and Pope, (n r + 1) / (n - 4), with 2 for 1, since the variance does not
@@ -194,7 +194,7 @@ class BatchMeans:
 
         Wilson's, for as many independent samples as would give the variance of the batches. A
         rare share rests on few excursions, however many batches there are: the degrees of
-        freedom are at most twice their number. None where the mean has none.
+        freedom are at most four times their number. None where the mean has none.
         """
         spread = self._spread()
         if spread is None or not 0.0 < spread.mean < 1.0:

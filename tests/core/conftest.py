@@ -28,6 +28,7 @@ def _load(name):
 _load('synthetic_session')
 _load('mapping_cells')
 _load('synthetic_chain')
+_load('random_runs')
 
 
 @pytest.fixture(scope='session')

@@ -163,9 +163,9 @@ def test_an_rms_known_to_no_better_than_a_factor_of_ten_has_no_interval():
 def test_wilsons_interval_of_a_share_for_independent_blocks():
     # 40 blocks of one sample, 16 hits, no positive correlation: the variance of the batches is
     # that of 39 independent samples, and Wilson's formula (written out as its quadratic's roots)
-    # takes Student's quantile for 39 degrees of freedom, twice 15.6 excursions being fewer.
+    # takes Student's quantile for 39 degrees of freedom.
     hits = np.tile([1.0, 0.0, 1.0, 0.0, 0.0], 8)
-    z = stats.t.ppf(0.975, 2 * 39 * 0.4)
+    z = stats.t.ppf(0.975, 39)
     roots = np.roots([1 + z**2 / 39, -(2 * 0.4 + z**2 / 39), 0.4**2])
     assert batches(hits).share_ci() == pytest.approx(sorted(roots), rel=1e-9)
 
