@@ -169,7 +169,7 @@ class EvaluatorNode(Node):
             evaluator, folder, event_topic=self._parts.event_topic,
             type_name=self.inputs.type_name, decoder=self._decoder)
         # What arrived before the start is not part of the session, but what is latched is.
-        batch = self.inputs.drain()
+        batch = self.inputs.begin()
         latched = self.inputs.latched_messages()
         if latched:
             self.session.start(batch.cut_ns, latched)
@@ -208,7 +208,7 @@ class EvaluatorNode(Node):
         """Let the evaluation begin anew in the same session; False without a session."""
         if self.session is None:
             return False
-        batch = self.inputs.drain()
+        batch = self.inputs.begin()
         self._publish(self.session.add(batch.messages))
         self.session.event(self.inputs.clock.now_ns(), RESET)
         return True

@@ -97,9 +97,20 @@ class LiveInputs:
     def drain(self) -> Batch:
         """Return everything that has arrived since the last time."""
         with self._lock:
-            cut_ns, more = self._collect()
-            messages, self._waiting = self._waiting, []
-        return Batch(messages, cut_ns, more)
+            return self._drained()
+
+    def begin(self) -> Batch:
+        """
+        Drain, and begin anew what is told of a session: losses and problems of the topics.
+
+        Losses among the messages of the batch are no longer counted, later ones are.
+        """
+        with self._lock:
+            batch = self._drained()
+            for topic_input in self.topics.values():
+                topic_input.loss.begin()
+        self._problems_so_far = dict.fromkeys(self.problems())
+        return batch
 
     @contextmanager
     def reading(self) -> Iterator[None]:
@@ -124,6 +135,11 @@ class LiveInputs:
         finally:
             ended.set()
             thread.join()
+
+    def _drained(self) -> Batch:
+        cut_ns, more = self._collect()
+        messages, self._waiting = self._waiting, []
+        return Batch(messages, cut_ns, more)
 
     def _collect(self) -> tuple[int, bool]:
         """Move what has arrived to what waits; return the clock before, and whether more is."""
@@ -158,7 +174,7 @@ class LiveInputs:
                 if topic_input.request is None and topic_input.problems]
 
     def problems_so_far(self) -> list[str]:
-        """Return what is or was wrong with the topics."""
+        """Return what is or was wrong with the topics since the session began."""
         return list(self._problems_so_far)
 
     def absent(self) -> list[str]:

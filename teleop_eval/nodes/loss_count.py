@@ -16,8 +16,12 @@ class LossCount:
 
     def __init__(self) -> None:
         self._last: dict[bytes | None, int] = {}
+        self.begin()
+
+    def begin(self) -> None:
+        """Count from zero; what is lost between the last message and the next one counts."""
         self._lost = 0
-        self._reason = 'no message yet'
+        self._reason = '' if self._last else 'no message yet'
 
     def add(self, publisher: bytes | None, number: int | None, publishers: int) -> None:
         """

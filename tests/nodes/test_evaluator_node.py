@@ -18,7 +18,7 @@ from rclpy.context import Context
 from rclpy.executors import SingleThreadedExecutor
 from rclpy.node import Node
 from rclpy.parameter import Parameter
-from rclpy.qos import DurabilityPolicy, QoSProfile
+from rclpy.qos import DurabilityPolicy, QoSProfile, ReliabilityPolicy
 from rosgraph_msgs.msg import Clock
 from sensor_msgs.msg import JointState
 from std_msgs.msg import Bool, Float64, String
@@ -191,6 +191,45 @@ def test_sessions_start_and_stop_by_service(make_bench: Any, tmp_path: Path) -> 
     for name in ('trial', 'trial_2'):
         summary = json.loads((tmp_path / 'sessions' / name / 'summary.json').read_text('utf-8'))
         assert summary['session']['name'] == name
+
+
+def test_losses_and_problems_of_one_session_are_not_those_of_the_next(
+        make_bench: Any, tmp_path: Path) -> None:
+    bench = make_bench('-p', 'session.name:=trial')
+    best_effort = QoSProfile(depth=50, reliability=ReliabilityPolicy.BEST_EFFORT)
+
+    def disturb() -> None:
+        """Overrun the queue of the joints, and offer a topic with a type that cannot serve."""
+        joints = bench.publisher(JointState, '/robot_joints', best_effort)
+        joints.publish(JointState(name=['j1', 'j2'], position=[0.0, 0.0]))
+        found = bench.node.inputs.topics['/robot_joints']
+        before = found.messages
+        wait_until(lambda: found.messages > before, bench.step)
+        for _ in range(found.request.depth + 50):
+            joints.publish(JointState(name=['j1', 'j2'], position=[0.0, 0.0]))
+        wait_until(lambda: found.loss.lost, bench.step)
+        wrong = bench.stack.create_publisher(JointState, '/engaged', 10)
+        wait_until(lambda: bench.node.inputs.problems(), bench.step)
+        for publisher in (wrong, joints):
+            bench.stack.destroy_publisher(publisher)
+        wait_until(lambda: not (bench.node.inputs.problems() or found.publishers), bench.step)
+
+    def end(name: str) -> tuple[int | None, bool]:
+        """Return what the session's summary says of lost joints, and whether of the type."""
+        bench.node.stop_session()
+        summary = json.loads((tmp_path / 'sessions' / name / 'summary.json').read_text('utf-8'))
+        return (summary['arms']['right']['inputs']['robot_joints']['lost'],
+                any('/engaged has the type' in text for text in summary['problems']))
+
+    disturb()
+    lost, told = end('trial')
+    assert lost and told
+    bench.node.start_session()
+    assert end('trial_2') == (0, False)
+    bench.node.start_session()
+    disturb()
+    assert bench.node.reset()
+    assert end('trial_3') == (0, False)
 
 
 def test_diagnostics_metrics_and_summary_are_published(

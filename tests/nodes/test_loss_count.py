@@ -31,6 +31,19 @@ def test_gaps_are_lost_messages() -> None:
     assert counted((b'a', 1), (b'a', 2), (b'a', 5), (b'a', 7)).lost == 3
 
 
+def test_a_session_begins_with_none_lost() -> None:
+    loss = counted((b'a', 1), (b'a', 5))
+    loss.begin()
+    assert (loss.lost, loss.reason) == (0, '')
+    loss.add(b'a', 8, 1)  # what was lost since the last message belongs to the new session
+    assert loss.lost == 2
+    unknown = counted((None, 1), publishers=2)
+    unknown.begin()
+    assert (unknown.lost, unknown.reason) == (None, 'no message yet')
+    unknown.add(None, 7, 1)
+    assert unknown.lost == 0
+
+
 def test_interleaved_publishers_are_counted_apart() -> None:
     assert counted((b'a', 1), (b'b', 100), (b'a', 2), (b'b', 103), publishers=2).lost == 2
 

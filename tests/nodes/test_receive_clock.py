@@ -1,10 +1,13 @@
 # Copyright 2026 The teleop_eval authors
 # SPDX-License-Identifier: Apache-2.0
-"""The simulator's clock as receive time."""
+"""The middleware's stamps and the simulator's clock as receive time."""
 
 from __future__ import annotations
 
-from live_helpers import FakeRoute, ros, wait_until
+import time
+
+from live_helpers import PATIENCE_S, FakeRoute, ros, wait_until
+from rclpy.duration import Duration
 from rclpy.node import Node
 from rosgraph_msgs.msg import Clock
 from std_msgs.msg import String
@@ -13,6 +16,28 @@ from teleop_eval.nodes.live_inputs import LiveInputs
 from teleop_eval.nodes.receive_clock import SimulatedReceiveClock
 from teleop_eval.nodes.topic_input import NeverExecuted
 from teleop_eval.sources.decode import SUPPORTED
+
+
+def test_receive_time_is_that_of_arriving_not_of_draining(domain: int) -> None:
+    """
+    The message has arrived when its receipt is confirmed, and only then the wait begins.
+
+    A busy machine makes the wait longer, which can only widen the difference.
+    """
+    with ros(domain) as context, ros(domain) as publishing:
+        inputs = LiveInputs(Node('x', context=context),
+                            {'/m': (FakeRoute('right', 'active_mapping'),)}, {}, SUPPORTED,
+                            simulated=False)
+        mapping = Node('y', context=publishing).create_publisher(String, '/m', 10)
+        wait_until(mapping.get_subscription_count, lambda: inputs.poll_graph(1))
+        published_ns = time.time_ns()
+        mapping.publish(String(data='direct'))
+        assert mapping.wait_for_all_acked(Duration(seconds=PATIENCE_S))
+        time.sleep(0.1)
+        drained_ns = time.time_ns()
+        [received] = inputs.drain().messages
+        assert published_ns <= received.receive_ns <= drained_ns - 50_000_000
+        inputs.close()
 
 
 def test_a_message_gets_the_last_reading_before_it(domain: int) -> None:
