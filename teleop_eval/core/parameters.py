@@ -13,7 +13,7 @@ import dataclasses
 import difflib
 import math
 import re
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Collection, Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -106,8 +106,12 @@ def build(settings: type, flat: Mapping[str, Any], *, where: str = 'the paramete
     built = _build(settings, flat, '', used, where)
     unknown = [key for key in flat if key not in used]
     if unknown:
-        hints = ' '.join(_unknown(key, settings, flat) for key in unknown[:_MOST_UNKNOWN])
-        more = len(unknown) - _MOST_UNKNOWN
+        sections = set(_sections(settings, flat, ''))
+        strangers = dict.fromkeys(_stranger(key, sections) for key in unknown)
+        hints = ' '.join(
+            _unknown(name, settings, flat) if name in flat else _unknown_section(name, sections)
+            for name in [*strangers][:_MOST_UNKNOWN])
+        more = len(strangers) - _MOST_UNKNOWN
         raise ConfigError(f'{where}: {hints}' + (f' And {more} more.' if more > 0 else ''))
     return built
 
@@ -317,6 +321,38 @@ def _check_limits(described: Parameter, value: Any, key: str, where: str) -> Non
                 f'{"-inf" if low is None else f"{low:g}"} to '
                 f'{"inf" if high is None else f"{high:g}"}{unit}; correct value or unit.'
             )
+
+
+def _sections(cls: type, flat: Mapping[str, Any], prefix: str) -> Iterator[str]:
+    """Yield the dotted name of every section, maps filled with the names in use."""
+    for field in dataclasses.fields(cls):
+        key = prefix + field.name
+        if 'group' in field.metadata:
+            yield key
+            yield from _sections(field.metadata['group'], flat, key + '.')
+        elif 'map' in field.metadata:
+            yield key
+            described: NamedMap = field.metadata['map']
+            for name in _names(flat, key + '.', described, ''):
+                yield f'{key}.{name}'
+                yield from _sections(_class_in_use(described, flat, f'{key}.{name}.kind'), flat,
+                                     f'{key}.{name}.')
+
+
+def _stranger(key: str, sections: Collection[str]) -> str:
+    """Return the outermost section around an unknown parameter that is unknown, else itself."""
+    words = key.split('.')
+    around = ('.'.join(words[:count]) for count in range(1, len(words)))
+    return next((name for name in around if name not in sections), key)
+
+
+def _unknown_section(name: str, sections: Collection[str]) -> str:
+    head, _, word = name.rpartition('.')
+    beside = [one.rpartition('.')[2] for one in sections if one.rpartition('.')[0] == head]
+    near = nearest(word, beside) or next(
+        iter(sorted(one for one in sections if one.rpartition('.')[2] == word)), '')
+    hint = f'; did you mean {near}?' if near else '; remove it or see config/evaluate.yaml.'
+    return f'there is no section {cut(name)}{hint}'
 
 
 def _unknown(key: str, settings: type, flat: Mapping[str, Any]) -> str:

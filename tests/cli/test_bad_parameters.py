@@ -75,7 +75,13 @@ TRAPS = {
     'two unknown parameters': (
         put('arm_length_m', 'arm_lenght_m') + '    tine: {window_s: 2.0}\n',
         ('arms.right.operator.arm_lenght_m; did you mean arms.right.operator.arm_length_m?',
-         'there is no parameter tine.window_s; did you mean time.window_s?')),
+         'there is no section tine; did you mean time?')),
+    'misspelt section': (
+        put('        robot:\n', '        robt:\n'),
+        ('evaluator.yaml: there is no section arms.right.robt; did you mean robot?',)),
+    'section in the wrong place': (
+        f'{CONFIG}    robot: {{tip_link: tool, base_link: base}}\n',
+        ('evaluator.yaml: there is no section robot; did you mean arms.left.robot?',)),
     'text for a number': (put('arm_length_m: 0.7', 'arm_length_m: long'),
                           ('arms.right.operator.arm_length_m must be a number',
                            "but is the text 'long'")),
