@@ -98,7 +98,8 @@ class IdealCommand:
                                  f'{arm.arm.mappings[label].kind}: {ideal}; its author must '
                                  'mend it, other mappings are not affected.')
                 continue
-            self.made.add(label)
+            if np.isfinite(ideal.positions_m).any():
+                self.made.add(label)
             for name, track in tracks_of(model, ideal, tracks, robot_joints, arm.robot).items():
                 old = joined.get(name) or Track(
                     np.full(track.values.shape, np.nan), np.zeros(len(here), dtype=bool))

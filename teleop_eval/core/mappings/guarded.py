@@ -25,6 +25,7 @@ from teleop_eval.core.mappings.base import (
     OperatorCells,
 )
 from teleop_eval.core.mappings.registry import BUILT_IN, BrokenKind, known_kinds
+from teleop_eval.core.mappings.sane_values import ARRAYS, NothingGiven, value_fault
 from teleop_eval.core.mappings.settings import MappingSettings
 from teleop_eval.core.sentences import cut, listed, nearest, shown
 
@@ -58,9 +59,9 @@ def make_mapping(label: str, settings: MappingSettings, operator: OperatorGeomet
         settings.fault(label)
         settings.operator_joints()
         return _Foreign(label, settings.kind, kind(label, settings, operator, robot))
-    except TeleopEvalError:
+    except (TeleopEvalError, KeyboardInterrupt):
         raise
-    except Exception as error:
+    except BaseException as error:  # sys.exit() in foreign code must not end the run
         raise ConfigError(f'mapping {label!r} of kind {settings.kind} cannot be modelled, since '
                           f'{kind.__name__} failed ({_said(error)}); correct it or its '
                           'settings.') from error
@@ -88,6 +89,7 @@ class _Foreign(MappingModel):
                     f'{type(model).__name__}.')
         self._model = model
         self._fault = ''
+        self._nothing = NothingGiven()
         self.needs, self.gives = model.needs, model.gives
         self.anchored = bool(model.anchored)
         self.scales_by_arm_lengths = bool(model.scales_by_arm_lengths)
@@ -97,14 +99,18 @@ class _Foreign(MappingModel):
         """Pass it on."""
         try:
             self._model.take_tool_rotation(hand_to_tool.copy())
-        except Exception as error:
+        except KeyboardInterrupt:
+            raise
+        except BaseException as error:
             self._fault = f'take_tool_rotation() raised {_said(error)}'
 
     def restart(self) -> None:
         """Pass it on."""
         try:
             self._model.restart()
-        except Exception as error:
+        except KeyboardInterrupt:
+            raise
+        except BaseException as error:
             self._fault = f'restart() raised {_said(error)}'
 
     def ideal(self, cells: OperatorCells) -> Ideal:
@@ -112,6 +118,10 @@ class _Foreign(MappingModel):
         if self._fault:
             raise _Fault(self._fault)
         return self._model.ideal(_read_only(cells))
+
+    def value_fault(self, ideal: Ideal, cells: OperatorCells) -> str:
+        """Return what is wrong with the numbers of an ideal command, '' if nothing."""
+        return value_fault(ideal) or self._nothing.fault(self, ideal, cells)
 
 
 def _read_only(cells: OperatorCells) -> OperatorCells:
@@ -133,7 +143,9 @@ def checked_fault(settings: MappingSettings, key: str) -> str:
     """Return the sentence of a kind's own check of its settings; its failure is told later."""
     try:
         return str(settings.fault(key) or '')
-    except Exception:
+    except KeyboardInterrupt:
+        raise
+    except BaseException:
         # make_mapping meets it again and makes a problem of it, which costs this mapping only.
         return ''
 
@@ -143,7 +155,9 @@ def checked_operator_joints(settings: MappingSettings) -> tuple[str, ...]:
     try:
         names = settings.operator_joints()
         return tuple(names) if all(isinstance(name, str) for name in names) else ()
-    except Exception:
+    except KeyboardInterrupt:
+        raise
+    except BaseException:
         return ()  # make_mapping meets it again
 
 
@@ -162,14 +176,15 @@ def checked_ideal(model: MappingModel, cells: OperatorCells) -> Ideal | str:
         ideal = model.ideal(cells)
     except _Fault as earlier:
         return str(earlier)
-    except Exception as error:
+    except KeyboardInterrupt:
+        raise
+    except BaseException as error:
         return f'ideal() raised {_said(error)}'
     if not isinstance(ideal, Ideal):
         return f'ideal() returned {type(ideal).__name__} where Ideal is expected'
     count, joints = len(cells), cells.robot_joints.shape[1]
-    for name, width in (('positions_m', 3), ('orientations', 4), ('joints', joints),
-                        ('velocities_mps', 3), ('turn_rates_rad_s', 3),
-                        ('raw_velocities_mps', 3)):
+    for name in ARRAYS:
+        width = {'orientations': 4, 'joints': joints}.get(name, 3)
         value = getattr(ideal, name)
         if value is None and name != 'positions_m':
             continue
@@ -177,7 +192,8 @@ def checked_ideal(model: MappingModel, cells: OperatorCells) -> Ideal | str:
             return f'ideal() returned {name} {fault}'
     if model.gives == VELOCITY and ideal.velocities_mps is None:
         return 'ideal() returned no velocities_mps, although the kind gives velocities'
-    return ideal
+    # What a kind of this package gives is as large as its input, and NaN where that is.
+    return (isinstance(model, _Foreign) and model.value_fault(ideal, cells)) or ideal
 
 
 def _array_fault(value: Any, count: int, width: int) -> str:
@@ -194,7 +210,10 @@ def _array_fault(value: Any, count: int, width: int) -> str:
     return ''
 
 
-def _said(error: Exception) -> str:
+def _said(error: BaseException) -> str:
     """Return an exception of foreign code on one line."""
-    text = ' '.join(str(error).split())
+    try:
+        text = ' '.join(str(error).split())
+    except Exception:
+        text = ''
     return f'{type(error).__name__}: {cut(text)}' if text else type(error).__name__
