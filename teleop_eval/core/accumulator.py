@@ -11,7 +11,7 @@ from teleop_eval.core.budget import BudgetStatistics
 from teleop_eval.core.cell_grid import VisitedCells
 from teleop_eval.core.delays import DelayStatistics
 from teleop_eval.core.frequency_response import FrequencyResponse
-from teleop_eval.core.geometry import OperatorGeometry, RobotGeometry
+from teleop_eval.core.geometry import NO_ROBOT, OperatorGeometry, RobotGeometry
 from teleop_eval.core.histogram import StreamingHistogram
 from teleop_eval.core.joint_range import JointRangeUse
 from teleop_eval.core.manipulability import manipulability_norm
@@ -165,7 +165,6 @@ class MappingAccumulator:
         }
 
     def _without_robot(self) -> dict[str, Metric]:
-        why = 'this arm has no robot description'
         units = {
             'workspace_coverage_robot': '1', 'workspace_overlap': '1',
             'reach_p50_norm': ARM_LENGTHS, 'reach_p95_norm': ARM_LENGTHS,
@@ -173,7 +172,7 @@ class MappingAccumulator:
             'joint_range_use': '1', 'limit_margin_min': '1', 'limit_share': '1',
             'manipulability_min': '1', 'manipulability_p5': '1',
         }
-        return {name: missing(NOT_CONFIGURED, unit, why) for name, unit in units.items()}
+        return {name: missing(NOT_CONFIGURED, unit, NO_ROBOT) for name, unit in units.items()}
 
 
 def _no_operator(unit: str, operator: OperatorGeometry) -> Metric:

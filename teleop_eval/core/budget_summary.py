@@ -7,6 +7,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from teleop_eval.core.budget import PARTS, TERMS
+from teleop_eval.core.geometry import NO_ROBOT
 from teleop_eval.core.metric import (
     INSUFFICIENT,
     NOT_CONFIGURED,
@@ -63,7 +64,7 @@ def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Spa
     delay = _no_delay(measured, index)
     why = dict.fromkeys((*TERMS, 'discrepancy'), delay)
     if arm.robot is None:
-        return dict.fromkeys(why, (NOT_CONFIGURED, 'this arm has no usable robot description'))
+        return dict.fromkeys(why, (NOT_CONFIGURED, NO_ROBOT))
     has_command = measured.latency.has(space.command)
     if not has_command:
         why |= dict.fromkeys(('processing_delay', 'command'),

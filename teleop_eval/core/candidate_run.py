@@ -17,6 +17,7 @@ import numpy as np
 from teleop_eval.core.boundaries import CellStates
 from teleop_eval.core.candidates import NOTE, CandidateAccumulator
 from teleop_eval.core.errors import TeleopEvalError
+from teleop_eval.core.geometry import NO_ROBOT
 from teleop_eval.core.history import Track
 from teleop_eval.core.mapping_input import operator_cells
 from teleop_eval.core.mappings import Anchor, Ideal, MappingModel, OperatorCells, make_mapping
@@ -42,7 +43,7 @@ class CandidateRun:
         self.why_not: dict[str, str] = {}
         for label, mapping in arm.arm.mappings.items():
             if arm.robot is None:
-                self.why_not[label] = 'this arm has no usable robot description'
+                self.why_not[label] = NO_ROBOT
             elif not is_modelled(mapping.kind):
                 self.why_not[label] = NOT_MODELLED
             else:

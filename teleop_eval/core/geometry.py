@@ -22,6 +22,7 @@ from teleop_eval.core.urdf import parse_urdf
 # differ by the relative uncertainty below.
 STATURE_SHARE = {'wrist': 0.332, 'finger_tip': 0.440}
 STATURE_UNCERTAINTY = 0.12
+NO_ROBOT = 'this arm has no usable robot description'
 
 
 @dataclass(frozen=True)

@@ -14,6 +14,7 @@ import numpy as np
 from teleop_eval.core.advice import WORDS, largest_term, plain_words
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.budget import LEAST_DISCREPANCY
+from teleop_eval.core.geometry import NO_ROBOT
 from teleop_eval.core.inputs_status import InputsStatus
 from teleop_eval.core.latency_status import LatencyStatus
 from teleop_eval.core.levels import MarginLevel
@@ -175,7 +176,7 @@ class ArmStatus:
 
     def _why_no_margin(self, now_ns: int, thresholds: ThresholdSettings) -> str:
         if self._arm.robot is None:
-            return 'no limit margin: there is no robot description'
+            return f'no limit margin: {NO_ROBOT}'
         chain = self._arm.robot.chain
         if not np.any(np.isfinite(chain.lower) & np.isfinite(chain.upper)):
             return 'no limit margin: no joint of this arm has limits'

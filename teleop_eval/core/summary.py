@@ -11,6 +11,7 @@ from teleop_eval.core.advice import what_first
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
 from teleop_eval.core.budget_summary import ONLY_VELOCITIES, budget_metrics
+from teleop_eval.core.geometry import NO_ROBOT
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
@@ -178,8 +179,8 @@ def _joint_metrics(arm: ArmEvaluator, accumulator: MappingAccumulator,
         return {name: missing(NOT_CONFIGURED, metric.unit, why)
                 for name, metric in found.items()}
     if len(arm.setup.joint_names) > 1 and UNKNOWN_UNIT in arm.setup.joint_units:
-        why = ('without a robot description nobody knows which joints turn and which slide; '
-               'see the value of each joint')
+        why = (f'{NO_ROBOT}, so nobody knows which joints turn and which slide; see the value '
+               'of each joint')
         found = {name: metric if '.' in name else missing(NOT_CONFIGURED, metric.unit, why)
                  for name, metric in found.items()}
     return found
@@ -214,7 +215,7 @@ def _why_no_ideal(arm: ArmEvaluator, measured: ArmMeasurement, label: str) -> st
         listed = ', '.join(arm.arm.mappings) or 'none'
         return f'mapping {label!r} is not configured (configured: {listed})'
     if arm.robot is None:
-        return 'this arm has no usable robot description'
+        return NO_ROBOT
     if arm.arm.mappings[label].kind == UNMODELLED:
         return NOT_MODELLED
     model = arm.setup.models.get(label)

@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping, Sequence
+from io import StringIO
 from typing import Any
 
 from rich.box import SIMPLE_HEAD
@@ -104,7 +105,12 @@ def print_summary(summary: Mapping[str, Any], *, truth: Mapping[str, Any] | None
     """Print a summary; into a pipe or file as plain text of 80 columns."""
     console = console or Console(highlight=False)
     if not console.is_terminal:
-        console = Console(file=console.file, width=80, highlight=False, color_system=None)
+        text = StringIO()
+        plain = Console(file=text, width=80, highlight=False, color_system=None)
+        plain.print(summary_table(summary, truth=truth))
+        # Tables fill their columns with blanks, which a file need not keep.
+        console.file.writelines(f'{line.rstrip()}\n' for line in text.getvalue().splitlines())
+        return
     console.print(summary_table(summary, truth=truth))
 
 

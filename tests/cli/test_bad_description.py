@@ -75,6 +75,10 @@ def test_a_faulty_description_is_one_sentence_and_costs_its_own_arm_only(
     assert inputs['hand']['messages'] == 400
     assert done.metrics()['direct.engaged_time_s'] == (
         short_sound.metrics()['direct.engaged_time_s'])
+    # One cause has one wording, whichever metric it takes away.
+    assert {metric['reason'].partition(',')[0] for metric in done.metrics().values()
+            if 'robot description' in metric['reason']} == {
+        'this arm has no usable robot description'}
 
 
 def put(old: str, new: str) -> str:

@@ -378,7 +378,7 @@ def test_arms_without_limits_say_so():
     t = syn.clock(0.0, 12.0, 100.0)
     syn.feed(target, syn.Feed().joints('/joints', t, np.zeros((len(t), 2)), ('a', 'b')).messages())
     assert asked(target, 12.0)['workspace'].message == (
-        'no limit margin: there is no robot description')
+        'no limit margin: this arm has no usable robot description')
 
 
 def fed_with(urdf):

@@ -185,10 +185,13 @@ def test_an_incomplete_summary_is_shown_as_far_as_it_goes(document):
 
 def test_a_pipe_gets_plain_text_of_80_columns():
     stream = io.StringIO()
-    print_summary(summary(mirror={'latency_s': metric(0.1)}),
+    print_summary(summary(mirror={'latency_s': metric(0.1, reason='distrust it')}),
                   console=Console(file=stream, width=200, force_terminal=False))
     assert '\x1b' not in stream.getvalue()
-    assert max(map(len, stream.getvalue().splitlines())) <= 80
+    lines = stream.getvalue().splitlines()
+    assert max(map(len, lines)) <= 80
+    assert '(1) distrust it' in lines
+    assert [line for line in lines if line != line.rstrip()] == []
 
 
 @pytest.mark.parametrize(('value', 'shown'), [
