@@ -135,6 +135,9 @@ def test_mapping_kinds_and_predictions_do_not_grow_with_the_run():
         # Had nothing come of a mapping, nothing could grow.
         assert accumulator.budget.samples > 200, index
         assert accumulator.responses['latency_s'].result().segments >= 10
+        # Shares and RMS in at most 40 batches each; responses as above.
+        assert size_of(accumulator.budget) < 60_000, index
+        assert size_of(accumulator.responses) < 360_000, index
     for label, one in measured.ideal.candidates._candidates.items():
         assert one.accumulator is not None and one.accumulator._visited.samples > 200, label
         assert len(one._anchors) <= 1, label
