@@ -22,6 +22,10 @@ _UNITS = {'arm lengths': 'arm lengths', 'arm lengths/s': 'arm lengths/s'}
 _JOINTS = "the mapping's own geometry (joint offsets, or links of unlike lengths)"
 # A static part above this share of the power is called an offset.
 _OFFSET_SHARE = 0.5
+# Two motions of one chain that agree less than this are hardly cause and effect.
+LEAST_AGREEMENT = 0.8
+# What a command is off by, in arm lengths, that no filter of a usable stack explains.
+_LARGE = 0.1
 
 
 def largest_term(metrics: Mapping[str, Metric], suffix: str = '_norm', *,
@@ -34,7 +38,8 @@ def largest_term(metrics: Mapping[str, Metric], suffix: str = '_norm', *,
 
 
 def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float | None],
-                cancels: str = '', suffix: str = '_norm', has_command: bool = True) -> str:
+                cancels: str = '', suffix: str = '_norm', has_command: bool = True,
+                but: str = '') -> str:
     """
     Return the largest term in plain words, '' if there is none.
 
@@ -48,9 +53,11 @@ def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float |
         Term that the largest one partly cancels, '' if its share is positive.
     has_command
         Whether the robot's delay is that behind a command, not behind the ideal command.
+    but
+        Term that is left out.
 
     """
-    name = largest_term(metrics, suffix)
+    name = largest_term(metrics, suffix, but=but)
     if not name:
         return ''
     metric = metrics[f'budget_{name}_rms{suffix}']
@@ -63,6 +70,24 @@ def plain_words(metrics: Mapping[str, Metric], *, delays_s: Mapping[str, float |
     if cancels:
         text += f'; partly cancels {WORDS[cancels]}'
     return text
+
+
+def meant_apart(*, clutched: bool, suffix: str) -> str:
+    """Return the term that clutching leaves on purpose, '' if there is none."""
+    return 'mapping' if clutched and suffix == '_norm' else ''
+
+
+def little_agreement(latency: Metric) -> str:
+    """Return the doubt about a delay from motions that are hardly alike, '' if there is none."""
+    if latency.value is None or not _agrees_little(latency):
+        return ''
+    return (f'the two motions agree little (correlation {latency.details["correlation"]:.2f}): '
+            'is the mapping configured as the stack applies it?')
+
+
+def _agrees_little(latency: Metric | None) -> bool:
+    correlation = None if latency is None else latency.details.get('correlation')
+    return isinstance(correlation, float) and correlation < LEAST_AGREEMENT
 
 
 def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm', *,
@@ -84,7 +109,7 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
 
     """
     total = metrics.get(f'discrepancy_rms{suffix}')
-    meant = 'mapping' if clutched and suffix == '_norm' else ''
+    meant = meant_apart(clutched=clutched, suffix=suffix)
     name = largest_term(metrics, suffix, but=meant)
     if not name:
         residual = metrics.get(f'budget_residual_rms{suffix}')
@@ -109,6 +134,7 @@ def what_first(label: str, metrics: Mapping[str, Metric], suffix: str = '_norm',
     aside += _unknown(total, metrics, suffix)
     what = (_JOINTS if name == 'mapping' and between_joints
             else _what(name, metrics, suffix))
+    part += _not_those_of_the_stack(name, metrics, suffix, between_joints=between_joints)
     return (f'{label}: fix first {what}, which is {metric.number:.3f} '
             f'{metric.unit} RMS{part}; {_how_sure(name, metrics, suffix, but=meant)}{aside}.')
 
@@ -139,6 +165,29 @@ def _what(name: str, metrics: Mapping[str, Metric], suffix: str) -> str:
         return ('the time the robot takes to follow'
                 + _milliseconds(metrics, 'latency_response_s' if has_command else 'latency_s'))
     return "the robot's following beside its delay (servo lag, limits, noise)"
+
+
+def _not_those_of_the_stack(name: str, metrics: Mapping[str, Metric], suffix: str, *,
+                            between_joints: bool) -> str:
+    """
+    Return that the mapping may be configured wrongly, '' if nothing speaks for that.
+
+    What is wrong with the model looks like a fault of what follows it: of the command, or of
+    the robot where no command is known.
+    """
+    command = metrics.get('budget_command_rms' + suffix)
+    followed = 'residual' if command is None or command.value is None else 'command'
+    if name != followed:
+        return ''
+    latency = metrics.get('latency_command_s' if followed == 'command' else 'latency_s')
+    large = suffix == '_norm' and metrics[f'budget_{name}_rms{suffix}'].number > _LARGE
+    if not large and not _agrees_little(latency):
+        return ''
+    if between_joints:
+        what = 'joints, signs, scales or offsets'
+    else:
+        what = 'axes, scale or centre' if suffix == '_norm' else 'axes, gain, dead band or cap'
+    return f', or {what} in the parameter file are not those of the stack: check them first'
 
 
 def _unknown(total: Metric | None, metrics: Mapping[str, Metric], suffix: str) -> str:

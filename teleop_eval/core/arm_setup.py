@@ -205,4 +205,6 @@ def silent_inputs(name: str, intakes: Mapping[str, Intake],
     for role, state in states.items():
         if state.latest is None:
             found[role] = f'{name}: no message came on {state.topic} ({role}); {_WITHOUT[role]}.'
+        elif role == 'engaged' and not state.ever_true:
+            found[role] = f'{name}: {state.topic} (engaged) was never true; {_WITHOUT[role]}.'
     return found

@@ -222,9 +222,10 @@ class _Magnitude:
 _NO_SAMPLE = (INSUFFICIENT, 'no engaged and settled sample')
 
 
-def window_metrics(cells: Terms, *, suffix: str = '_norm',
-                   unit: str = 'arm lengths') -> dict[str, Metric]:
-    """Return the RMS of discrepancy and terms over one window."""
+def window_metrics(cells: Terms, *, suffix: str = '_norm', unit: str = 'arm lengths',
+                   details: Mapping[str, Mapping[str, object]] | None = None,
+                   ) -> dict[str, Metric]:
+    """Return the RMS of discrepancy and terms over one window, with the `details` of each."""
     found = {}
     named = {f'budget_{name}': values for name, values in cells.terms.items()}
     if cells.discrepancy is not None:
@@ -235,7 +236,8 @@ def window_metrics(cells: Terms, *, suffix: str = '_norm',
             found[key] = missing(*_no_sample(unit))
             continue
         square = float(np.mean(np.sum(values * values, axis=1)))
-        found[key] = Metric(math.sqrt(square), unit, None, 1, len(values))
+        more = {} if details is None else details.get(name.removeprefix('budget_'), {})
+        found[key] = Metric(math.sqrt(square), unit, None, 1, len(values), details=dict(more))
     return found
 
 

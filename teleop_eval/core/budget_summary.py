@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from teleop_eval.core.budget import PARTS, TERMS
 from teleop_eval.core.geometry import NO_ROBOT
+from teleop_eval.core.mappings.base import HAND
 from teleop_eval.core.metric import (
     INSUFFICIENT,
     NOT_CONFIGURED,
@@ -16,6 +17,7 @@ from teleop_eval.core.metric import (
     joined,
     missing,
 )
+from teleop_eval.core.silence import never_came
 from teleop_eval.core.window_budget import POSITION, VELOCITY, Space
 
 if TYPE_CHECKING:
@@ -40,11 +42,13 @@ def budget_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int, *, n
     why = _reasons(arm, measured, index, space, no_ideal)
     found = accumulator.budget.metrics(why=why)
     uncertainty = arm.operator.scale_uncertainty
+    scaled = _with_arm_length(arm, measured, index, space)
     for name, metric in found.items():
         if metric.value is None:
             continue
-        if uncertainty is not None and space is POSITION and name.startswith(
-                ('discrepancy_', 'budget_mapping_')):
+        # Every share is one of a discrepancy from the operator.
+        whole = 'discrepancy' if name.endswith('_share') else name
+        if uncertainty is not None and whole.startswith(scaled):
             metric.details['scale_uncertainty'] = uncertainty
         if caveat:
             found[name] = Metric(metric.value, metric.unit, metric.ci95, metric.n,
@@ -58,6 +62,25 @@ def budget_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int, *, n
     return found
 
 
+def _with_arm_length(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
+                     space: Space) -> tuple[str, ...]:
+    """
+    Return the beginnings of the metrics that change with the operator's arm length.
+
+    u_o always holds it, the ideal command under a mapping that scales by it.
+    """
+    model = arm.setup.models.get(arm.boundaries.labels[index])
+    by_model = model is not None and model.scales_by_arm_lengths and model.needs == HAND
+    terms: list[str] = []
+    if by_model:
+        terms += ['processing_delay', 'command']
+        if not measured.latency.has(space.command):
+            terms += ['response_delay', 'residual']
+    if by_model or space is POSITION:
+        terms.append('mapping')
+    return (*(['discrepancy'] if 'mapping' in terms else []), *(f'budget_{one}' for one in terms))
+
+
 def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Space,
              no_ideal: str) -> dict[str, tuple[str, str]]:
     """Return status and reason of what could not be formed, by term and for the whole."""
@@ -66,13 +89,15 @@ def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Spa
     if arm.robot is None:
         return dict.fromkeys(why, (NOT_CONFIGURED, NO_ROBOT))
     has_command = measured.latency.has(space.command)
+    no_command = _why_no_command(arm, space)
     if not has_command:
-        why |= dict.fromkeys(('processing_delay', 'command'),
-                             (NOT_CONFIGURED, _why_no_command(arm, space)))
+        why |= dict.fromkeys(('processing_delay', 'command'), no_command)
     if no_ideal:
-        # Without a command either there is nothing that drives the robot.
-        lost = (*_OF_MODEL, 'discrepancy') if has_command else (*TERMS, 'discrepancy')
-        why |= dict.fromkeys(lost, (NOT_CONFIGURED, no_ideal))
+        why |= dict.fromkeys((*_OF_MODEL, 'discrepancy'), (NOT_CONFIGURED, no_ideal))
+        if not has_command:
+            # There is nothing that drives the robot.
+            why |= dict.fromkeys(('response_delay', 'residual'), no_command
+                                 if no_command[0] == INSUFFICIENT else (NOT_CONFIGURED, no_ideal))
     elif space is POSITION and not measured.latency.has('u_o'):
         lacking = arm.operator.missing or 'operator.hand_topic'
         why |= dict.fromkeys(('mapping', 'discrepancy'),
@@ -80,14 +105,17 @@ def _reasons(arm: ArmEvaluator, measured: ArmMeasurement, index: int, space: Spa
     return why
 
 
-def _why_no_command(arm: ArmEvaluator, space: Space) -> str:
+def _why_no_command(arm: ArmEvaluator, space: Space) -> tuple[str, str]:
+    """Return status and reason of what there is no command for."""
     command = arm.arm.command
     if command.topic is None:
-        return 'command.topic is not configured'
+        return NOT_CONFIGURED, 'command.topic is not configured'
+    if never := never_came(arm, ('command',)):
+        return INSUFFICIENT, never
     if space is POSITION:
-        return f'{command.topic} gives no tool position'
-    held = command.hold and not arm.intakes['command'].velocities
-    return f'{command.topic} gives no tool velocity' + (
+        return NOT_CONFIGURED, f'{command.topic} gives no tool position'
+    held = command.hold and 'command' in arm.intakes and not arm.intakes['command'].velocities
+    return NOT_CONFIGURED, f'{command.topic} gives no tool velocity' + (
         ', since positions that are held (command.hold) only step' if held else '')
 
 

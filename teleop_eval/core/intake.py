@@ -181,7 +181,8 @@ class Intake:
         lacking = [axis for axis in self._joy_axes if axis >= len(sample.axes)]
         if lacking:
             self.problem(f'operator.joy_axes names axis {lacking[0]}, but a message has '
-                         f'{len(sample.axes)} axes, counted from 0; correct it, -1 for none')
+                         f'{len(sample.axes)} axes, counted from 0; set operator.joy_axes to the '
+                         'axes for x, y, z, rx, ry, rz, with -1 for each that the stick lacks')
             return []
         values = np.array([0.0 if axis == _NO_AXIS else float(sample.axes[axis])
                            for axis in self._joy_axes])

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 _TRACKS = {'hand': ('hand',), 'operator_joints': ('operator_joints',),
            'rate_input': ('rate_input',), 'robot_joints': ('q_r',),
            'command': ('q_c', 'u_c', 'w_c')}
+_RESPONSES = ('bandwidth', 'phase_delay', 'coherent_up_to')
 # What begins so is made of these inputs, 'ideal' being the operator's; the first match counts.
 _MADE_OF = (
     ('latency_command_', ('ideal', 'command')), ('latency_response_', ('command', 'robot_joints')),
@@ -33,8 +34,13 @@ _MADE_OF = (
     ('workspace_coverage_robot', ('robot_joints',)), ('joint_range_', ('robot_joints',)),
     ('limit_', ('robot_joints',)), ('manipulability_', ('robot_joints',)),
     ('discrepancy_', ('ideal', 'robot_joints')), ('budget_', ('ideal', 'command', 'robot_joints')),
+    *((f'{begin}_response_', ('command', 'robot_joints')) for begin in _RESPONSES),
+    *((f'{begin}_', ('ideal', 'robot_joints')) for begin in _RESPONSES),
 )
 _REACHES = ('reach_', 'hull_volume_')
+# What is split without a command where none ever came.
+_WITHOUT_COMMAND = ('budget_mapping_', 'budget_response_delay_', 'budget_residual_')
+NO_ORIENTATION = "the hand's messages have no orientation"
 
 
 class Heard:
@@ -47,7 +53,7 @@ class Heard:
     def add(self, history: History, usable: np.ndarray) -> None:
         """Add the newest cells of the history, where they are usable (m,)."""
         self.usable += int(np.count_nonzero(usable))
-        for role, names in _TRACKS.items():
+        for role, names in (*_TRACKS.items(), ('hand_turn', ('hand_turn',))):
             tracks = [track for name in names
                       if (track := history.last(name, len(usable))) is not None]
             self.cells[role] += max(
@@ -63,6 +69,9 @@ def inputs_of(arm: ArmEvaluator, label: str, metric: str) -> tuple[str, ...]:
     model = arm.setup.models.get(label)
     ideal = 'hand' if model is None else model.needs
     named = [ideal if role == 'ideal' else role for role in roles]
+    if metric.startswith(_WITHOUT_COMMAND) and (command := arm.intakes.get('command')) and (
+            not command.stream.matched):
+        named.remove('command')
     # Without a topic of its own the hand follows from the operator's joints.
     return tuple('operator_joints' if role == 'hand' and role not in arm.intakes else role
                  for role in named)
@@ -87,6 +96,27 @@ def no_clutch(arm: ArmEvaluator) -> str:
     return f'no message came on {state.topic} (engaged), so no time counts as engaged'
 
 
+def never_engaged(arm: ArmEvaluator) -> str:
+    """Return that the configured clutch never was engaged, '' if it was or there is none."""
+    state = arm.states.get('engaged')
+    if state is None or state.ever_true:
+        return ''
+    return no_clutch(arm) or f'{state.topic} was never true, so no time counts as engaged'
+
+
+def no_orientation(arm: ArmEvaluator, label: str, metric: str, heard: Heard) -> str:
+    """Return that only the hand's orientation is lacking for a metric, '' if it is not so."""
+    model = arm.setup.models.get(label)
+    if model is None or 'hand' not in inputs_of(arm, label, metric) or (
+            not heard.cells['hand'] or heard.cells['hand_turn']):
+        return ''
+    if not metric.startswith('orientation_error_') and not (
+            model.turns_move and any('ideal' in roles for begin, roles in _MADE_OF
+                                     if metric.startswith(begin))):
+        return ''
+    return NO_ORIENTATION
+
+
 def why_no_sample(arm: ArmEvaluator, roles: Sequence[str], heard: Heard, *,
                   where: str = '') -> str:
     """
@@ -94,7 +124,7 @@ def why_no_sample(arm: ArmEvaluator, roles: Sequence[str], heard: Heard, *,
 
     `where` is put behind a sentence on a part of the run.
     """
-    if never := no_clutch(arm):
+    if never := never_engaged(arm):
         return never
     if never := never_came(arm, roles):
         return never
@@ -120,7 +150,8 @@ def explained(metrics: Mapping[str, Metric], arm: ArmEvaluator, label: str, hear
     for name, metric in metrics.items():
         roles = inputs_of(arm, label, name)
         if metric.status == INSUFFICIENT and not metric.samples and roles and (
-                why := why_no_sample(arm, roles, heard, where=where)):
+                why := why_no_sample(arm, roles, heard, where=where)
+                or no_orientation(arm, label, name, heard)):
             metric = dataclasses.replace(metric, reason=why)
         found[name] = metric
     return found

@@ -11,7 +11,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from teleop_eval.core.advice import WORDS, largest_term, plain_words
+from teleop_eval.core.advice import WORDS, largest_term, meant_apart, plain_words
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.budget import LEAST_DISCREPANCY
 from teleop_eval.core.geometry import NO_ROBOT
@@ -141,7 +141,9 @@ class ArmStatus:
             metric = metrics.get(f'budget_{term}_rms{space.suffix}')
             if metric is not None and metric.value is not None:
                 values[f'{words} RMS ({space.unit})'] = f'{metric.value:.4f}'
-        largest = largest_term(metrics, space.suffix)
+        model = self._arm.setup.models.get(self._arm.boundaries.labels[measured.label])
+        meant = meant_apart(clutched=model is not None and model.anchored, suffix=space.suffix)
+        largest = largest_term(metrics, space.suffix, but=meant)
         if not largest:
             return ''
         cancels = measured.accumulators[measured.label].budget.cancels(largest)
@@ -149,7 +151,7 @@ class ArmStatus:
         ends = 'hand and tool' if space is POSITION else 'input and tool'
         return (f'between {ends} ' if largest == 'mapping' else '') + 'mostly ' + plain_words(
             metrics, delays_s=measured.delays_s, cancels=cancels, suffix=space.suffix,
-            has_command=measured.latency.has(space.command))
+            has_command=measured.latency.has(space.command), but=meant)
 
     def _workspace(self, now_ns: int, thresholds: ThresholdSettings) -> StatusLine:
         measured = self._arm.measurement

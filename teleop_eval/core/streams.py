@@ -301,9 +301,11 @@ class HeldState:
     _times: list[int] = field(default_factory=list)
     _values: list[object] = field(default_factory=list)
     _dropped: int = 0
+    ever_true: bool = False
 
     def add(self, receive_ns: int, value: object, watermark_ns: int | None) -> None:
         """Take a new value; a late one holds from the watermark on."""
+        self.ever_true |= value is True
         if self._values and self._values[-1] == value:
             return
         time_ns = receive_ns + self.offset_ns

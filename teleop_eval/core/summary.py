@@ -4,10 +4,11 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 from teleop_eval.core.accumulator import MappingAccumulator
-from teleop_eval.core.advice import what_first
+from teleop_eval.core.advice import little_agreement, what_first
 from teleop_eval.core.arm import ArmEvaluator
 from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
 from teleop_eval.core.budget_summary import ONLY_VELOCITIES, budget_metrics
@@ -15,7 +16,14 @@ from teleop_eval.core.geometry import NO_ROBOT
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.measure import ArmMeasurement
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
+from teleop_eval.core.metric import (
+    INSUFFICIENT,
+    NOT_CONFIGURED,
+    UNOBSERVABLE,
+    Metric,
+    joined,
+    missing,
+)
 from teleop_eval.core.reachable_cells import ReachableSet
 from teleop_eval.core.response_summary import response_metrics
 from teleop_eval.core.silence import explained, inputs_of, never_came, no_clutch
@@ -105,8 +113,12 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
         if pairs[name] is None:
             found[name] = _no_pair(arm, name, label, no_ideal)
         else:
-            found[name] = delay.metric(
+            metric = delay.metric(
                 caveat=caveat, reason='the run is shorter than a latency window')
+            if model is not None and name in ('latency_s', 'latency_command_s') and (
+                    doubt := little_agreement(metric)):
+                metric = replace(metric, reason=joined(metric.reason, doubt))
+            found[name] = metric
     unknown = _why_no_delay(accumulator)
     reach = 1.0 if arm.robot is None else arm.robot.reach.length_m
     space = measured.space(index)
@@ -151,6 +163,10 @@ def mapping_metrics(arm: ArmEvaluator, measured: ArmMeasurement, index: int,
                                                      arm.operator.lacking)
         and has_input('hand', arm.intakes, arm.operator),
         has_ideal=no_ideal or (ONLY_VELOCITIES if space is VELOCITY else ''))
+    if not no_ideal and model is not None and model.scales_by_arm_lengths and (
+            model.needs == HAND and found['workspace_overlap'].value is not None
+            and arm.operator.scale_uncertainty is not None):
+        found['workspace_overlap'].details['scale_uncertainty'] = arm.operator.scale_uncertainty
     if no_ideal and no_ideal == arm.operator.lacking:
         found = {name: missing(INSUFFICIENT, metric.unit, no_ideal)
                  if metric.reason == no_ideal else metric for name, metric in found.items()}

@@ -8,7 +8,14 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from teleop_eval.core.budget import NO_SAMPLE, Positions, Terms, split, window_metrics
+from teleop_eval.core.budget import (
+    NO_SAMPLE,
+    TERMS,
+    Positions,
+    Terms,
+    split,
+    window_metrics,
+)
 from teleop_eval.core.delays import Observed
 from teleop_eval.core.history import History, Track
 from teleop_eval.core.metric import INSUFFICIENT, Metric, missing
@@ -109,8 +116,24 @@ def window_budget(history: History, latency: WindowLatency, span: Span, label: i
     terms = split(Positions(at(operator), at(ideal), at(ideal_late), at(command),
                             at(driver_late), robot.values[kept]))
     return WindowBudget(
-        terms, window_metrics(terms, suffix=space.suffix, unit=space.unit),
+        terms, window_metrics(terms, suffix=space.suffix, unit=space.unit,
+                              details=_delays(seen)),
         {term: one.delay_s for term, one in seen.items()})
+
+
+def _delays(seen: dict[str, Observed]) -> dict[str, dict[str, object]]:
+    """
+    Return the delay of each term and its age, as details.
+
+    Discrepancy and mapping are those of a split at both delays, hence at their sum.
+    """
+    whole = Observed(sum(one.delay_s for one in seen.values()),
+                     max(one.age_s for one in seen.values()))
+    of = dict.fromkeys(('discrepancy', *TERMS), whole)
+    of['response_delay'] = of['residual'] = seen['response_delay']
+    of['command'] = of['processing_delay'] = seen.get('processing_delay', whole)
+    return {name: {'delay_s': one.delay_s, 'delay_age_s': one.age_s}
+            for name, one in of.items()}
 
 
 def _formed(latency: WindowLatency, space: Space) -> list[str]:

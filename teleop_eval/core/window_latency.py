@@ -19,7 +19,7 @@ from teleop_eval.core.latency import DelayEstimate, DelaySettings, Sides, estima
 from teleop_eval.core.mappings.base import VELOCITY as GIVES_VELOCITY
 from teleop_eval.core.mappings.unmodelled import NOT_MODELLED, UNMODELLED
 from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, UNOBSERVABLE, Metric, missing
-from teleop_eval.core.silence import Heard, inputs_of, never_came, why_no_sample
+from teleop_eval.core.silence import Heard, inputs_of, never_came, no_orientation, why_no_sample
 from teleop_eval.core.window import Span
 
 if TYPE_CHECKING:
@@ -195,6 +195,8 @@ class WindowLatency:
         heard.add(history, history.usable[last] & (history.label[last] == label))
         why = why_no_sample(self._arm, self._roles(name, label), heard,
                             where=' in the latency window')
+        why = why or no_orientation(
+            self._arm, self._arm.boundaries.labels[label], name, heard)
         return dataclasses.replace(estimate, reason=why) if why else estimate
 
     def _roles(self, name: str, label: int) -> tuple[str, ...]:

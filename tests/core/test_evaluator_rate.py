@@ -95,7 +95,8 @@ def test_joystick_axes_are_picked_and_missing_ones_named() -> None:
     feed(lacking, Feed().sticks('/stick', t[:300], axes).messages())
     assert lacking.problems == [
         'right: rate_input (/stick): operator.joy_axes names axis 5, but a message has 5 axes, '
-        'counted from 0; correct it, -1 for none (300 times).']
+        'counted from 0; set operator.joy_axes to the axes for x, y, z, rx, ry, rz, with -1 for '
+        'each that the stick lacks (300 times).']
 
 
 def test_a_joystick_button_is_the_clutch() -> None:

@@ -113,7 +113,8 @@ def test_clutch_that_never_came_pretends_no_zero():
 def test_open_clutch_is_zero_seconds_and_no_clutch_is_all_the_time():
     found, _, _ = run(full(12.0).flag(0.0, '/engaged', False), **CLUTCH)
     assert (found['engaged_time_s']['value'], found['engaged_time_s']['status']) == (0.0, 'ok')
-    assert found['tracking_error_rms_norm']['reason'] == 'no engaged and settled sample'
+    assert found['tracking_error_rms_norm']['reason'] == (
+        '/engaged was never true, so no time counts as engaged')
     found, _, _ = run(full(12.0))
     assert found['engaged_time_s']['value'] == pytest.approx(12.0, abs=0.03)
     assert 'engaged.topic is not configured, so all time' in found['engaged_time_s']['reason']

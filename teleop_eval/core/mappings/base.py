@@ -116,6 +116,8 @@ class MappingModel:
         True if it needs the poses at the beginning of each engagement.
     scales_by_arm_lengths
         True if the operator's arm length enters, so that its uncertainty does.
+    turns_move
+        True if there are no positions without the hand's orientation.
     estimates_tool_rotation
         True if hand-to-tool is not configured and must be estimated from motion.
 
@@ -127,6 +129,7 @@ class MappingModel:
     gives: str = POSE
     anchored: bool = False
     scales_by_arm_lengths: bool = False
+    turns_move: bool = False
     estimates_tool_rotation: bool = False
 
     def __init__(self, label: str, settings: MappingSettings, operator: OperatorGeometry,

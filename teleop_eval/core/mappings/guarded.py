@@ -93,6 +93,7 @@ class _Foreign(MappingModel):
         self.needs, self.gives = model.needs, model.gives
         self.anchored = bool(model.anchored)
         self.scales_by_arm_lengths = bool(model.scales_by_arm_lengths)
+        self.turns_move = bool(model.turns_move)
         self.estimates_tool_rotation = bool(model.estimates_tool_rotation)
 
     def take_tool_rotation(self, hand_to_tool: np.ndarray) -> None:

@@ -62,7 +62,7 @@ class RelativeMapping(MappingModel):
         self._axes = operator.axes
         self._scale = scale_of(label, settings, operator, robot)
         self.scales_by_arm_lengths = settings.normalized
-        self._in_tool = settings.frame == TOOL
+        self._in_tool = self.turns_move = settings.frame == TOOL
         given = settings.hand_to_tool_xyzw or (0.0, 0.0, 0.0, 1.0)
         self._hand_to_tool = rotations.normalize(np.array(given))
 
