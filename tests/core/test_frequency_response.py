@@ -279,3 +279,25 @@ def test_joining_batches_loses_no_segment():
     assert 20 <= len(sizes) <= 40 and sum(sizes) == 4001.0
     # All as long as each other but the last.
     assert len(set(sizes[:-1])) == 1 and 0.5 * sizes[0] <= sizes[-1] <= 1.5 * sizes[0]
+
+
+def test_what_chance_reaches_with_few_segments_is_not_coherent():
+    """
+    Unrelated motions, two segments that do not overlap: chance alone exceeds 0.8 often.
+
+    P(coherence > c) = (1 - c)^(n - 1) for n independent segments: 20 % at c = 0.8 and n = 2,
+    and 1 % at the null level, which then mostly lies above 0.8.
+    """
+    by_chance = 0
+    for seed in range(5):
+        x, _ = motion(402, seed, dimensions=1)
+        y, _ = motion(402, seed + 100, dimensions=1)
+        result = measured(x, y).result()
+        assert np.median(result.null_level) > 0.8 and result.segments == 2
+        chance = (result.coherence > 0.8) & (result.coherence <= result.null_level)
+        by_chance += int(np.count_nonzero(chance))
+        assert not result.coherent[chance].any()
+        np.testing.assert_array_equal(
+            result.coherent, (result.coherence > np.maximum(0.8, result.null_level))
+            & (result.gain_h1 > 0.0) & (result.gain_h2 > 0.0))
+    assert by_chance > 5
