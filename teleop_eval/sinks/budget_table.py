@@ -34,6 +34,7 @@ ROWS = {
 }
 PARTS = ('rms', 'static', 'varying')
 LEGEND = 'static: mean; varying: RMS about it; shares of all parts add up, RMS do not'
+OF_BOTH = 'without commands: delay from operator to robot, mapping and robot together'
 # A share nearer to zero than this is not worth a word on what it cancels.
 LEAST_CANCELLED = 0.005
 
@@ -65,6 +66,8 @@ def _table(label: str, metrics: Mapping[str, Any], remarks: Remarks) -> Table:
         table.add_column(name, justify='right', width=width, overflow='fold')
     for start, title in ROWS.items():
         row: list[RenderableType] = [Text(title)]
+        if start == 'budget_response_delay' and _from_operator(metrics, end):
+            row = [Text(f'{title} {remarks.mark(OF_BOTH)}')]
         row += [_cell(metrics.get(f'{start}_{part}{end}'), remarks, short=part != 'rms')
                 for part in PARTS]
         there = as_mapping(metrics.get(f'{start}_rms{end}')).get('status') == 'ok'
@@ -72,6 +75,14 @@ def _table(label: str, metrics: Mapping[str, Any], remarks: Remarks) -> Table:
                    _cell(metrics.get(f'{start}_share'), remarks, short=not there, percent=True))
         table.add_row(*row)
     return table
+
+
+def _from_operator(metrics: Mapping[str, Any], end: str) -> bool:
+    """Tell whether the robot's delay is that behind the ideal command, for want of another."""
+    there = {name for name in (f'budget_response_delay_rms{end}', f'budget_command_rms{end}',
+                               'latency_response_s')
+             if as_mapping(metrics.get(name)).get('status') == 'ok'}
+    return there == {f'budget_response_delay_rms{end}'}
 
 
 def _cell(metric: Any, remarks: Remarks, *, short: bool = False, percent: bool = False) -> Text:

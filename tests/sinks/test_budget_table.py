@@ -119,6 +119,20 @@ def test_a_part_that_cannot_be_formed_has_its_reason_once():
     assert shown.count(NO_TOPIC) == 2
 
 
+def test_without_a_command_the_response_delay_is_said_to_be_that_of_both():
+    note = 'without commands: delay from operator to robot, mapping and robot together'
+    shown = text(summary(reach=without_command()))
+    assert table(shown)['response delay'][0] == '(2)'
+    assert f'(2) {note}' in ' '.join(shown.split())
+    assert max(map(len, shown.splitlines())) <= 80
+    # With commands, whether or not there is a model, it is that of the robot alone.
+    unmodelled = without_command() | {'latency_response_s': metric(0.1, 's')}
+    nothing = {name: gone(of['unit'], 'unobservable', 'no delay')
+               for name, of in without_command().items()}
+    for other in (budget(), unmodelled, nothing):
+        assert note not in ' '.join(text(summary(reach=other)).split())
+
+
 @pytest.mark.parametrize('status', ['unobservable', 'insufficient'])
 def test_a_budget_without_a_delay_says_so(status):
     why = 'no delay could be observed to split the discrepancy by'
