@@ -9,6 +9,8 @@ moved otherwise under this one. Every metric here carries `predicted: true` in i
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
+
 import numpy as np
 
 from teleop_eval.core import workspace
@@ -19,19 +21,49 @@ from teleop_eval.core.geometry import RobotGeometry
 from teleop_eval.core.histogram import StreamingHistogram
 from teleop_eval.core.inverse_kinematics import PathSolver, orientation_possible, pull_share
 from teleop_eval.core.joint_range import MARGIN_MIN, JointRangeUse
+from teleop_eval.core.joint_speed import MAX as SPEED_MAX
+from teleop_eval.core.joint_speed import P95 as SPEED_P95
 from teleop_eval.core.joint_speed import JointSpeedDemand
 from teleop_eval.core.manipulability import manipulability_norm
 from teleop_eval.core.mappings.base import Ideal
-from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, Metric, joined, missing
+from teleop_eval.core.metric import INSUFFICIENT, NOT_CONFIGURED, OK, Metric, joined, missing
 from teleop_eval.core.reachable_cells import ReachableSet
 from teleop_eval.core.tracking import ARM_LENGTHS, MagnitudeStatistics
 
 NOTE = 'Predicted from the recorded motion, without the adaptation of the operator.'
+# What tells how postures are chosen where several reach a pose.
+POSTURE_RULE = (
+    'Where a mapping gives tool poses, postures begin near the one in which the robot was in the '
+    'first cell that counts, and are the nearest to the one before, drawn back to that first one '
+    'within 2 s where the pose leaves a choice.')
+_MIDDLE = ('postures begin at the middle of the joint ranges, since that of the robot was not '
+           'measured')
 _BEYOND = 1e-9
 _NOTHING = 'The mapping gives no ideal command for any cell that counts.'
 _NO_LIMITS = 'No joint of this arm has position limits.'
 _NO_SEARCH = ('The mapping gives the joints themselves; what the arm cannot do is in '
               'limit_violation_share.')
+_NO_HOLD = ('The mapping gives the joints themselves and nothing holds them at their limits; '
+            'limit_violation_share tells how often they lie beyond.')
+_NO_VIOLATION = ('Postures for tool poses are searched inside the limits only; see at_limit_share '
+                 'and not_reached_share.')
+# Metrics that depend on the posture taken for a pose.
+_OF_POSTURES = ('not_reached_share', 'at_limit_share', SPEED_P95, SPEED_MAX, MARGIN_MIN,
+                'manipulability_min', 'manipulability_p5')
+
+
+@dataclass(frozen=True, eq=False)
+class Start:
+    """
+    Where the postures of a prediction begin.
+
+    `posture` (n,): measured in the first usable cell of the recording that has one, in the order
+    of the chain; None to begin at the middle of the joint ranges. `cell`: of the window, before
+    which it is not known and no posture is searched.
+    """
+
+    posture: np.ndarray | None = None
+    cell: int = 0
 
 
 class CandidateAccumulator:
@@ -39,9 +71,11 @@ class CandidateAccumulator:
     Adds up one arm's prediction under one mapping, in bounded memory.
 
     A mapping between joints gives the postures; any other gives tool poses, and inverse
-    kinematics (`PathSolver`) the postures. Where a pose is out of reach, the closest posture
-    counts for limits and manipulability, but not for joint speed, and neither does a step to
-    another branch. Workspace use is that of the ideal command, also beyond reach.
+    kinematics (`PathSolver`) the postures: they begin near the posture that the robot had in the
+    first cell that counts and are drawn to it, since an arm stays in its branch. Where a pose is
+    out of reach, the closest posture counts for limits and manipulability, but not for joint
+    speed, and neither does a step to another branch. Workspace use is that of the ideal command,
+    also beyond reach.
 
     Parameters
     ----------
@@ -66,9 +100,10 @@ class CandidateAccumulator:
         self._robot, self._velocity = robot, gives_velocity
         self._asked_to_turn = with_orientation
         self._turns = with_orientation and orientation_possible(chain)
-        self._solver = None if between_joints else PathSolver(
-            chain, reach_m=robot.reach.length_m, with_orientation=self._turns,
-            pull=pull_share(period_s))
+        self._between, self._period_s = between_joints, period_s
+        # Made when it is known where the robot is.
+        self._solver: PathSolver | None = None
+        self._measured = False
         turning = np.array([kind == CONTINUOUS for kind in chain.kinds], dtype=bool)
         # A locked joint is always at its limits, which says nothing.
         self._limited = chain.lower < chain.upper
@@ -90,10 +125,16 @@ class CandidateAccumulator:
         """Begin anew after cells that were not fed; nothing is bridged."""
         self._speed.restart()
         if self._solver is not None:
-            self._solver.restart()
+            self._solver.interrupt()
+
+    @property
+    def followed_s(self) -> float:
+        """Return for how long postures were searched, s."""
+        return self._asked * self._period_s
 
     def add(self, ideal: Ideal, *, usable: np.ndarray, run: np.ndarray,
-            robot_joints: np.ndarray, operator: np.ndarray | None = None) -> None:
+            robot_joints: np.ndarray, operator: np.ndarray | None = None,
+            start: Start = Start()) -> None:
         """
         Add one window, which follows the last one without a gap unless `restart` came between.
 
@@ -110,6 +151,8 @@ class CandidateAccumulator:
         operator
             (m, 3) normalised positions u_o, arm lengths, or for a mapping that gives velocities
             their rates, arm lengths per second; NaN where there is none. None without them.
+        start
+            Where postures begin; after the first search it has no effect.
 
         """
         positions = ideal.positions_m
@@ -119,10 +162,22 @@ class CandidateAccumulator:
         self._visited.add(u)
         self._reach.add(np.linalg.norm(u[np.isfinite(u).all(axis=1)], axis=1))
         self._compare(ideal, u, operator, np.asarray(usable, dtype=bool))
-        if self._solver is None:
+        if self._between:
             self._take_joints(ideal, good, run)
         else:
-            self._follow(self._solver, ideal, good, run)
+            asked = good & (np.arange(len(good)) >= start.cell)
+            if asked.any() or self._asked:
+                self._follow(self._begun(start), ideal, asked, run)
+
+    def _begun(self, start: Start) -> PathSolver:
+        if self._solver is None:
+            chain, rest = self._robot.chain, start.posture
+            self._measured = rest is not None
+            self._solver = PathSolver(
+                chain, reach_m=self._robot.reach.length_m, with_orientation=self._turns,
+                rest=None if rest is None else np.clip(rest, chain.lower, chain.upper),
+                pull=pull_share(self._period_s))
+        return self._solver
 
     def _compare(self, ideal: Ideal, u: np.ndarray, operator: np.ndarray | None,
                  usable: np.ndarray) -> None:
@@ -175,7 +230,7 @@ class CandidateAccumulator:
 
     def metrics(self, reachable: ReachableSet | None = None, *,
                 no_operator: str = 'needs operator positions in arm lengths',
-                ) -> dict[str, Metric]:
+                postures: str = '') -> dict[str, Metric]:
         """
         Return the predictions by name.
 
@@ -185,6 +240,8 @@ class CandidateAccumulator:
             What the robot can reach, for its coverage.
         no_operator
             Reason why there is nothing to compare with, where there is not.
+        postures
+            What is to be said of the metrics that depend on the postures.
 
         """
         engaged = self._visited.duration_s
@@ -193,11 +250,17 @@ class CandidateAccumulator:
             self._visited, reachable, engaged_s=engaged)
         found |= workspace.reach_metrics(
             self._reach, blocks=self._visited.blocks, engaged_s=engaged)
-        found['limit_violation_share'] = self._limit_metric()
+        found |= self._limit_metrics()
         found['not_reached_share'] = self._lost_metric()
         found |= self._speed.metrics()
         found[MARGIN_MIN] = self._range.metrics()[MARGIN_MIN]
         found |= self._manipulability_metrics()
+        begun = _MIDDLE if self._asked and not self._measured else ''
+        if caveat := joined(postures, begun):
+            for name in _OF_POSTURES:
+                if found[name].status == OK:
+                    found[name] = replace(
+                        found[name], reason=joined(caveat, found[name].reason))
         for metric in found.values():
             metric.details['predicted'] = True
         return found
@@ -218,6 +281,13 @@ class CandidateAccumulator:
                 'A mapping that gives velocities is compared by velocities.')
         return found
 
+    def _limit_metrics(self) -> dict[str, Metric]:
+        """Return the share beyond a limit, which only a mapping between joints has, or at it."""
+        other, why = (('at_limit_share', _NO_HOLD) if self._between
+                      else ('limit_violation_share', _NO_VIOLATION))
+        name = 'limit_violation_share' if self._between else 'at_limit_share'
+        return {name: self._limit_metric(), other: missing(NOT_CONFIGURED, '1', why)}
+
     def _limit_metric(self) -> Metric:
         if not self._limited.any():
             return missing(NOT_CONFIGURED, '1', _NO_LIMITS)
@@ -227,13 +297,11 @@ class CandidateAccumulator:
         shares = {name: int(cells) / self._postures for name, cells, limited in zip(
             names, self._limit_cells, self._limited, strict=True) if limited}
         fault = max(shares, key=shares.__getitem__)
-        means = ('a joint lies beyond its limit' if self._solver is None
-                 else 'a joint is held at its limit')
         return self._share(self._limit, self._postures, {
-            'joints': shares, 'joint': fault if shares[fault] > 0.0 else None, 'means': means})
+            'joints': shares, 'joint': fault if shares[fault] > 0.0 else None})
 
     def _lost_metric(self) -> Metric:
-        if self._solver is None:
+        if self._between:
             return missing(NOT_CONFIGURED, '1', _NO_SEARCH)
         if not self._asked:
             return missing(INSUFFICIENT, '1', _NOTHING)

@@ -98,8 +98,10 @@ class PathSolver:
     would lead outward.
 
     Targets that no path leads to (the first one, one more than 0.1 L or 0.5 rad from the last,
-    and the first that cannot be followed) are tried from up to 72 seeded starts, and the
-    posture nearest to the last one is taken. While targets stay out of reach the closest
+    one after `interrupt`, and the first that cannot be followed) are tried from up to 72 seeded
+    starts, whole turns of a joint apart as its limits let it. The first posture is the one
+    found nearest to `rest`, of which one is where a straight way of the tool from `rest` leads;
+    any other the one nearest to the last. While targets stay out of reach the closest
     posture is followed, in the least-squares sense of |position error / L|^2 + |angle|^2, and
     24 other starts are tried at every 50th target: up to 49 targets that another branch could
     reach may then be called out of reach. The same targets give the same postures, however
@@ -114,8 +116,9 @@ class PathSolver:
     with_orientation
         Follow poses instead of positions; only where `orientation_possible`.
     rest
-        (n,) posture to pull to, rad or m; by default the middle of the limits, and 0 for joints
-        without limits.
+        (n,) posture to begin near and to pull to, rad or m: that of the robot at the beginning,
+        where it is known, since an arm reaches a pose with several postures and stays in its
+        own. By default the middle of the limits, and 0 for joints without limits.
     pull
         Share per target, 0 to 1; see `pull_share`.
 
@@ -151,6 +154,7 @@ class PathSolver:
         self._scaled = ScaledChain(chain, reach_m, with_orientation=with_orientation)
         self._rest = self.rest / self._scaled.scale
         self._endless = np.array([kind == CONTINUOUS for kind in chain.kinds])
+        self._whole = _same_after_a_turn(chain)
         self._pool = StartPool(self._scaled, self._rest, seed=_SEED)
         self.restart()
 
@@ -158,6 +162,11 @@ class PathSolver:
         """Forget the last posture: the next target begins a path of its own."""
         self._posture: Posture | None = None
         self._target: Target | None = None
+        self._failing = 0
+
+    def interrupt(self) -> None:
+        """Note that the next target does not follow the last one; the posture is kept."""
+        self._target = None
         self._failing = 0
 
     def solve(self, positions: npt.ArrayLike,
@@ -245,7 +254,8 @@ class PathSolver:
 
     def _first(self, target: Target) -> End:
         """Return the posture of the first target, settled near the rest."""
-        end = self._searched(target, self._rest[None, :], self._rest)
+        also = np.stack([self._rest, self._walked(target)])
+        end = self._searched(target, also, self._rest)
         for _ in range(100):
             if not end.converged:
                 break
@@ -258,11 +268,32 @@ class PathSolver:
                 break
         return end
 
+    def _walked(self, target: Target) -> Array:
+        """Return where a straight way of the tool from the rest leads, as far as it can."""
+        posture = self._scaled.at(self._rest)
+        apart = target.position - posture.position
+        parts = float(np.linalg.norm(apart)) / (0.5 * FAR * self._scaled.reach_m)
+        first, turn = posture, np.zeros(3)
+        if target.rotation is not None:
+            turn = rotation_vector(target.rotation.dot(first.rotation.T))
+            parts = max(parts, float(np.linalg.norm(turn)) / (0.5 * FAR_TURN))
+        count = math.ceil(parts)
+        for part in range(1, count + 1):
+            left = part / count - 1.0
+            back = rotations.to_matrix(rotations.exp(left * turn))
+            end = follow(self._scaled, posture, Target(
+                target.position + left * apart,
+                None if target.rotation is None else back.dot(target.rotation)), posture.y)
+            if not end.converged:
+                break
+            posture = end.posture
+        return posture.y
+
     def _searched(self, target: Target, also: Array, anchor: Array, *,
                   rounds: int = ROUNDS) -> End:
         """Return the reached posture nearest to the anchor, else the closest one found."""
         found = self._pool.search(target, also, rounds=rounds)
-        reached = found.reached
+        reached = self._unwound(found.reached, anchor)
         order = np.argsort(np.linalg.norm(reached - anchor, axis=1), kind='stable')
         for y in reached[order]:
             start = self._scaled.at(y)
@@ -272,6 +303,13 @@ class PathSolver:
             if end.converged:
                 return end
         return closest(self._scaled, self._scaled.at(found.best), target, self._rest)
+
+    def _unwound(self, y: Array, anchor: Array) -> Array:
+        """Return postures (k, n) with each joint at the whole turn nearest to the anchor."""
+        turn = 2.0 * math.pi
+        turns = np.clip(np.round((anchor - y) / turn), np.ceil((self._scaled.lower - y) / turn),
+                        np.floor((self._scaled.upper - y) / turn))
+        return np.asarray(np.where(self._whole, y + turn * turns, y))
 
     def _pulled(self, y: Array, share: float) -> Array:
         rest = self._rest
@@ -297,6 +335,14 @@ def _middle(chain: SerialChain) -> Array:
     limited = np.isfinite(chain.lower) & np.isfinite(chain.upper)
     low, high = np.where(limited, chain.lower, 0.0), np.where(limited, chain.upper, 0.0)
     return np.asarray(np.clip(0.5 * (low + high), chain.lower, chain.upper))
+
+
+def _same_after_a_turn(chain: SerialChain) -> Mask:
+    """Return which variables (n,) turn joints that are where they were after a whole turn."""
+    same = ~np.asarray(chain.prismatic, dtype=bool)
+    for step in chain.steps:
+        same[step.variable] &= not step.prismatic and float(step.factor).is_integer()
+    return same
 
 
 def _norm(error: Array) -> float:

@@ -34,7 +34,7 @@ _ORDER = {key: place for place, key in enumerate((
     'name', 'version', 'python', 'libraries',
     'condition', 'operator', 'start_ns', 'end_ns', 'duration_s', 'source',
     'time_base', 'grid', 'segments', 'geometry', 'inputs', 'mappings', 'candidates',
-    'prediction', 'why_not', 'advice',
+    'prediction', 'why_not', 'postures', 'orientation', 'caveats', 'advice',
     'base', 'topic', 'messages', 'rate_hz',
     'metrics', 'value', 'unit', 'ci95', 'n', 'samples', 'status', 'reason', 'details'))}
 

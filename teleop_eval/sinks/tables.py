@@ -46,7 +46,7 @@ FAMILIES = (
     ('tracking_error_', 'orientation_error_', 'turn_rate_error_', 'joint_error_'),
     ('predicted_',),
     ('workspace_', 'reach_', 'hull_', 'not_reached_', 'joint_range_', 'joint_speed_', 'limit_',
-     'manipulability_'),
+     'at_limit_', 'manipulability_'),
     ('engaged_time_', 'engagements', 'engagement_'),
 )
 # Left to metrics.csv: what repeats a row in other words or says little on its own.
@@ -174,8 +174,16 @@ def _candidates(of_arm: Mapping[str, Any]) -> list[RenderableType]:
     remarks, labels = Remarks(), list(known)
     for start in range(0, len(labels), CANDIDATES_ABREAST):
         shown = {label: known[label] for label in labels[start:start + CANDIDATES_ABREAST]}
-        parts += [Text('')] * (start > 0) + [_table(shown, {}, remarks)]
+        table = _table(shown, {}, remarks)
+        if any(one.get('orientation') for one in shown.values()):
+            table.add_row('orientation of the tool', '', *(
+                _orientation(str(one.get('orientation', '')), remarks) for one in shown.values()))
+        parts += [Text('')] * (start > 0) + [table]
     parts += remarks.lines()
+    rules = dict.fromkeys(str(one['postures']) for one in known.values() if one.get('postures'))
+    parts += [listed('-', clean(rule, LONGEST_SENTENCE)) for rule in rules]
+    parts += [listed('-', f'{clean(label)}: {clean(str(note), LONGEST_SENTENCE)}')
+              for label, one in known.items() for note in one.get('caveats') or ()]
     parts += [listed('-', f'{clean(label)}: not predicted: '
                      + clean(str(one['why_not']), LONGEST_SENTENCE))
               for label, one in candidates.items() if one.get('why_not')]
@@ -191,6 +199,15 @@ def _why_nothing(of_arm: Mapping[str, Any]) -> str:
     if not silent:
         return 'Nothing was evaluated: too few usable messages came.'
     return f'Nothing was evaluated: no message came on {", ".join(silent)}.'
+
+
+def _orientation(said: str, remarks: Remarks) -> Text:
+    """Return in a word whether the tool's orientation is predicted, and mark why not."""
+    words = re.split(r'[:,]', said, maxsplit=1)[0]
+    if not said:
+        return Text(NO_ENTRY)
+    return Text(clean(words)) if words == said else Text(
+        f'{clean(words)} {remarks.mark(clean(said, LONGEST_SENTENCE))}', style='yellow')
 
 
 def _nowhere(metrics: Any, name: str) -> bool:

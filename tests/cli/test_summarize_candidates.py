@@ -68,7 +68,8 @@ def test_every_configured_mapping_is_predicted(summarize):
     assert set(found) == {'direct', 'bent', 'far', 'vendor'}
     assert list(arm).index('candidates') == list(arm).index('mappings') + 1
     for of in found.values():
-        assert list(of) == ['prediction', 'why_not', 'metrics']
+        assert list(of) == ['prediction', 'why_not', 'postures', 'orientation', 'caveats',
+                            'metrics']
         assert 'without the adaptation of the operator' in of['prediction']
         assert all(metric['details']['predicted'] for metric in of['metrics'].values())
     assert {label: bool(of['why_not']) for label, of in found.items()} == {
@@ -82,6 +83,9 @@ def test_every_configured_mapping_is_predicted(summarize):
     for label, offset in (('direct', 0.0), ('bent', OFFSET)):
         assert value[label, 'limit_violation_share'] == pytest.approx(
             np.mean(abs(elbow + offset) > LIMIT_RAD), abs=0.003)
+        assert value[label, 'at_limit_share'] is None
+    assert value['far', 'limit_violation_share'] is None
+    assert value['far', 'at_limit_share'] is not None
     assert value['bent', 'limit_violation_share'] > 0.3
     assert value['far', 'predicted_discrepancy_rms_norm'] == pytest.approx(
         (SCALE - 1.0) * np.sqrt(np.mean(reach(elbow) ** 2)), abs=0.01)
@@ -100,7 +104,12 @@ def test_every_configured_mapping_is_predicted(summarize):
     assert max(map(len, done.out.splitlines())) <= 80
     shown = done.out.partition('Candidate mappings')[2]
     assert 'without the adaptation of the operator' in shown
-    assert re.search(r'^not_reached_share .* 0\.\d+$', shown, re.MULTILINE)
+    assert re.search(
+        r'^orientation of the tool +by the joints +by the joints$', shown,
+        re.MULTILINE)
+    assert re.search(r'^orientation of the tool +positions only \(\d\)$', shown, re.MULTILINE)
+    assert 'postures begin near the one in which the robot was' in ' '.join(shown.split())
+    assert re.search(r'^not_reached_share .* 0\.\d+ \(\d\)$', shown, re.MULTILINE)
     assert "- vendor: not predicted: the stack's mapping is not modelled" in shown
 
 

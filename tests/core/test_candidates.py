@@ -11,7 +11,7 @@ import pytest
 from numpy.testing import assert_allclose
 
 from teleop_eval.core import rotations
-from teleop_eval.core.candidates import CandidateAccumulator
+from teleop_eval.core.candidates import CandidateAccumulator, Start
 from teleop_eval.core.cell_grid import CellGrid
 from teleop_eval.core.geometry import RobotGeometry
 from teleop_eval.core.kinematics import SerialChain
@@ -74,7 +74,7 @@ def predicted(
     arm: RobotGeometry, ideal: Ideal, *, windows: int = 7, operator: np.ndarray | None = None,
     usable: np.ndarray | None = None, run: np.ndarray | None = None,
     robot_joints: np.ndarray | None = None, reachable: ReachableSet | None = None,
-    restarts: tuple[int, ...] = (), **options: bool,
+    restarts: tuple[int, ...] = (), measured: bool = True, **options: bool,
 ) -> dict[str, Metric]:
     count = len(ideal.positions_m)
     between = ideal.joints is not None
@@ -93,7 +93,8 @@ def predicted(
             ideal.positions_m[of], part(ideal.orientations, of), part(ideal.joints, of),
             velocities_mps=part(ideal.velocities_mps, of))
         candidate.add(piece, usable=usable[of], run=run[of], robot_joints=joints[of],
-                      operator=part(operator, of))
+                      operator=part(operator, of),
+                      start=Start(joints[0]) if measured else Start())
     return candidate.metrics(reachable)
 
 
@@ -115,7 +116,8 @@ def test_a_circle_about_the_shoulder_asks_the_first_joint_alone() -> None:
     assert found['manipulability_min'].value == pytest.approx(w, rel=1e-3)
     assert found['manipulability_p5'].value == pytest.approx(w, rel=1e-3)
     assert found['not_reached_share'].value == 0.0
-    assert found['limit_violation_share'].value == 0.0
+    assert found['at_limit_share'].value == 0.0
+    assert found['limit_violation_share'].status == 'not_configured'
     assert found['reach_p95_norm'].value == pytest.approx(radius / REACH, rel=1e-3)
     assert all(metric.details['predicted'] is True for metric in found.values())
 
@@ -146,6 +148,7 @@ def test_a_mapping_between_joints_needs_no_search() -> None:
     beyond = np.mean(np.abs(joints[:, 0]) > 3.1)
     assert found['limit_violation_share'].value == pytest.approx(beyond, abs=1e-12)
     assert 0.1 < beyond < 0.4
+    assert found['at_limit_share'].status == 'not_configured'
     assert found['limit_violation_share'].details['joint'] == 'q0'
     assert found['limit_violation_share'].details['joints'] == pytest.approx(
         {'q0': beyond, 'q1': 0.0})
@@ -184,8 +187,9 @@ def test_time_at_a_limit_is_the_share_for_tool_mappings() -> None:
     radius = np.concatenate([np.linspace(0.5, 0.25, 150), np.full(50, 0.25)])
     found = predicted(planar(low=-2.0, high=2.0), Ideal(circle(radius, 0.0 * radius)))
     share = np.mean(radius < hole)
-    assert found['limit_violation_share'].value == pytest.approx(share, abs=1e-12)
-    assert found['limit_violation_share'].details['joints']['q1'] == pytest.approx(share)
+    assert found['at_limit_share'].value == pytest.approx(share, abs=1e-12)
+    assert found['limit_violation_share'].status == 'not_configured'
+    assert found['at_limit_share'].details['joints']['q1'] == pytest.approx(share)
     assert found['not_reached_share'].value == pytest.approx(share, abs=1e-12)
     assert found['limit_margin_min'].value == 0.0
 
@@ -195,7 +199,7 @@ def test_a_locked_joint_is_not_at_a_limit() -> None:
     arm = robot((kind, Z, '0 0 0'), (kind, Z, f'{L1} 0 0'), (kind, Z, f'{L2} 0 0'),
                 tool='0.1 0 0', reach=0.65)
     arm.chain.lower[2] = arm.chain.upper[2] = 0.4
-    found = predicted(arm, Ideal(circle(0.45, 0.2 * seconds(2.0))))['limit_violation_share']
+    found = predicted(arm, Ideal(circle(0.45, 0.2 * seconds(2.0))))['at_limit_share']
     assert found.value == 0.0
     assert set(found.details['joints']) == {'q0', 'q1'}
 
@@ -336,12 +340,51 @@ def test_missing_limits_and_missing_motion_have_reasons() -> None:
     arm = robot(('continuous', Z, '0 0 0'), ('continuous', Z, f'{L1} 0 0'), tool=f'{L2} 0 0',
                 velocity=0.0)
     found = predicted(arm, Ideal(circle(0.4, 0.2 * seconds(2.0))))
-    for name in ('joint_speed_demand_p95', 'joint_speed_demand_max', 'limit_violation_share',
+    for name in ('joint_speed_demand_p95', 'joint_speed_demand_max', 'at_limit_share',
                  'limit_margin_min'):
         assert found[name].status == 'not_configured', name
         assert found[name].reason
     nothing = predicted(planar(), Ideal(np.full((50, 3), np.nan)), operator=np.zeros((50, 3)))
     for name, metric in nothing.items():
-        if name != 'workspace_coverage_robot':
+        if name not in ('workspace_coverage_robot', 'limit_violation_share'):
             assert metric.status == 'insufficient', name
         assert metric.reason
+
+
+def test_postures_begin_in_the_branch_of_the_robot() -> None:
+    """A two-link arm has its elbow on either side; the prediction takes the measured one."""
+    angle = 0.5 * np.sin(seconds(6.0))
+    cosine = (0.4 ** 2 - L1 ** 2 - L2 ** 2) / (2.0 * L1 * L2)
+    for sign in (1.0, -1.0):
+        arm = planar(low=-2.0, high=2.6)
+        bent = np.tile([0.0, sign * math.acos(cosine)], (len(angle), 1))
+        found = predicted(arm, Ideal(circle(0.4, angle)), robot_joints=bent)
+        elbow = sign * math.acos(cosine)
+        joints = np.stack([angle - math.atan2(
+            L2 * math.sin(elbow), L1 + L2 * math.cos(elbow)), 0.0 * angle + elbow])
+        margin = np.minimum(joints + 2.0, 2.6 - joints).min() / 4.6
+        assert found['limit_margin_min'].value == pytest.approx(margin, abs=1e-6)
+        assert found['limit_margin_min'].reason == ''
+
+
+def test_an_unknown_posture_is_told_with_what_depends_on_it() -> None:
+    angle = 0.5 * np.sin(seconds(2.0))
+    found = predicted(planar(), Ideal(circle(0.4, angle)), measured=False)
+    said = ('postures begin at the middle of the joint ranges, since that of the robot was not '
+            'measured')
+    assert {name for name, one in found.items() if said in one.reason} == {
+        'not_reached_share', 'at_limit_share', 'joint_speed_demand_p95',
+        'joint_speed_demand_max', 'limit_margin_min', 'manipulability_min', 'manipulability_p5'}
+
+
+def test_no_posture_is_searched_before_the_robot_was_seen() -> None:
+    arm, count = planar(), 100
+    candidate = CandidateAccumulator(arm, period_s=PERIOD, between_joints=False)
+    bent = np.array([0.0, -1.0])
+    for cell in (50, 20, 0):
+        candidate.add(Ideal(circle(0.4, np.linspace(0.0, 0.1, 50))),
+                      usable=np.ones(50, dtype=bool), run=np.zeros(50, dtype=np.int64),
+                      robot_joints=np.zeros((50, 2)),
+                      start=Start(None if cell == 50 else bent, cell))
+    assert candidate.metrics()['not_reached_share'].samples == 80
+    assert candidate.metrics()['reach_max_norm'].samples == count + 50
