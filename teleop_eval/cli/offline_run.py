@@ -17,6 +17,7 @@ from teleop_eval.cli.progress import Progress
 from teleop_eval.cli.recorded_inputs import RecordedInputs
 from teleop_eval.core.errors import InputError, OutputError, TeleopEvalError
 from teleop_eval.core.evaluator import EVENT_TOPIC, SessionEvaluator
+from teleop_eval.core.outcome import unevaluated
 from teleop_eval.core.settings import Settings
 from teleop_eval.sinks import messages
 from teleop_eval.sinks.session_folder import SessionFolder
@@ -123,12 +124,14 @@ class OfflineRun:
                 elif nothing := inputs.nothing():
                     failures.append(nothing)
                 losses = recording.losses
+                summary = evaluator.finish(explained=inputs.explained())
+                if not failures and (nothing := unevaluated(summary)):
+                    failures.append(nothing)
                 whole = self._finish(
-                    evaluator, folder,
+                    evaluator, folder, summary,
                     problems=[*inputs.problems, *failures, *losses, *inputs.malformed()],
                     notes=[note for note in recording.notes
-                           if note not in losses and not inputs.is_said(note)],
-                    explained=inputs.explained())
+                           if note not in losses and not inputs.is_said(note)])
             return Outcome(folder.path, whole, complete=not failures)
 
     def _feed(self, recording: Recording, inputs: RecordedInputs, evaluator: SessionEvaluator,
@@ -180,10 +183,13 @@ class OfflineRun:
         except OutputError as error:
             self._failure = self._failure or error
 
-    def _finish(self, evaluator: SessionEvaluator, folder: SessionFolder, *,
-                problems: list[str], notes: list[str], explained: set[str]) -> dict[str, Any]:
+    def _finish(self, evaluator: SessionEvaluator, folder: SessionFolder,
+                summary: dict[str, Any], *, problems: list[str],
+                notes: list[str]) -> dict[str, Any]:
         """
         Write what there is, whatever went wrong before; return the whole summary.
+
+        `summary` is the evaluator's, which is finished.
 
         Raises
         ------
@@ -191,7 +197,6 @@ class OfflineRun:
             When something could not be written, now or on the way.
 
         """
-        summary = evaluator.finish(explained=explained)
         self._windows(evaluator, folder)
         try:
             whole = folder.finish(

@@ -38,7 +38,8 @@ A session folder that the live node wrote with session.record_inputs needs no --
 exit status
   0  evaluated. Problems of the data (an absent topic, NaN, a cut recording, clocks that are
      not synchronised, ...) are printed and stand in summary.json under "problems"
-  1  nothing could be evaluated, a result could not be written, or interrupted
+  1  nothing could be evaluated (no metric has a value under any mapping), a result could not
+     be written, or interrupted
   2  usage
 
 Motion recordings are personal data: keep them, and what is computed from them, as your

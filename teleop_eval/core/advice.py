@@ -7,6 +7,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 from teleop_eval.core.budget import LEAST_DISCREPANCY, TERMS
+from teleop_eval.core.mappings.unmodelled import NO_MAPPING
 from teleop_eval.core.metric import NOT_CONFIGURED, Metric
 from teleop_eval.core.sentences import listed
 
@@ -194,6 +195,8 @@ def _unknown(total: Metric | None, metrics: Mapping[str, Metric], suffix: str) -
     """Return of which terms nothing is known, and why, '' if that does not spoil the sum."""
     if total is None or total.status != NOT_CONFIGURED:
         return ''
+    if total.reason.startswith(NO_MAPPING):  # then the rest was never asked for
+        return f'; {total.reason}'
     terms = [WORDS[name] for name in TERMS
              if (metric := metrics.get(f'budget_{name}_rms{suffix}')) is not None
              and metric.value is None and metric.reason == total.reason]

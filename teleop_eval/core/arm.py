@@ -11,12 +11,13 @@ segment; what has been accumulated stays.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Callable, Collection
 
 import numpy as np
 
 from teleop_eval.core import arm_setup
-from teleop_eval.core.arm_setup import ArmSetup
+from teleop_eval.core.arm_setup import DESCRIPTION, OPERATOR_DESCRIPTION, ArmSetup, undescribed
 from teleop_eval.core.boundaries import Boundaries
 from teleop_eval.core.calibration_interval import CalibrationInterval
 from teleop_eval.core.errors import TeleopEvalError
@@ -37,7 +38,6 @@ from teleop_eval.core.transport_age import TransportAge
 
 # An arm whose description does not come is evaluated without it after this time.
 DESCRIPTION_WAIT_NS = 30_000_000_000
-DESCRIPTION, OPERATOR_DESCRIPTION = 'description', 'operator_description'
 _WHOSE = {DESCRIPTION: 'robot', OPERATOR_DESCRIPTION: 'operator'}
 
 
@@ -96,6 +96,7 @@ class ArmEvaluator:
         self.measurement: ArmMeasurement | None = None
         self.observe_joint_errors: Callable[[str, JointErrors], None] | None = None
         self.described: dict[str, str] = {}
+        self.unused: Counter[str] = Counter()  # messages without an intake, by role
         self.frozen_streams: list[SampledStream] = []
         self.next_check_ns = NEVER_NS
         self._waiting: list[tuple[str, int, Sample]] = []
@@ -106,7 +107,7 @@ class ArmEvaluator:
         for role, text in ((DESCRIPTION, urdf), (OPERATOR_DESCRIPTION, operator_urdf)):
             if text is not None:
                 self._describe(role, text)
-        if not self._undescribed():
+        if not undescribed(self.arm, self.described):
             self._make_ready()
 
     def add(self, role: str, receive_ns: int, sample: Sample) -> None:
@@ -121,7 +122,10 @@ class ArmEvaluator:
             self._add_state(self.states[role], receive_ns, sample)
         elif role in (DESCRIPTION, OPERATOR_DESCRIPTION):
             self._add_description(role, receive_ns, sample)
-        elif not self._ready:
+        else:
+            self.unused[role] += 1
+            if self._ready:
+                return
             self._waiting.append((role, receive_ns, sample))
             if receive_ns - self._waiting[0][1] > DESCRIPTION_WAIT_NS:
                 self._say_undescribed(f' within {DESCRIPTION_WAIT_NS // 10 ** 9} s')
@@ -210,7 +214,7 @@ class ArmEvaluator:
         self._describe(role, sample.text)
         if self._ready:
             self._begin_anew(f'the {whose} description came')
-        elif not self._undescribed():
+        elif not undescribed(self.arm, self.described):
             self._make_ready()
 
     def _describe(self, role: str, urdf: str) -> None:
@@ -226,13 +230,6 @@ class ArmEvaluator:
             text = str(error)
             end = '' if text.endswith(('.', '?')) else '.'
             self.problems.say(f'{self.name}: {text}{end}')
-
-    def _undescribed(self) -> dict[str, str]:
-        """Return by role the topics on which a description has not come yet."""
-        topics = {DESCRIPTION: self.arm.robot.description_topic,
-                  OPERATOR_DESCRIPTION: self.arm.operator.description_topic}
-        return {role: topic for role, topic in topics.items()
-                if topic and role not in self.described}
 
     def _begin_anew(self, reason: str) -> None:
         """Drop the metrics: nothing measured before fits to what is measured from now on."""
@@ -279,6 +276,7 @@ class ArmEvaluator:
                 intake.problems = before[role].problems
         self._ready = True
         waiting, self._waiting = self._waiting, []
+        self.unused.subtract(role for role, _, _ in waiting)
         for role, receive_ns, sample in waiting:
             self.add(role, receive_ns, sample)
 
@@ -384,7 +382,7 @@ class ArmEvaluator:
                 self.problems.say(sentence)
 
     def _say_undescribed(self, within: str, explained: Collection[str] = ()) -> None:
-        for role, topic in self._undescribed().items():
+        for role, topic in undescribed(self.arm, self.described).items():
             if role not in explained:
                 self.problems.say(f'{self.name}: no {_WHOSE[role]} description came on '
                                   f'{topic}{within}; evaluated without it.')

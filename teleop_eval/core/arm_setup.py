@@ -4,7 +4,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 
 from teleop_eval.core.description import CONTINUOUS
@@ -16,12 +16,13 @@ from teleop_eval.core.mappings import MappingModel, MappingSettings, make_mappin
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
 from teleop_eval.core.mappings.guarded import checked_operator_joints
 from teleop_eval.core.mappings.registry import is_modelled
-from teleop_eval.core.mappings.unmodelled import UNMODELLED
+from teleop_eval.core.mappings.unmodelled import NO_MAPPING, UNMODELLED
 from teleop_eval.core.samples import BoolSample, JoySample, Sample, TextSample
 from teleop_eval.core.sentences import listed, nearest, shown
 from teleop_eval.core.settings import ArmSettings
 from teleop_eval.core.streams import HeldState, SampledStream
 
+DESCRIPTION, OPERATOR_DESCRIPTION = 'description', 'operator_description'
 # Without a description nobody knows which joints turn and which slide.
 UNKNOWN_UNIT = 'rad or m'
 _WITHOUT = {'engaged': 'no time counts as engaged',
@@ -104,6 +105,21 @@ def _evaluated_joints(name: str, arm: ArmSettings, robot: RobotGeometry | None,
     return moving if lacking else given
 
 
+def sampled_topics(arm: ArmSettings) -> dict[str, str]:
+    """Return the configured topics that carry what is measured, by role."""
+    topics = {'hand': arm.operator.hand_topic, 'shoulder': arm.operator.shoulder_topic,
+              RATE_INPUT: arm.operator.rate_topic, 'operator_joints': arm.operator.joints_topic,
+              'robot_joints': arm.robot.joints_topic, 'command': arm.command.topic}
+    return {role: topic for role, topic in topics.items() if topic}
+
+
+def undescribed(arm: ArmSettings, described: Collection[str]) -> dict[str, str]:
+    """Return by role the topics on which a description has not come yet."""
+    topics = {DESCRIPTION: arm.robot.description_topic,
+              OPERATOR_DESCRIPTION: arm.operator.description_topic}
+    return {role: topic for role, topic in topics.items() if topic and role not in described}
+
+
 def fixed_label(arm: ArmSettings) -> str | None:
     """Return the mapping that holds all the time, None if a topic tells it."""
     if arm.active_mapping.topic:
@@ -111,6 +127,16 @@ def fixed_label(arm: ArmSettings) -> str | None:
     if arm.active_mapping.fixed:
         return arm.active_mapping.fixed
     return next(iter(arm.mappings)) if len(arm.mappings) == 1 else UNMODELLED
+
+
+def no_mapping(arm: ArmSettings) -> str:
+    """Return what follows from an arm without any mapping, '' if it has one."""
+    if arm.mappings:
+        return ''
+    operator = arm.operator.hand_role or arm.operator.rate_topic
+    return f'{NO_MAPPING}, so ' + (
+        'only command against robot is judged' if arm.command.topic and not operator
+        else 'there is no ideal command')
 
 
 def state_value(role: str, sample: Sample, button: int) -> bool | str | None:
@@ -165,22 +191,17 @@ def _foreign_unit(name: str, key: str, joint: str, known: tuple[str, ...]) -> st
 def _make_intakes(name: str, arm: ArmSettings, setup: ArmSetup,
                   operator: OperatorGeometry) -> None:
     commanded = arm.command.joint_order or setup.joint_names
-    topics = {
-        'hand': (arm.operator.hand_topic, None),
-        'shoulder': (arm.operator.shoulder_topic, None),
-        RATE_INPUT: (arm.operator.rate_topic, None),
-        'operator_joints': (arm.operator.joints_topic, JointMatcher(
+    matchers = {
+        'operator_joints': JointMatcher(
             setup.operator_joint_names, arm.operator.joints,
-            turning=frozenset() if operator.arm is None else operator.arm.turning)),
-        'robot_joints': (arm.robot.joints_topic,
-                         JointMatcher(setup.joint_names, arm.robot.joints,
-                                      turning=setup.turning)),
-        'command': (arm.command.topic, JointMatcher(commanded, arm.command.joints,
-                                                    turning=setup.turning)),
+            turning=frozenset() if operator.arm is None else operator.arm.turning),
+        'robot_joints': JointMatcher(setup.joint_names, arm.robot.joints, turning=setup.turning),
+        'command': JointMatcher(commanded, arm.command.joints, turning=setup.turning),
     }
     lacking = [joint for joint in setup.joint_names if joint not in commanded]
-    for role, (topic, matcher) in topics.items():
-        if topic is None or (matcher is not None and not matcher.names):
+    for role, topic in sampled_topics(arm).items():
+        matcher = matchers.get(role)
+        if matcher is not None and not matcher.names:
             continue
         if role == 'command' and lacking:
             setup.problems.append(

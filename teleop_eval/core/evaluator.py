@@ -15,7 +15,8 @@ from dataclasses import dataclass
 from types import MappingProxyType
 from typing import Any
 
-from teleop_eval.core.arm import DESCRIPTION, OPERATOR_DESCRIPTION, ArmEvaluator
+from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.arm_setup import DESCRIPTION, OPERATOR_DESCRIPTION
 from teleop_eval.core.calibration_interval import CalibrationInterval
 from teleop_eval.core.operator_settings import operator_key
 from teleop_eval.core.reachable_cells import ReachableCells, ReachableSet

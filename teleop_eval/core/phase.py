@@ -6,7 +6,8 @@ from __future__ import annotations
 
 from collections.abc import Collection, Sequence
 
-from teleop_eval.core.arm import DESCRIPTION, OPERATOR_DESCRIPTION, ArmEvaluator
+from teleop_eval.core.arm import ArmEvaluator
+from teleop_eval.core.arm_setup import DESCRIPTION, OPERATOR_DESCRIPTION
 from teleop_eval.core.segment import NEVER_NS
 from teleop_eval.core.settings import ThresholdSettings
 

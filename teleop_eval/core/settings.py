@@ -267,16 +267,18 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
         hint = f'did you mean {near!r}?' if near else 'correct it.'
         raise ConfigError(f'{where}: {key}.active_mapping.fixed is {shown(fixed)}, which is not '
                           f'among the mappings {listed(arm.mappings)}; {hint}')
+    if fault := arm.operator.fault(f'{key}.operator'):
+        raise ConfigError(f'{where}: {fault}')
     for label, mapping in arm.mappings.items():
         if fault := checked_fault(mapping, f'{key}.mappings.{label}'):
             raise ConfigError(f'{where}: {fault}')
+        if fault := arm.operator.lacks(mapping.kind, getattr(mapping, 'input', ''), key):
+            raise ConfigError(f'{where}: {key}.mappings.{label} {fault}')
     for field, topic in _topics(key, arm):
         if topic and not _TOPIC.fullmatch(topic):
             raise ConfigError(f'{where}: {field} is {shown(topic)}, which is no topic name: '
                               'between slashes it may hold letters, digits and _, and must not '
                               'begin with a digit.')
-    if fault := arm.operator.fault(f'{key}.operator'):
-        raise ConfigError(f'{where}: {fault}')
 
 
 def _topics(key: str, arm: ArmSettings) -> list[tuple[str, str | None]]:

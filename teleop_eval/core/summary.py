@@ -10,7 +10,14 @@ from typing import Any
 from teleop_eval.core.accumulator import MappingAccumulator
 from teleop_eval.core.advice import little_agreement, what_first
 from teleop_eval.core.arm import ArmEvaluator
-from teleop_eval.core.arm_setup import UNKNOWN_UNIT, has_input, lacks_operator_arm
+from teleop_eval.core.arm_setup import (
+    UNKNOWN_UNIT,
+    has_input,
+    lacks_operator_arm,
+    no_mapping,
+    sampled_topics,
+    undescribed,
+)
 from teleop_eval.core.budget_summary import ONLY_VELOCITIES, budget_metrics
 from teleop_eval.core.geometry import NO_ROBOT
 from teleop_eval.core.mappings.base import HAND, OPERATOR_JOINTS, RATE_INPUT
@@ -228,8 +235,8 @@ def _engagement(arm: ArmEvaluator, accumulator: MappingAccumulator) -> dict[str,
 def _why_no_ideal(arm: ArmEvaluator, measured: ArmMeasurement, label: str) -> str:
     """Return why there is no ideal command under a mapping, '' if there is one."""
     if label not in arm.arm.mappings:
-        listed = ', '.join(arm.arm.mappings) or 'none'
-        return f'mapping {label!r} is not configured (configured: {listed})'
+        return no_mapping(arm.arm) or (
+            f'mapping {label!r} is not configured (configured: {", ".join(arm.arm.mappings)})')
     if arm.robot is None:
         return NO_ROBOT
     if arm.arm.mappings[label].kind == UNMODELLED:
@@ -320,6 +327,12 @@ def _inputs(arm: ArmEvaluator, *, simulated_time: bool) -> dict[str, Any]:
     for role, state in arm.states.items():
         found[role] = {'topic': state.topic, 'messages': state.counts.messages,
                        'late': state.counts.late}
+    # What nothing can be made of, such as joints of a robot that is not described.
+    for role, topic in sampled_topics(arm.arm).items():
+        if role not in found:
+            found[role] = {'topic': topic, 'messages': arm.unused[role]}
+    for role, topic in undescribed(arm.arm, arm.described).items():
+        found[role] = {'topic': topic, 'messages': 0}
     return found
 
 

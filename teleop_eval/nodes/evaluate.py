@@ -46,7 +46,8 @@ exit status
   0  ended by Ctrl-C or SIGTERM with complete files. Problems of the data (an absent topic, NaN,
      clocks that are not synchronised, ...) are printed and stand in summary.json under
      "problems"
-  1  wrong parameters, nothing could be evaluated, or a result could not be written
+  1  wrong parameters, nothing could be evaluated (no metric has a value under any mapping), or
+     a result could not be written
   2  usage
 """
 
@@ -65,7 +66,7 @@ def main(argv: Sequence[str] | None = None, *, parts: Parts | None = None) -> in
     Returns
     -------
     int
-        0 when the session's files are complete; 1 when no measured sample came.
+        0 when the session's files are complete; 1 when no metric has a value.
 
     Raises
     ------

@@ -186,14 +186,13 @@ class EvaluatorNode(Node):
         windows = self.session.add(batch.messages)
         session, self.session = self.session, None
         self._keep(session, self._lines(session))
-        nothing = session.nothing(self._measured)
         last, whole = session.finish(
             lambda summary: add_losses(summary, self.inputs, self._routes),
-            problems=[*self.inputs.problems_so_far(), *filter(None, [nothing])],
+            measured=self._measured, problems=self.inputs.problems_so_far(),
             explained=self.inputs.unusable())
         # One session that was evaluated makes the run worth its while.
-        self._evaluated = self._evaluated or not nothing
-        self.nothing = '' if self._evaluated else nothing
+        self._evaluated = self._evaluated or not session.unevaluated
+        self.nothing = '' if self._evaluated else session.unevaluated
         self._publish([*windows, *last])
         self.outputs.summary(summary_text(session, self.settings, self.inputs, self._routes,
                                           whole=whole))

@@ -16,6 +16,7 @@ from typing import Any, Protocol
 
 from teleop_eval.core.errors import InputError, OutputError, TeleopEvalError
 from teleop_eval.core.evaluator import SessionEvaluator
+from teleop_eval.core.outcome import unevaluated
 from teleop_eval.core.results import StatusLine, WindowResult
 from teleop_eval.core.samples import Sample
 from teleop_eval.sinks import messages
@@ -84,6 +85,7 @@ class LiveSession:
         self.messages = 0
         self.problems: list[str] = []
         self.write_problem = ''
+        self.unevaluated = ''
         self.first_ns: int | None = None
         self.last_ns: int | None = None
         self._event_topic = event_topic
@@ -151,15 +153,17 @@ class LiveSession:
             self.write_problem = ''
 
     def finish(self, complete: Callable[[dict[str, Any]], None], *,
-               problems: Sequence[str] = (),
+               measured: Collection[str] = (), problems: Sequence[str] = (),
                explained: Collection[str] = ()) -> tuple[list[WindowResult], dict[str, Any]]:
         """
-        Finish evaluator and files.
+        Finish evaluator and files; `unevaluated` then says why there is no number, if so.
 
         Parameters
         ----------
         complete
             Puts into the evaluator's summary what only the caller knows.
+        measured
+            Topics that carry what is measured.
         problems
             Sentences for the summary.
         explained
@@ -179,11 +183,14 @@ class LiveSession:
         summary = self.evaluator.finish(explained=refused | set(explained))
         last = self._windows()
         complete(summary)
+        self.unevaluated = (
+            self.nothing(measured) if measured else '') or unevaluated(summary)
         whole: dict[str, Any]
         try:
             whole = self.folder.finish(
                 summary, start_ns=self.first_ns, end_ns=self.last_ns,
-                notes=(), problems=[*self.problems, *self.malformed_sentences(), *problems])
+                notes=(), problems=[*self.problems, *self.malformed_sentences(), *problems,
+                                      *filter(None, [self.unevaluated])])
         except OutputError as error:
             self._failed(error)
             whole = summary

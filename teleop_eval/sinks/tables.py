@@ -19,6 +19,7 @@ from rich.console import Console, Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
+from teleop_eval.core.outcome import why_unevaluated
 from teleop_eval.sinks.budget_table import advice, budget_tables
 from teleop_eval.sinks.wording import (
     LONGEST_SENTENCE,
@@ -143,7 +144,8 @@ def _arm(arm: str, of_arm: Mapping[str, Any],
         heading.append(f'; arm length: {", ".join(lengths)}', style='not bold')
     mappings = as_mapping(of_arm.get('mappings'))
     if not mappings:
-        return [heading, Text(_why_nothing(of_arm))]
+        return [heading, Text(clean(
+            f'Nothing was evaluated: {why_unevaluated(of_arm)}.', LONGEST_SENTENCE))]
     parts: list[RenderableType] = [heading]
     remarks = Remarks()
     labels = list(mappings)
@@ -188,26 +190,6 @@ def _candidates(of_arm: Mapping[str, Any]) -> list[RenderableType]:
                      + clean(str(one['why_not']), LONGEST_SENTENCE))
               for label, one in candidates.items() if one.get('why_not')]
     return parts
-
-
-def _why_nothing(of_arm: Mapping[str, Any]) -> str:
-    """Return why an arm has no metrics under any mapping."""
-    if as_mapping(of_arm.get('time_base')).get('base'):
-        return 'No mapping was active while the arm was evaluated.'
-    inputs = [as_mapping(one) for one in as_mapping(of_arm.get('inputs')).values()]
-    silent = [clean(str(one.get('topic'))) for one in inputs if not one.get('messages')]
-    if not silent:
-        return 'Nothing was evaluated: too few usable messages came.'
-    return f'Nothing was evaluated: no message came on {", ".join(silent)}.'
-
-
-def _orientation(said: str, remarks: Remarks) -> Text:
-    """Return in a word whether the tool's orientation is predicted, and mark why not."""
-    words = re.split(r'[:,]', said, maxsplit=1)[0]
-    if not said:
-        return Text(NO_ENTRY)
-    return Text(clean(words)) if words == said else Text(
-        f'{clean(words)} {remarks.mark(clean(said, LONGEST_SENTENCE))}', style='yellow')
 
 
 def _nowhere(metrics: Any, name: str) -> bool:

@@ -150,6 +150,38 @@ def test_absent_topic_is_named_and_the_rest_evaluated(tmp_path):
     assert summary['arms']['right']['inputs']['robot_joints']['messages'] == 1500
 
 
+@pytest.mark.parametrize(('old', 'new', 'words'), [
+    ('fixed: direct', 'topic: mapping',
+     'no mapping was active while the arm was evaluated; no message came on mapping; '),
+    ('tip_link: tool', 'tip_link: tol', 'this arm has no usable robot description; '),
+    ('joints_topic: joint_states', 'joints_topic: joint_sates',
+     'no message came on joint_sates (robot_joints)')])
+def test_no_number_under_any_mapping_is_status_1(made, tmp_path, old, new, words):
+    config = tmp_path / 'c.yaml'
+    assert old in synthetic.CONFIG
+    config.write_text(synthetic.CONFIG.replace(old, new), encoding='utf-8')
+    status, out, err = run(made.path, '--config', config, '--out', tmp_path / 'out',
+                           '--no-progress', cwd=tmp_path)
+    assert status == 1, err
+    [why] = [line for line in err.splitlines() if 'Nothing was evaluated: ' in line]
+    assert why.startswith(f'teleop_eval summarize: Nothing was evaluated: {words}'), why
+    assert why.endswith('; correct that and evaluate again.')
+    summary = json.loads((tmp_path / 'out' / 'summary.json').read_text('utf-8'))
+    assert why.removeprefix('teleop_eval summarize: ') in summary['problems']
+    assert 'Results: ' in out
+
+
+def test_a_robot_never_described_hides_no_silent_topic(tmp_path):
+    made = synthetic.make(tmp_path, seconds=15.0, leave_out=['/robot_description',
+                                                             '/joint_states'])
+    status, out, err = run(made.path, '--config', made.config, '--no-progress', cwd=tmp_path)
+    assert status == 1
+    assert 'no message came on joint_states, robot_description; correct that' in err
+    summary = json.loads((tmp_path / 'recording_summary' / 'summary.json').read_text('utf-8'))
+    assert summary['arms']['right']['inputs']['robot_joints'] == {
+        'topic': 'joint_states', 'messages': 0}
+
+
 def test_truncated_recording_is_evaluated_as_far_as_it_goes(made, tmp_path):
     [file] = made.path.glob('*.mcap')
     data = file.read_bytes()

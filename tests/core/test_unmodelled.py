@@ -90,6 +90,32 @@ def test_a_command_topic_tells_the_robots_part():
         f'; nothing is known of mapping, processing delay, command: {WHY}.')
 
 
+@pytest.mark.parametrize(('command', 'hand', 'why'), [
+    (True, False, 'no mapping is configured, so only command against robot is judged'),
+    (True, True, 'no mapping is configured, so there is no ideal command'),
+    (False, False, 'no mapping is configured, so there is no ideal command')])
+def test_an_arm_without_any_mapping_says_so(command, hand, why):
+    motion = syn.wander(7)
+    made = syn.session(30.0, motion=motion, delay=ROBOT_S)
+    more = {} if hand else dict.fromkeys(
+        ('operator__hand_topic', 'operator__shoulder_m', 'operator__arm_length_m'))
+    if command:
+        t = syn.clock(0.0, 30.0, 100.0, phase=0.5)
+        made.joints('/command', t, syn.joints_for(motion(t)))
+        more['command__topic'] = '/command'
+    one = syn.evaluator(syn.arm_parameters(**more))
+    syn.feed(one, made.messages())
+    summary = syn.closed(one)
+    found = syn.metrics(summary, 'unmodelled')
+    assert (found['tracking_error_rms_norm']['status'],
+            found['tracking_error_rms_norm']['reason']) == ('not_configured', why)
+    advice = summary['arms']['right']['mappings']['unmodelled']['advice']
+    begin = 'fix first the time the robot takes to follow' if command else (
+        'cannot say what to fix first')
+    assert advice.startswith(f'unmodelled: {begin}') and advice.endswith(f'{why}.')
+    assert 'nothing is known of' not in advice and 'configured:' not in advice
+
+
 def test_without_a_command_topic_nothing_can_be_advised():
     _, _, summary = vendor(command=False)
     assert summary['arms']['right']['mappings']['vendor']['advice'] == (

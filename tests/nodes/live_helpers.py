@@ -137,7 +137,9 @@ class FakeEvaluator:
     def summary(self) -> dict[str, Any]:
         inputs = {route.role: {'topic': topic, 'messages': sum(t == topic for _, t, _ in self.fed)}
                   for topic, routes in self.routes.items() for route in routes}
-        return {'arms': {'right': {'inputs': inputs, 'mappings': {}}}}
+        samples = Metric(float(len(self.fed)), '1').to_dict()
+        mappings = {'direct': {'metrics': {'samples': samples}}} if self.fed else {}
+        return {'arms': {'right': {'inputs': inputs, 'mappings': mappings}}}
 
     def finish(self, *, explained: Any = ()) -> dict[str, Any]:
         return self.summary()

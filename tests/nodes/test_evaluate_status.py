@@ -9,10 +9,11 @@ import os
 import signal
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import pytest
-from live_helpers import PATIENCE_S, ros, wait_until, write_settings
+from live_helpers import PATIENCE_S, SETTINGS_YAML, ros, wait_until, write_settings
 from rclpy.duration import Duration
 from rclpy.node import Node
 from sensor_msgs.msg import JointState
@@ -49,6 +50,17 @@ from teleop_eval.cli.main import main
 sys.exit(main(['evaluate', *sys.argv[3:]]))
 """
 SAMPLE = JointState(name=['j1', 'j2'], position=[0.1, 0.2])
+# Command against robot needs no operator and no mapping.
+HALF_CHAIN = """\
+/**:
+  ros__parameters:
+    session: {{directory: {directory}}}
+    time: {{settling_s: 0.0}}
+    arms:
+      right:
+        robot: {{joints_topic: robot_joints, joint_names: [j1, j2]}}
+        command: {{topic: robot_joints}}
+"""
 CUT = b'\x00\x01\x00\x00\x01\x00'
 
 
@@ -56,8 +68,8 @@ class Run:
     """One run of the command beside a publisher of robot joints."""
 
     def __init__(self, domain: int, folder: Path, messages: list[object],
-                 refuse: tuple[int, str] = (0, '')) -> None:
-        settings = write_settings(folder)
+                 refuse: tuple[int, str] = (0, ''), text: str = SETTINGS_YAML) -> None:
+        settings = write_settings(folder, text)
         process = subprocess.Popen(
             [sys.executable, '-u', '-c', COMMAND, str(refuse[0]), refuse[1], '--ros-args',
              '--params-file', str(settings), '-p', 'session.name:=s'],
@@ -76,6 +88,7 @@ class Run:
                 wait_until(joints.get_subscription_count)
                 for message in messages:
                     joints.publish(message)
+                    time.sleep(0.01)
                 assert joints.wait_for_all_acked(Duration(seconds=PATIENCE_S))
                 stack.destroy_node()
             process.send_signal(signal.SIGINT)
@@ -109,10 +122,10 @@ def test_a_write_that_fails_for_good_is_status_1(domain: int, tmp_path: Path) ->
 
 
 def test_problems_of_the_data_are_said_and_are_status_0(domain: int, tmp_path: Path) -> None:
-    done = Run(domain, tmp_path, [SAMPLE] * 20 + [CUT] + [SAMPLE] * 20)
+    done = Run(domain, tmp_path, [SAMPLE] * 50 + [CUT] + [SAMPLE] * 50, text=HALF_CHAIN)
     assert done.status == 0, done.errors
     [refused] = [text for text in done.problems if 'cannot be decoded' in text]
-    assert refused.startswith('1 of 41 messages on /robot_joints cannot be decoded and is left '
+    assert refused.startswith('1 of 101 messages on /robot_joints cannot be decoded and is left '
                               'out; it came ')
     # Said at the end as well: by then, what was logged on the way is far up.
     assert done.sentences == done.problems
@@ -129,6 +142,17 @@ def test_nothing_evaluated_is_status_1(
     assert [text for text in done.sentences if words in text] == [
         text for text in done.problems if text.startswith('Nothing was evaluated: ')] != []
     assert (done.folder / 'metrics.csv').is_file()
+
+
+def test_no_number_under_any_mapping_is_status_1(domain: int, tmp_path: Path) -> None:
+    """The same sound stream as above, but the topic that tells the mapping is silent."""
+    silent = f'{HALF_CHAIN}        active_mapping: {{{{topic: mapping}}}}\n'
+    done = Run(domain, tmp_path, [SAMPLE] * 100, text=silent)
+    assert done.status == 1, done.errors
+    assert done.sentences == done.problems
+    [why] = [text for text in done.problems if text.startswith('Nothing was evaluated: ')]
+    assert why == ('Nothing was evaluated: no mapping was active while the arm was evaluated; no '
+                   'message came on mapping; correct that and evaluate again.')
 
 
 def test_help_says_the_statuses(capsys: pytest.CaptureFixture[str]) -> None:

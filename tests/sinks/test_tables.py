@@ -185,12 +185,11 @@ def test_an_incomplete_summary_is_shown_as_far_as_it_goes(document):
 
 def test_a_pipe_gets_plain_text_of_80_columns():
     stream = io.StringIO()
-    print_summary(summary(mirror={'latency_s': metric(0.1, reason='distrust it')}),
+    print_summary(summary(mirror={'latency_s': metric(0.1, reason=REASON * 2)}),
                   console=Console(file=stream, width=200, force_terminal=False))
     assert '\x1b' not in stream.getvalue()
     lines = stream.getvalue().splitlines()
     assert max(map(len, lines)) <= 80
-    assert '(1) distrust it' in lines
     assert [line for line in lines if line != line.rstrip()] == []
 
 
@@ -211,8 +210,12 @@ def test_long_text_is_cut_and_says_so():
 @pytest.mark.parametrize('base, inputs, sentence', [
     (None, {'hand': 0, 'robot_joints': 0, 'command': 4},
      'Nothing was evaluated: no message came on /hand, /robot_joints.'),
+    (None, {'hand': 3, 'robot_joints': 0, 'command': 0, 'description': 0},
+     'Nothing was evaluated: no message came on /robot_joints, /command, /description.'),
     (None, {'hand': 1, 'robot_joints': 1}, 'Nothing was evaluated: too few usable messages'),
-    ('stamp', {'hand': 9, 'active_mapping': 0}, 'No mapping was active'),
+    ('stamp', {'hand': 9, 'active_mapping': 0},
+     'Nothing was evaluated: no mapping was active while the arm was evaluated; no message '
+     'came on /active_mapping.'),
 ])
 def test_arm_without_metrics_says_why(base, inputs, sentence):
     document = summary()
@@ -220,4 +223,4 @@ def test_arm_without_metrics_says_why(base, inputs, sentence):
         'time_base': {'base': base},
         'inputs': {role: {'topic': f'/{role}', 'messages': messages}
                    for role, messages in inputs.items()}}
-    assert sentence in text(document)
+    assert sentence in ' '.join(text(document).split())

@@ -9,6 +9,7 @@ from typing import ClassVar
 from teleop_eval.core.mappings.base import MappingModel
 
 UNMODELLED = 'unmodelled'
+NO_MAPPING = 'no mapping is configured'
 NOT_MODELLED = "the stack's mapping is not modelled"
 
 
