@@ -192,6 +192,15 @@ def _candidates(of_arm: Mapping[str, Any]) -> list[RenderableType]:
     return parts
 
 
+def _orientation(said: str, remarks: Remarks) -> Text:
+    """Return in a word whether the tool's orientation is predicted, and mark why not."""
+    words = re.split(r'[:,]', said, maxsplit=1)[0]
+    if not said:
+        return Text(NO_ENTRY)
+    return Text(clean(words)) if words == said else Text(
+        f'{clean(words)} {remarks.mark(clean(said, LONGEST_SENTENCE))}', style='yellow')
+
+
 def _nowhere(metrics: Any, name: str) -> bool:
     """Tell whether a metric says nothing under any mapping: no row for it, but a sentence."""
     found = {as_mapping(of.get(name)).get('status', 'not_configured') for of in metrics}
