@@ -358,3 +358,26 @@ def test_what_cannot_be_asked_is_refused() -> None:
     fixed = SerialChain.from_description(chain.description, 'l2', 'tip')
     with pytest.raises(ValueError, match='without moving joints'):
         solver(fixed)
+
+
+def test_after_an_interruption_the_branch_of_the_last_posture_is_kept() -> None:
+    # The rest lies on the other branch; only the last posture tells which one was followed.
+    path = solver(two_links(), rest=elbow(0.35, 0.0, -1.0), pull=0.0)
+    path.solve(arc(0.4, np.linspace(0.0, 0.3, 20)))
+    path.rest[:] = path._rest[:] = elbow(0.35, 0.0, 1.0)
+    path.interrupt()
+    result = path.solve(arc(0.38, np.array([0.5, 0.51])))
+    assert_array_equal(result.jumped, [True, False])
+    assert np.all(result.joints[:, 1] < 0.0)
+    path.restart()
+    assert np.all(path.solve(arc(0.38, np.array([0.5]))).joints[:, 1] > 0.0)
+
+
+def test_joints_are_searched_at_the_whole_turn_nearest_to_the_robot() -> None:
+    chain = arm(('revolute', Z, '0 0 0', -9.0, 9.0), ('revolute', Z, f'{L1} 0 0', -9.0, 9.0),
+                tool=f'{L2} 0 0')
+    for turns in ((-1, 0), (0, -1), (0, 0)):
+        start = np.array(elbow(0.3, 0.2, 1.0)) + TURN * np.array(turns)
+        result = solver(chain, rest=start).solve([[-0.05, 0.35, 0.0]])
+        expected = np.array(elbow(-0.05, 0.35, 1.0)) + TURN * np.array(turns)
+        assert_allclose(result.joints[0], expected, atol=1e-5)
