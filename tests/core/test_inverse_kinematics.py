@@ -381,3 +381,10 @@ def test_joints_are_searched_at_the_whole_turn_nearest_to_the_robot() -> None:
         result = solver(chain, rest=start).solve([[-0.05, 0.35, 0.0]])
         expected = np.array(elbow(-0.05, 0.35, 1.0)) + TURN * np.array(turns)
         assert_allclose(result.joints[0], expected, atol=1e-5)
+
+
+def test_whole_turns_are_taken_as_the_limits_let_them() -> None:
+    chain = arm(('revolute', Z, '0 0 0', -9.0, 9.0), ('revolute', Z, f'{L1} 0 0', -3.0, 4.0),
+                ('prismatic', '1 0 0', f'{L2} 0 0', -9.0, 9.0), tool='0 0 0')
+    found = solver(chain)._unwound(np.array([[1.0, 2.0, 1.0]]), np.array([-6.0, -5.0, 8.0]))
+    assert_allclose(found, [[1.0 - TURN, 2.0, 1.0]])
