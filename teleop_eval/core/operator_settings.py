@@ -89,25 +89,6 @@ class OperatorSettings:
             return 'hand'
         return 'operator_joints' if self.described and self.joints_topic else ''
 
-    def lacks(self, kind: str, rate_input: str, key: str) -> str:
-        """
-        Return what a mapping of this package cannot do without, '' if all is there.
-
-        `rate_input` is the parameter `input` of a rate mapping, `key` the arm's dotted name. The
-        words follow the mapping's name.
-        """
-        if kind == 'joint_space' and not self.joints_topic:
-            return (f'is of the kind joint_space, but {key}.operator.joints_topic is missing; '
-                    "name the JointState topic of the operator's arm.")
-        if kind == 'rate' and rate_input == 'topic' and not self.rate_topic:
-            return (f'is of the kind rate, but {key}.operator.rate_topic is missing; name the '
-                    'topic that sets the velocity, or set input: displacement.')
-        if (kind in ('task_space', 'relative') or (kind == 'rate' and rate_input != 'topic')) and (
-                not self.hand_role):
-            return (f'is of the kind {kind} and follows the hand, but {key}.operator has no '
-                    'hand_topic; give it, or joints_topic with a description of the operator.')
-        return ''
-
     def fault(self, key: str) -> str:
         """Return one sentence on what no parameter alone can show to be wrong, else ''."""
         return (self._double(key) or self._description_fault(key) or self._calibration_fault(key)

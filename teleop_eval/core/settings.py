@@ -272,8 +272,6 @@ def _check_arm(key: str, arm: ArmSettings, where: str) -> None:
     for label, mapping in arm.mappings.items():
         if fault := checked_fault(mapping, f'{key}.mappings.{label}'):
             raise ConfigError(f'{where}: {fault}')
-        if fault := arm.operator.lacks(mapping.kind, getattr(mapping, 'input', ''), key):
-            raise ConfigError(f'{where}: {key}.mappings.{label} {fault}')
     for field, topic in _topics(key, arm):
         if topic and not _TOPIC.fullmatch(topic):
             raise ConfigError(f'{where}: {field} is {shown(topic)}, which is no topic name: '

@@ -130,22 +130,6 @@ TRAPS = {
             '            operator_center_m: [0.0, 0.0, 0.0]\n'),
         ('arms.right.mappings.direct.operator_center_m is a parameter of the kind task_space',
          'arms.right.mappings.direct is of the kind joint_space', 'remove it or change the kind')),
-    'mapping without a hand': (
-        put('          hand_topic: /right/hand\n', ''),
-        ('arms.right.mappings.reach is of the kind task_space and follows the hand',
-         'arms.right.operator has no hand_topic', 'give it, or joints_topic with a description')),
-    'relative mapping without a hand': (
-        put('          hand_topic: /right/hand\n', '').replace('task_space', 'relative', 1),
-        ('arms.right.mappings.reach is of the kind relative and follows the hand',)),
-    'mapping without operator joints': (
-        put('          joints_topic: /right/operator\n', ''),
-        ('arms.right.mappings.direct is of the kind joint_space',
-         'arms.right.operator.joints_topic is missing', 'name the JointState')),
-    'mapping without a stick': (
-        put('            kind: task_space\n            scaling: metric\n            scale: 1.0\n',
-            '            kind: rate\n'),
-        ('arms.right.mappings.reach is of the kind rate',
-         'arms.right.operator.rate_topic is missing', 'or set input: displacement')),
     'misspelt parameter of a kind': (
         put('scaling: metric', 'scalng: metric'),
         ('there is no parameter arms.right.mappings.reach.scalng',

@@ -291,7 +291,7 @@ def test_a_level_of_the_margin_ends_with_the_engagement():
         made = syn.Feed().joints('/joints', t, q).flag(0.0, '/engaged', True)
         if open_s is not None:
             made.flag(open_s, '/engaged', False).flag(11.0, '/engaged', True)
-        target = fed(syn.Feed(), engaged__topic='/engaged')
+        target = fed(syn.Feed(), operator__hand_topic=None, engaged__topic='/engaged')
         for message in made.messages():
             target.add(*message)
         assert asked(target, 17.0)['workspace'].level == level
@@ -349,7 +349,7 @@ def test_margin_says_what_holds_its_level(margin, level, words):
     share = np.interp(t, [0.0, 7.9, 8.0, 9.0, 9.95], [0.3, 0.04, 0.04, margin + 0.01, margin])
     q = np.zeros((len(t), 6))
     q[:, 2] = syn.REACH_M - share * (syn.REACH_M - 0.05)
-    often, once = (fed(syn.Feed()) for _ in range(2))
+    often, once = (fed(syn.Feed(), operator__hand_topic=None) for _ in range(2))
     said = {}
     for message in syn.Feed().joints('/joints', t, q).messages():
         often.add(*message)

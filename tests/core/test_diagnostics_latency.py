@@ -132,7 +132,6 @@ def test_without_an_ideal_command_the_line_follows_command_to_robot(why):
         parameters = {'operator__hand_topic': None}
     elif why == 'mapping without its input':
         parameters['mappings__direct__kind'] = 'joint_space'
-        parameters['operator__joints_topic'] = '/operator'
         for name in syn.JOINTS:
             parameters[f'mappings__direct__joints__{name}__source'] = f'o_{name}'
     line = line_of(made, **parameters)

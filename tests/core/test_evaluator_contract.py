@@ -85,9 +85,6 @@ def parameters_of(chosen):
     """Return flat parameters of a configuration."""
     kinds = {'none': [], 'both': ['task_space', 'joint_space']}.get(
         chosen['kind'], [chosen['kind']])
-    # A mapping whose input has no topic is refused at once.
-    inputs = {'task_space': chosen['hand'], 'joint_space': chosen['operator']}
-    kinds = [kind for kind in kinds if inputs[kind] != 'none']
     more = {
         'operator__hand_topic': None if chosen['hand'] == 'none' else '/hand',
         'operator__joints_topic': None if chosen['operator'] == 'none' else '/operator',

@@ -94,16 +94,16 @@ def test_joint_space_mapping_with_a_lift():
 
 def test_without_operator_joints_nothing_is_guessed():
     made, _ = joint_session(20.0)
-    made._messages = [one for one in made._messages if one[3] != '/operator']
-    target = syn.evaluator(syn.arm_parameters(**joint_mapping(), command__topic='/command'))
+    parameters = {**joint_mapping(), 'operator__joints_topic': None}
+    target = syn.evaluator(syn.arm_parameters(**parameters, command__topic='/command'))
     windows = syn.feed(target, made.messages())
     found = syn.metrics(syn.closed(target))
     for name in ('latency_s', 'latency_command_s', 'tracking_error_rms_norm',
-                 'workspace_overlap'):
-        assert found[name]['value'] is None
-        assert 'no message came on /operator' in found[name]['reason']
+                 'orientation_error_rms_rad', 'workspace_overlap'):
+        assert found[name]['status'] == 'not_configured'
+        assert 'operator.joints_topic' in found[name]['reason']
     assert found['latency_response_s']['value'] == pytest.approx(0.12, abs=1e-3)
-    assert windows[-1].metrics['latency_s'].value is None
+    assert windows[-1].metrics['latency_s'].status == 'not_configured'
 
 
 def test_gap_in_the_operators_joints():

@@ -190,8 +190,11 @@ def test_twists_of_another_frame_are_told() -> None:
 
 
 def test_a_rate_mapping_without_its_topic_says_so() -> None:
-    with pytest.raises(ConfigError, match='direct is of the kind rate, but .*rate_topic is miss'):
-        from_parameters(arm_parameters(**{**RATE, 'operator__rate_topic': None}))
+    one = evaluator(arm_parameters(**{**RATE, 'operator__rate_topic': None}))
+    feed(one, driven()[0].messages())
+    found = metrics(closed(one))['tracking_error_rms_norm_s']
+    assert (found['status'], found['reason']) == (
+        'not_configured', "mapping 'direct' needs operator.rate_topic")
 
 
 @pytest.mark.parametrize(('axes', 'words'), [
