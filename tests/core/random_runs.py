@@ -239,6 +239,10 @@ JOINTS = 'quick', 'mixed', 'slow'
 class KnownDelays:
     """Stands in for the estimates of a run: the delays in use are known and do not change."""
 
+    def has(self, name):
+        """Tell that every track of the chain is there."""
+        return name in ('u_o', 'u_i', 'u_c', 'u_r')
+
     def in_use(self, now_ns, label, names=()):
         """Return the sum of the named stages."""
         cells = {'latency_command_s': COMMAND_CELLS, 'latency_response_s': RESPONSE_CELLS}
