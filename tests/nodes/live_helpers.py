@@ -45,6 +45,18 @@ SETTINGS_YAML = """\
           topic: mapping
 """
 
+# Command against robot needs no operator and no mapping.
+HALF_CHAIN = """\
+/**:
+  ros__parameters:
+    session: {{directory: {directory}, record_inputs: true}}
+    time: {{settling_s: 0.0}}
+    arms:
+      right:
+        robot: {{joints_topic: robot_joints, joint_names: [j1, j2]}}
+        command: {{topic: robot_joints}}
+"""
+
 
 def write_settings(folder: Path, text: str = SETTINGS_YAML) -> Path:
     """Write a parameter file whose sessions go below the folder."""

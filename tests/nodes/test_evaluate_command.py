@@ -9,11 +9,12 @@ import os
 import signal
 import subprocess
 import sys
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
-from live_helpers import PATIENCE_S, ros, wait_until, write_settings
+from live_helpers import HALF_CHAIN, PATIENCE_S, ros, wait_until, write_settings
 from mcap.reader import make_reader
 from rclpy.duration import Duration
 from rclpy.node import Node
@@ -37,7 +38,7 @@ def heed_hangup() -> None:
 
 @pytest.fixture
 def started(domain: int, tmp_path: Path) -> Iterator[subprocess.Popen[str]]:
-    settings = write_settings(tmp_path)
+    settings = write_settings(tmp_path, HALF_CHAIN)
     process = subprocess.Popen(
         [*COMMAND, '--ros-args', '--params-file', str(settings), '-p', 'session.name:=s'],
         env=environment(), stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
@@ -50,9 +51,10 @@ def started(domain: int, tmp_path: Path) -> Iterator[subprocess.Popen[str]]:
             if '/robot_joints: found' in line:
                 break
         wait_until(joints.get_subscription_count)
-        # Without any sample there is nothing to finish.
-        for _ in range(20):
+        # Without any number there is nothing to finish.
+        for _ in range(100):
             joints.publish(JointState(name=['j1', 'j2'], position=[0.0, 0.0]))
+            time.sleep(0.01)
         assert joints.wait_for_all_acked(Duration(seconds=PATIENCE_S))
         stack.destroy_node()
     yield process

@@ -13,7 +13,14 @@ import time
 from pathlib import Path
 
 import pytest
-from live_helpers import PATIENCE_S, SETTINGS_YAML, ros, wait_until, write_settings
+from live_helpers import (
+    HALF_CHAIN,
+    PATIENCE_S,
+    SETTINGS_YAML,
+    ros,
+    wait_until,
+    write_settings,
+)
 from rclpy.duration import Duration
 from rclpy.node import Node
 from sensor_msgs.msg import JointState
@@ -50,17 +57,6 @@ from teleop_eval.cli.main import main
 sys.exit(main(['evaluate', *sys.argv[3:]]))
 """
 SAMPLE = JointState(name=['j1', 'j2'], position=[0.1, 0.2])
-# Command against robot needs no operator and no mapping.
-HALF_CHAIN = """\
-/**:
-  ros__parameters:
-    session: {{directory: {directory}}}
-    time: {{settling_s: 0.0}}
-    arms:
-      right:
-        robot: {{joints_topic: robot_joints, joint_names: [j1, j2]}}
-        command: {{topic: robot_joints}}
-"""
 CUT = b'\x00\x01\x00\x00\x01\x00'
 
 
