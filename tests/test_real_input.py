@@ -46,12 +46,12 @@ def config(folder: Path, joints: list[str], *, enabled: bool = False,
     return path
 
 
-def summarize(recording: Path, parameters: Path, out: Path) -> dict:
+def summarize(recording: Path, parameters: Path, out: Path, *, expected: int = 0) -> dict:
     """Run the command as a user does and return the summary."""
     status = main(['summarize', str(recording), '--config', str(parameters), '--out', str(out),
                    '--no-progress'])
-    # Problems of the data are no failure: they are said.
-    assert status == 0
+    # Problems of the data are no failure unless nothing is left to evaluate: they are said.
+    assert status == expected
     summary: dict = json.loads((out / 'summary.json').read_text())
     return summary
 
@@ -258,7 +258,8 @@ def gap_limit(stamps_ns: np.ndarray, period_s: float) -> float:
 def test_long_run_at_20_hz_counts_its_gaps(real_recordings: Path, tmp_path: Path):
     """1276 s at 20 Hz with pauses of up to 2.1 s."""
     recording = real_recordings / 'data' / 'torque_ripple_data_0.mcap'
-    summary = summarize(recording, config(tmp_path, ['C1_A']), tmp_path / 'out')
+    # Joints without description and command give counts, but no metric.
+    summary = summarize(recording, config(tmp_path, ['C1_A']), tmp_path / 'out', expected=1)
     robot = summary['arms']['robot']
     stamps = raw_states(recording).stamps_ns
     periods = np.diff(stamps)

@@ -22,7 +22,8 @@ FLAT = {'arms.right.robot.joints_topic': 'j', 'arms.right.robot.joint_names': ['
         'arms.right.mappings.a.kind': 'task_space', 'arms.right.mappings.b.kind': 'relative',
         'arms.right.mappings.c.kind': 'rate', 'arms.right.mappings.c.gain_xyz': [1, 2, 3],
         'arms.right.mappings.d.kind': 'joint_space',
-        'arms.right.mappings.d.joints.j.source': 'k', 'arms.right.mappings.e.kind': 'unmodelled'}
+        'arms.right.mappings.d.joints.j.source': 'k', 'arms.right.mappings.e.kind': 'unmodelled',
+        'arms.right.active_mapping.topic': 'm'}
 
 
 class Overridden(Node):
