@@ -169,3 +169,18 @@ def test_no_number_stands_when_another_mapping_or_none_is_active(label):
         assert before <= set(window.metrics)
         assert window.metrics['tracking_error_rms_norm'].value is None
         assert window.metrics['budget_command_rms_norm'].value is None
+
+
+def test_numbers_of_another_kind_of_mapping_do_not_stand():
+    """A rate mapping is judged by velocities: the position metrics before it go on as NaN."""
+    made = full(30.0).text(0.0, '/mapping', 'direct').text(20.0, '/mapping', 'stick')
+    _, windows, _ = run(
+        made, active_mapping__fixed=None, active_mapping__topic='/mapping',
+        mappings__stick__kind='rate', mappings__stick__input='displacement')
+    before = set().union(*(w.metrics for w in windows if w.end_ns < syn.ns(20.0)))
+    after = [w for w in windows if w.start_ns >= syn.ns(20.0)]
+    assert len(after) >= 4
+    for window in after:
+        assert 'tracking_error_rms_norm_s' in window.metrics
+        assert before <= set(window.metrics)
+        assert window.metrics['tracking_error_rms_norm'].status == 'not_configured'
