@@ -187,10 +187,7 @@ def test_every_requirement_of_the_environment_is_installed(arguments) -> None:
 
 
 def test_every_requirement_is_explained_for_developers(arguments) -> None:
-    path = ROOT / 'DEVELOPERS.md'
-    if not path.is_file():
-        pytest.skip('there is no DEVELOPERS.md yet')
-    text = path.read_text(encoding='utf-8').lower()
+    text = (ROOT / 'DEVELOPERS.md').read_text(encoding='utf-8').lower()
     every = requirement_names(arguments['install_requires']) | requirement_names(
         arguments['extras_require']['test'])
     assert {name for name in every

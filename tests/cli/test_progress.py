@@ -33,7 +33,7 @@ def test_silent_where_no_share_can_be_told_or_none_is_wanted(capsys, total, enab
 
 
 def test_terminal_gets_a_bar_and_markup_is_only_text():
-    pty = pytest.importorskip('pty')
+    pty = pytest.importorskip('pty', reason='needs a pseudo-terminal')
     master, slave = pty.openpty()
     code = ('from teleop_eval.cli.progress import Progress\n'
             'with Progress("Reading [red]x", 4) as progress:\n'

@@ -312,14 +312,15 @@ def test_help_has_an_example_and_the_caution(tmp_path):
     ('~/a', '/cell', '/cell/teleop_eval/a'), ('~/a', '/', '/teleop_eval/a')])
 def test_topic_names_resolve_as_in_ros(topic, namespace, expected):
     assert resolve_topic(topic, namespace) == expected
-    names = pytest.importorskip('rclpy.expand_topic_name')
+    names = pytest.importorskip(
+        'rclpy.expand_topic_name', reason='compares with rclpy, which is not installed')
     assert names.expand_topic_name(topic, 'teleop_eval', namespace) == expected
 
 
 def test_full_disk_is_one_message_and_the_small_files_are_written(made, tmp_path):
     """A limit on the size of a file, here for the bag, stands for the disk that fills up."""
     size = 1_100_000  # the bag reserves a mebibyte at its end while it grows
-    resource = pytest.importorskip('resource')
+    resource = pytest.importorskip('resource', reason='limits of a process are those of Unix')
     process = subprocess.run(
         [sys.executable, '-m', 'teleop_eval', 'summarize', str(made.path), '--config',
          str(made.config), '--no-progress'], cwd=tmp_path, env=ENVIRONMENT, timeout=300,

@@ -122,7 +122,7 @@ def test_the_linkage_follows_a_whole_human_arm() -> None:
 @pytest.mark.parametrize('factor', [1.0, 1.9 / DRAWN_M])
 def test_the_tip_is_where_an_independent_library_has_it(which, factor) -> None:
     """Pinocchio reads the same text; its placements are scaled by its own means."""
-    pinocchio = pytest.importorskip('pinocchio')
+    pinocchio = pytest.importorskip('pinocchio', reason='pin (test extra) is not installed')
     model = pinocchio.buildModelFromXML(text_of(which[0]))
     for place in [*model.jointPlacements, *(frame.placement for frame in model.frames)]:
         place.translation = place.translation * factor

@@ -293,7 +293,9 @@ def from_ros(name):
     """Build the example message of a type with ROS's own classes and serialize it there."""
     import importlib
 
-    serialize = pytest.importorskip('rclpy.serialization').serialize_message
+    serialize = pytest.importorskip(
+        'rclpy.serialization',
+        reason='compares with rclpy, which is not installed').serialize_message
 
     def build(kind, source):
         package, _, short = kind.partition('/msg/')

@@ -8,7 +8,7 @@ import math
 
 import pytest
 
-pytest.importorskip('rclpy')
+pytest.importorskip('rclpy', reason='the demo needs rclpy')
 
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus  # noqa: E402
 from std_msgs.msg import Float64  # noqa: E402
