@@ -29,6 +29,7 @@ _load('synthetic_session')
 _load('mapping_cells')
 _load('synthetic_chain')
 _load('random_runs')
+_load('robot_data')
 
 
 @pytest.fixture(scope='session')

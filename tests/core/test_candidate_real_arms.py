@@ -9,11 +9,11 @@ scripted in joints, so that speeds and manipulability are known without the sear
 
 from __future__ import annotations
 
-import importlib.metadata
 from functools import cache
 
 import numpy as np
 import pytest
+import robot_data
 import synthetic_session as syn
 
 from teleop_eval.core import rotations
@@ -24,12 +24,8 @@ from teleop_eval.core.manipulability import manipulability_norm
 from teleop_eval.core.reach import find_reach, find_shoulder
 from teleop_eval.core.samples import TwistSample
 from teleop_eval.core.settings import from_parameters
-from teleop_eval.core.urdf import parse_urdf
 
-try:
-    FILES = importlib.metadata.files('example-robot-data') or []
-except importlib.metadata.PackageNotFoundError:
-    pytest.skip('example-robot-data (test extra) is not installed', allow_module_level=True)
+robot_data.need()
 
 # file, base, tip, posture driven about: far from the middle of the joint ranges
 ARMS = {
@@ -46,15 +42,12 @@ DELAY, RATE_HZ = 0.1, 50.0
 DEMANDS = ('joint_speed_demand_p95', 'joint_speed_demand_max')
 
 
-@cache
 def text_of(name: str) -> str:
-    found = next(one for one in FILES if str(one).endswith(f'/robots/{ARMS[name][0]}'))
-    return found.locate().read_text(encoding='utf-8')
+    return robot_data.text_of(ARMS[name][0])
 
 
-@cache
 def chain_of(name: str) -> SerialChain:
-    return SerialChain.from_description(parse_urdf(text_of(name)), *ARMS[name][1:3])
+    return robot_data.chain(*ARMS[name][:3])
 
 
 def script(name: str, times: np.ndarray) -> np.ndarray:

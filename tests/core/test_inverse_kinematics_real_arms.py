@@ -8,24 +8,19 @@ The descriptions are those of the package example-robot-data 6.0.0 (a test extra
 
 from __future__ import annotations
 
-import importlib.metadata
 import math
-from functools import cache
 
 import numpy as np
 import pytest
+import robot_data
 from numpy.testing import assert_allclose, assert_array_equal
 from scipy.optimize import minimize
 
 from teleop_eval.core import rotations
 from teleop_eval.core.inverse_kinematics import IkResult, PathSolver, orientation_possible
 from teleop_eval.core.kinematics import SerialChain
-from teleop_eval.core.urdf import parse_urdf
 
-try:
-    FILES = importlib.metadata.files('example-robot-data') or []
-except importlib.metadata.PackageNotFoundError:
-    pytest.skip('example-robot-data (test extra) is not installed', allow_module_level=True)
+robot_data.need()
 
 TURN = 2.0 * math.pi
 # file, base, tip, reach from the shoulder (m) as `find_reach` gives it
@@ -45,16 +40,8 @@ ARMS = {
 }
 
 
-@cache
-def text_of(file: str) -> str:
-    found = next(entry for entry in FILES if str(entry).endswith(f'/robots/{file}'))
-    return found.locate().read_text(encoding='utf-8')
-
-
-@cache
 def chain_of(name: str) -> SerialChain:
-    file, base, tip, _ = ARMS[name]
-    return SerialChain.from_description(parse_urdf(text_of(file), source=file), base, tip)
+    return robot_data.chain(*ARMS[name][:3])
 
 
 def solver(name: str, *, with_orientation: bool | None = None) -> PathSolver:
@@ -82,7 +69,7 @@ def by_pinocchio(name: str, joints: np.ndarray) -> tuple[np.ndarray, np.ndarray]
     """Return tip positions (m, 3) and rotations (m, 3, 3) in base axes."""
     pin = pytest.importorskip('pinocchio', reason='pin (test extra) is not installed')
     file, base, tip, _ = ARMS[name]
-    model = pin.buildModelFromXML(text_of(file), mimic=True)
+    model = pin.buildModelFromXML(robot_data.text_of(file), mimic=True)
     data = model.createData()
     ends = [model.getFrameId(link, pin.FrameType.BODY) for link in (base, tip)]
     positions, turns = [], []

@@ -8,12 +8,11 @@ The descriptions are those of the package example-robot-data 6.0.0 (a test extra
 
 from __future__ import annotations
 
-import importlib.metadata
 import math
-from functools import cache
 
 import numpy as np
 import pytest
+import robot_data
 from numpy.testing import assert_allclose
 from scipy.optimize import differential_evolution, minimize
 
@@ -22,10 +21,7 @@ from teleop_eval.core.manipulability import generic_rank, manipulability_norm
 from teleop_eval.core.reach import find_reach, find_shoulder
 from teleop_eval.core.urdf import parse_urdf
 
-try:
-    FILES = importlib.metadata.files('example-robot-data') or []
-except importlib.metadata.PackageNotFoundError:
-    pytest.skip('example-robot-data (test extra) is not installed', allow_module_level=True)
+robot_data.need()
 
 # file, base, tip, independent variables of the chain
 ARMS = {
@@ -80,16 +76,8 @@ ARMS = {
 }
 
 
-@cache
-def text_of(file: str) -> str:
-    found = next(entry for entry in FILES if str(entry).endswith(f'/robots/{file}'))
-    return found.locate().read_text(encoding='utf-8')
-
-
-@cache
 def chain_of(name: str) -> SerialChain:
-    file, base, tip, _ = ARMS[name]
-    return SerialChain.from_description(parse_urdf(text_of(file), source=file), base, tip)
+    return robot_data.chain(*ARMS[name][:3])
 
 
 def samples(chain: SerialChain, count: int, seed: int) -> np.ndarray:
@@ -103,7 +91,7 @@ class PinocchioChain:
     def __init__(self, file: str, base: str, tip: str, *, mimic: bool = True) -> None:
         self.pin = pytest.importorskip('pinocchio', reason='pin (test extra) is not installed')
         # Without the flag pinocchio lets mimic joints move freely.
-        self.model = self.pin.buildModelFromXML(text_of(file), mimic=mimic)
+        self.model = self.pin.buildModelFromXML(robot_data.text_of(file), mimic=mimic)
         self.data = self.model.createData()
         self.base, self.tip = (
             self.model.getFrameId(link, self.pin.FrameType.BODY) for link in (base, tip)
@@ -217,7 +205,7 @@ def test_ur5_equals_the_table_of_its_maker() -> None:
     d = [0.089159, 0.0, 0.0, 0.10915, 0.09465, 0.0823]
     a = [0.0, -0.425, -0.39225, 0.0, 0.0, 0.0]
     alpha = [math.pi / 2, 0.0, 0.0, math.pi / 2, -math.pi / 2, 0.0]
-    description = parse_urdf(text_of(ARMS['ur5'][0]))
+    description = parse_urdf(robot_data.text_of(ARMS['ur5'][0]))
     chain = SerialChain.from_description(description, 'base', 'tool0')
     q = samples(chain, 50, seed=3)
     pose = chain.forward(q)
@@ -235,7 +223,7 @@ def test_panda_equals_the_table_of_its_maker() -> None:
     d = [0.333, 0.0, 0.316, 0.0, 0.384, 0.0, 0.0, 0.107]
     alpha = [0, -math.pi / 2, math.pi / 2, math.pi / 2, -math.pi / 2, math.pi / 2,
              math.pi / 2, 0]
-    description = parse_urdf(text_of(ARMS['panda'][0]))
+    description = parse_urdf(robot_data.text_of(ARMS['panda'][0]))
     chain = SerialChain.from_description(description, 'panda_link0', 'panda_link8')
     q = samples(chain, 50, seed=4)
     pose = chain.forward(q)
